@@ -1,0 +1,57 @@
+"""One place that decides how numba compiles: cached, without the GIL, NaN-safe fast arithmetic."""
+
+from __future__ import annotations
+
+import os
+import tempfile
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any, TypeVar
+
+import numba
+import numpy as np
+from numpy.typing import NDArray
+
+# Short names for the bare arrays that kernels take.
+F32 = NDArray[np.float32]
+F64 = NDArray[np.float64]
+C64 = NDArray[np.complex64]
+C128 = NDArray[np.complex128]
+I64 = NDArray[np.int64]
+U8 = NDArray[np.uint8]
+
+F = TypeVar("F", bound=Callable[..., Any])
+
+# Reassociation lets loops vectorise; "nnan" and "ninf" are left out so that isnan checks still work.
+FAST_ARITHMETIC = {"nsz", "contract", "arcp", "reassoc"}
+
+
+def _cache_is_writable() -> bool:
+    """numba refuses to import a cached function when it finds no folder to write to: probe first."""
+    chosen = os.environ.get("NUMBA_CACHE_DIR")
+    here = Path(__file__).resolve().parent
+    for folder in [Path(chosen)] if chosen else [here / "__pycache__", here]:
+        try:
+            with tempfile.TemporaryFile(dir=folder):
+                return True
+        except OSError:
+            continue
+    return False
+
+
+_CACHE = _cache_is_writable()
+
+
+def kernel(function: F) -> F:
+    """Compile a hot loop: bare arrays in and out, no objects, no files."""
+    compiled: F = numba.njit(cache=_CACHE, nogil=True, fastmath=FAST_ARITHMETIC)(function)
+    return compiled
+
+
+def comparing_kernel(function: F) -> F:
+    """The same for loops that search a minimum: these vectorise only when NaN is ruled out.
+
+    A NaN among the inputs then yields some index, never a fault: callers see to finite samples.
+    """
+    compiled: F = numba.njit(cache=_CACHE, nogil=True, fastmath=True)(function)
+    return compiled
