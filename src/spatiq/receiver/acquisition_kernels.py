@@ -1,0 +1,186 @@
+"""Kernels of acquisition: bare arrays in and out."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from spatiq.kernels import C64, C128, F32, F64, I64, kernel
+from spatiq.receiver.matched_filter import sample_periods
+
+
+@kernel
+def correlate_known(
+    y: F32, periods: I64, carrier: float, origin: float, pointer: I64, antenna: I64, value: C64,
+    out: C128,
+) -> None:
+    """Z = X^H D_f^H Y into out complex128 (Nt, Nr); y float32 (n, 2, Nr), carrier in cycles/symbol."""
+    out[:] = 0.0
+    turn = 1.0 + 0.0j
+    step = complex(np.cos(2 * np.pi * carrier), -np.sin(2 * np.pi * carrier))
+    previous = -2
+    for i in range(periods.size):
+        if periods[i] == previous + 1 and i % 64 != 0:
+            turn = turn * step
+        else:
+            angle = -2.0 * np.pi * carrier * (periods[i] - origin)
+            turn = complex(np.cos(angle), np.sin(angle))
+        previous = periods[i]
+        for j in range(pointer[i], pointer[i + 1]):
+            weight = np.conj(value[j]) * turn
+            for r in range(y.shape[2]):
+                out[antenna[j], r] += weight * complex(y[i, 0, r], y[i, 1, r])
+
+
+@kernel
+def projected_energy(z: C128, root: C128) -> float:
+    """||W Z||^2."""
+    total = 0.0
+    for p in range(root.shape[0]):
+        for r in range(z.shape[1]):
+            v = 0j
+            for a in range(root.shape[1]):
+                v += root[p, a] * z[a, r]
+            total += v.real * v.real + v.imag * v.imag
+    return total
+
+
+@kernel
+def solve_channel(z: C128, root: C128, channel: C128) -> None:
+    """H^T = W^H W Z, into channel complex128 (Nr, Nt)."""
+    channel[:] = 0.0
+    for p in range(root.shape[0]):
+        for r in range(z.shape[1]):
+            v = 0j
+            for a in range(root.shape[1]):
+                v += root[p, a] * z[a, r]
+            for a in range(root.shape[1]):
+                channel[r, a] += np.conj(root[p, a]) * v
+
+
+@kernel
+def parabola_top(left: float, centre: float, right: float) -> float:
+    """Abscissa of the vertex through (-1, left), (0, centre), (1, right), within +-1."""
+    bend = left - 2.0 * centre + right
+    if bend >= 0.0:
+        return 0.0
+    return min(1.0, max(-1.0, 0.5 * (left - right) / bend))
+
+
+@kernel
+def grid_search(
+    planes: F32, t0: float, step: float, grid: F64, periods: I64, pointer: I64, antenna: I64,
+    value: C64, root: C128, origin: float, taps: F32, phases: int,
+) -> tuple[float, float]:
+    """Timing and carrier of the likelihood's largest grid point, refined by parabolas."""
+    channels = planes.shape[0]
+    y = np.empty((periods.size, 2, channels), np.float32)
+    z = np.empty((root.shape[1], channels), np.complex128)
+    score = np.empty((3, grid.size))
+    reach = 0.25 * step  # the search's lags lie half a symbol apart
+    for i in range(3):
+        sample_periods(planes, t0 + (i - 1) * reach, step, periods, taps, phases, y)
+        for j in range(grid.size):
+            correlate_known(y, periods, grid[j], origin, pointer, antenna, value, z)
+            score[i, j] = projected_energy(z, root)
+    top = np.argmax(score)
+    i, j = top // grid.size, top % grid.size
+    carrier = grid[j]
+    if 0 < j < grid.size - 1:
+        bend = parabola_top(score[i, j - 1], score[i, j], score[i, j + 1])
+        carrier += bend * (grid[1] - grid[0])
+    timing = t0 + (i - 1) * reach
+    if i == 1:
+        timing += reach * parabola_top(score[0, j], score[1, j], score[2, j])
+    return timing, carrier
+
+
+@kernel
+def scoring_step(
+    y: F32, slope: F32, periods: I64, carrier: float, origin: float, pointer: I64, antenna: I64,
+    value: C64, root: C128, channel: C128, slope_energy: float,
+) -> tuple[float, float, float, float, float]:
+    """One Fisher scoring step with the channel concentrated out.
+
+    Returns:
+        Corrections of timing (samples) and carrier (cycles per symbol), N0, and the information
+        (times N0/2) about the carrier in (radians per symbol)^-2 and about timing in samples^-2.
+    """
+    channels, antennas = y.shape[2], root.shape[1]
+    z = np.empty((antennas, channels), np.complex128)
+    correlate_known(y, periods, carrier, origin, pointer, antenna, value, z)
+    solve_channel(z, root, channel)
+    # b = (k - origin) X H^T; its part outside the column space of X carries the carrier.
+    xb = np.zeros((antennas, channels), np.complex128)
+    model = np.empty((periods.size, channels), np.complex128)
+    for i in range(periods.size):
+        for r in range(channels):
+            v = 0j
+            for j in range(pointer[i], pointer[i + 1]):
+                v += channel[r, antenna[j]] * value[j]
+            model[i, r] = v
+            for j in range(pointer[i], pointer[i + 1]):
+                xb[antenna[j], r] += np.conj(value[j]) * v * (periods[i] - origin)
+    drift = np.empty((channels, antennas), np.complex128)
+    solve_channel(xb, root, drift)
+    carrier_score, carrier_info, timing_score, timing_info, error = 0.0, 0.0, 0.0, 0.0, 0.0
+    for i in range(periods.size):
+        angle = -2.0 * np.pi * carrier * (periods[i] - origin)
+        turn = complex(np.cos(angle), np.sin(angle))
+        for r in range(channels):
+            b = (periods[i] - origin) * model[i, r]
+            for j in range(pointer[i], pointer[i + 1]):
+                b -= drift[r, antenna[j]] * value[j]
+            e = complex(y[i, 0, r], y[i, 1, r]) * turn - model[i, r]
+            carrier_score += (np.conj(b) * e).imag
+            carrier_info += b.real * b.real + b.imag * b.imag
+            timing_score += (np.conj(model[i, r]) * complex(slope[i, 0, r], slope[i, 1, r]) * turn).real
+            timing_info += model[i, r].real ** 2 + model[i, r].imag ** 2
+            error += e.real * e.real + e.imag * e.imag
+    timing_info *= slope_energy
+    # Complex unknowns: the channel's; real ones: carrier and timing, one complex together.
+    freedom = max(periods.size * channels - root.shape[0] * channels - 1, 1)
+    timing = timing_score / timing_info if timing_info > 0.0 else 0.0
+    turn_rate = carrier_score / carrier_info if carrier_info > 0.0 else 0.0
+    return timing, turn_rate / (2 * np.pi), error / freedom, carrier_info, timing_info
+
+
+@kernel
+def acquire_frame(
+    planes: F32, t0: float, step: float, grid: F64, periods: I64, pointer: I64, antenna: I64,
+    value: C64, root: C128, origin: float, taps: F32, slopes: F32, phases: int,
+    slope_energy: float, channel: C128,
+) -> tuple[float, float, float, float, float]:
+    """Maximum-likelihood timing and carrier of one frame; channel complex128 (Nr, Nt) is filled.
+
+    Args:
+        planes: float32 (Nr, 2, W); samples.
+        t0, step: first guess of symbol 0's centre, and samples per symbol.
+        grid: carriers to try, cycles per symbol; empty to start from the first guess.
+        periods, pointer, antenna, value: known symbols, sparse.
+        root: complex128 (rank, Nt); square root of the inverse Gram matrix.
+        origin: period to which the channel's phase refers.
+        taps, slopes, phases, slope_energy: filter bank.
+
+    Returns:
+        t0, carrier (cycles per symbol), N0, variance of the carrier ((rad/symbol)^2), of t0.
+    """
+    channels = planes.shape[0]
+    carrier = 0.0
+    if grid.size > 0:
+        t0, carrier = grid_search(
+            planes, t0, step, grid, periods, pointer, antenna, value, root, origin, taps, phases
+        )
+    y = np.empty((periods.size, 2, channels), np.float32)
+    slope = np.empty((periods.size, 2, channels), np.float32)
+    noise, carrier_info, timing_info = 0.0, 0.0, 0.0
+    for _ in range(3):
+        sample_periods(planes, t0, step, periods, taps, phases, y)
+        sample_periods(planes, t0, step, periods, slopes, phases, slope)
+        timing, turn, noise, carrier_info, timing_info = scoring_step(
+            y, slope, periods, carrier, origin, pointer, antenna, value, root, channel, slope_energy
+        )
+        t0 += min(max(timing, -0.25 * step), 0.25 * step)
+        carrier += turn
+    half_noise = 0.5 * max(noise, 1e-30)
+    frequency_var = half_noise / max(carrier_info, 1e-30)
+    return t0, carrier, noise, frequency_var, half_noise / max(timing_info, 1e-30)

@@ -1,0 +1,122 @@
+"""The chain: recording and link in, batches of received frames out.
+
+    framing (with frame search) -> acquisition -> tracking -> refit -> detection
+
+Each stage is a callable that takes a batch and gives a batch. A list of stages of one's own takes
+the place of `standard_stages`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass
+
+from spatiq.errors import InputError
+from spatiq.link.description import Link
+from spatiq.receiver.acquisition import Acquisition
+from spatiq.receiver.detection import Detection, find_detector
+from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.frame_search import SyncPattern, sync_pattern
+from spatiq.receiver.framing import Framing
+from spatiq.receiver.link_tables import LinkTables, link_tables
+from spatiq.receiver.matched_filter import FilterBank, filter_bank
+from spatiq.receiver.options import ReceiverOptions
+from spatiq.receiver.refit import Refit
+from spatiq.receiver.tracking import Tracking
+from spatiq.recording.recording import Recording
+
+Stage = Callable[[FrameBatch], FrameBatch]
+
+
+@dataclass(frozen=True)
+class Progress:
+    """How far the chain is."""
+
+    samples_done: int
+    samples_total: int
+    frames_found: int
+    text: str = ""
+
+
+@dataclass(frozen=True, eq=False)
+class ChainParts:
+    """What all stages share: derived once from recording, link and options."""
+
+    bank: FilterBank
+    tables: LinkTables
+    pattern: SyncPattern
+
+
+def chain_parts(recording: Recording, link: Link, options: ReceiverOptions) -> ChainParts:
+    """Filter bank, link tables and sync pattern.
+
+    Raises:
+        InputError: when the link cannot be received from this recording.
+    """
+    samples_per_symbol = recording.sample_rate / link.symbol_rate_hz
+    if not 1.25 <= samples_per_symbol <= 64:
+        raise InputError(
+            recording.path,
+            "sample rate",
+            f"{recording.sample_rate:.9g} Hz, {samples_per_symbol:.6g} samples per symbol",
+            "1.25 to 64 samples per symbol period",
+        )
+    return ChainParts(
+        bank=filter_bank(link.pulse, samples_per_symbol),
+        tables=link_tables(link),
+        pattern=sync_pattern(link, options, recording.channels),
+    )
+
+
+def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> list[Stage]:
+    """The stages after framing, in order."""
+    # Half the permitted range as standard deviation: the range's ends stay likely.
+    clock_std = options.max_clock_ppm * 1e-6 / 2
+    locked = None
+    if link.clock == "locked" and link.carrier_hz is not None:
+        locked = link.carrier_hz
+        clock_std = 1e-9
+    walk = 2 * 3.141592653589793 * options.phase_noise_hz / link.symbol_rate_hz
+    steps = parts.pattern.carrier_bins
+    spacing = float(steps[1] - steps[0]) if steps.size > 1 else 1.0
+    reach = spacing / parts.pattern.transform_size
+    return [
+        Acquisition(parts.bank, parts.tables, reach, link.symbol_rate_hz, locked),
+        Tracking(parts.bank, parts.tables, clock_std, walk),
+        Refit(parts.bank, parts.tables, clock_std, walk),
+        Detection(link.codebook, find_detector(options.detector), options.compare_two_step),
+    ]
+
+
+def receive(
+    recording: Recording,
+    link: Link,
+    options: ReceiverOptions | None = None,
+    *,
+    stages: Sequence[Stage] | None = None,
+    progress: Callable[[Progress], None] | None = None,
+) -> Iterator[FrameBatch]:
+    """Received frames of a recording, batch by batch, in the order of time.
+
+    Args:
+        recording: opened recording.
+        link: link description.
+        options: how to receive.
+        stages: stages after framing; `standard_stages` when None.
+        progress: called after each batch.
+
+    Raises:
+        InputError: when the link cannot be received from this recording.
+    """
+    options = options or ReceiverOptions()
+    parts = chain_parts(recording, link, options)
+    chosen = list(stages) if stages is not None else standard_stages(link, options, parts)
+    framing = Framing(recording, link, options, parts.bank, parts.tables, parts.pattern)
+    frames = 0
+    for batch in framing:
+        for stage in chosen:
+            batch = stage(batch)
+        frames += batch.count
+        if progress is not None:
+            progress(Progress(framing.samples_done, recording.n_samples, frames))
+        yield batch

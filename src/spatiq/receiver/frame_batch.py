@@ -1,0 +1,107 @@
+"""A batch of frames on its way through the chain: each stage fills in what it finds out."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+@dataclass(frozen=True)
+class LostFrame:
+    """A frame that was expected and is not in the table, with the reason."""
+
+    segment: int
+    start_sample: float  # expected centre of its first symbol, per-channel file index
+    frame_number: int  # -1 when unknown
+    reason: str  # "cut off by the start", "cut off by the end", "not found", "gap", ...
+
+
+@dataclass
+class FrameBatch:
+    """F frames cut out of the recording, and what is known of them so far.
+
+    Attributes:
+        planes: float32 (F, Nr, 2, W); samples, real and imaginary planes; derotated in place as the
+            carrier becomes known.
+        first_sample: int64 (F,); per-channel file index of each window's first sample.
+        segment: int32 (F,); index of the segment.
+        sync_metric: float64 (F,); normalised correlation at the detected lag.
+        clipped: int64 (F,); samples at full scale within the frame, all channels.
+        t0: float64 (F,); centre of symbol 0 within the window, samples.
+        step: float64 (F,); samples per symbol as received.
+        carrier: float64 (F,); carrier offset removed from `planes` so far, cycles per sample.
+        lost: frames known to be lost before the last of these.
+
+    Filled by acquisition and refined by the refit:
+        carrier_estimate: float64 (F,); carrier offset including what the phase track shows.
+        channel: complex128 (F, Nr, Nt); phase at the energy-weighted centre of the known symbols.
+        noise: float64 (F,); N0.
+        header_noise: float64 (F,); N0 from the known symbols alone, as acquired.
+        header_freedom: complex degrees of freedom behind header_noise.
+        phase: float32 (F, Ka); carrier phase left in each active period, radians.
+        frequency_var: float64 (F,); variance of the carrier estimate, (radians per symbol)^2.
+        timing_var, step_var: float64 (F,); variances of t0 and step.
+        antenna_energy: float64 (F, Nt); sum of |x_a|^2 behind the channel estimate.
+
+    Filled by symbol sampling and detection:
+        symbols: complex64 (F, Kp, Nr); payload vectors, carrier phase removed.
+        words: int64 (F, Kp); decided words.
+        words_two_step: the same by the two-step detector, or None.
+    """
+
+    planes: NDArray[np.float32]
+    first_sample: NDArray[np.int64]
+    segment: NDArray[np.int32]
+    sync_metric: NDArray[np.float64]
+    clipped: NDArray[np.int64]
+    t0: NDArray[np.float64]
+    step: NDArray[np.float64]
+    carrier: NDArray[np.float64]
+    carrier_estimate: NDArray[np.float64]
+    channel: NDArray[np.complex128]
+    noise: NDArray[np.float64]
+    header_noise: NDArray[np.float64]
+    phase: NDArray[np.float32]
+    frequency_var: NDArray[np.float64]
+    timing_var: NDArray[np.float64]
+    step_var: NDArray[np.float64]
+    antenna_energy: NDArray[np.float64]
+    symbols: NDArray[np.complex64]
+    words: NDArray[np.int64]
+    header_freedom: int = 0
+    words_two_step: NDArray[np.int64] | None = None
+    lost: list[LostFrame] = field(default_factory=list)
+
+    @property
+    def count(self) -> int:
+        """Number of frames, F."""
+        return int(self.first_sample.size)
+
+
+def empty_batch(
+    count: int, channels: int, window: int, antennas: int, active: int, payload: int
+) -> FrameBatch:
+    """A batch with room for everything, nothing known yet."""
+    return FrameBatch(
+        planes=np.zeros((count, channels, 2, window), np.float32),
+        first_sample=np.zeros(count, np.int64),
+        segment=np.zeros(count, np.int32),
+        sync_metric=np.zeros(count),
+        clipped=np.zeros(count, np.int64),
+        t0=np.zeros(count),
+        step=np.zeros(count),
+        carrier=np.zeros(count),
+        carrier_estimate=np.zeros(count),
+        channel=np.zeros((count, channels, antennas), np.complex128),
+        noise=np.zeros(count),
+        header_noise=np.zeros(count),
+        phase=np.zeros((count, active), np.float32),
+        frequency_var=np.zeros(count),
+        timing_var=np.zeros(count),
+        step_var=np.zeros(count),
+        antenna_energy=np.zeros((count, antennas)),
+        symbols=np.zeros((count, payload, channels), np.complex64),
+        words=np.zeros((count, payload), np.int64),
+    )

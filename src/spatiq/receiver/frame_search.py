@@ -1,0 +1,217 @@
+"""Frame search: where in the recording does a sync section sit, at which carrier offset?
+
+The recording is matched-filtered at two instants per symbol period, on a grid that is fixed to the
+segment's first sample. At each lag and carrier bin the received vectors are projected on the space
+of the sync section's transmit vectors, jointly over all receive channels:
+
+    metric = ||Q^H D_f^H Y||^2 / ||Y||^2,    Q orthonormal basis (N, P), Y (N, Nr)
+
+In white noise the metric follows Beta(P*Nr, (N-P)*Nr) whatever the noise power, which gives the
+threshold in closed form (the generalised likelihood ratio of a subspace signal in noise of unknown
+power: L. L. Scharf and B. Friedlander, "Matched subspace detectors", IEEE Trans. Signal Process.
+42(8), 1994).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+import scipy.fft
+import scipy.stats
+from numpy.typing import NDArray
+
+from spatiq.link.description import Link
+from spatiq.receiver.frame_search_kernels import metric_at, peak_metric
+from spatiq.receiver.matched_filter import FilterBank, sample_instants
+from spatiq.receiver.options import ReceiverOptions
+from spatiq.receiver.sample_stream import SampleStream
+
+LAGS_PER_SYMBOL = 2
+
+
+@dataclass(frozen=True)
+class Detection:
+    """A sync section found: lag in half symbol periods from the segment's start, carrier bin."""
+
+    lag: int
+    carrier_bin: int
+    metric: float
+
+
+@dataclass(frozen=True, eq=False)
+class SyncPattern:
+    """What is searched for.
+
+    Attributes:
+        basis: complex64 (P, N); orthonormal rows spanning the sync section's transmit vectors.
+        transform_size: length of the correlation transforms, symbol periods.
+        carrier_bins: transform bins of the carrier offsets tested, ascending, symmetric.
+        threshold: smallest metric that counts as a detection.
+    """
+
+    basis: NDArray[np.complex64]
+    transform_size: int
+    carrier_bins: NDArray[np.int64]
+    threshold: float
+
+    @property
+    def length(self) -> int:
+        """Symbol periods in the sync section, N."""
+        return int(self.basis.shape[1])
+
+    def carrier(self, carrier_bin: int) -> float:
+        """Carrier offset of a bin, cycles per symbol period."""
+        return float(self.carrier_bins[carrier_bin]) / self.transform_size
+
+
+def threshold(false_alarm: float, length: int, rank: int, channels: int) -> float:
+    """Metric that noise alone exceeds with the stated probability, per lag and carrier bin."""
+    return float(scipy.stats.beta.isf(false_alarm, rank * channels, (length - rank) * channels))
+
+
+def sync_pattern(link: Link, options: ReceiverOptions, channels: int) -> SyncPattern:
+    """Basis, carrier grid and threshold of a link's first sync section.
+
+    Carrier bins lie at most 1/(2N) cycles per symbol apart: the loss half way between two is 0.9 dB.
+    """
+    span = link.layout.sync
+    vectors = link.layout.known[span.start : span.stop]
+    left, values, _ = np.linalg.svd(vectors, full_matrices=False)
+    rank = int(np.sum(values > 1e-6 * values[0]))
+    n = vectors.shape[0]
+    size = max(1024, 1 << int(np.ceil(np.log2(8 * n))))
+    step = max(1, size // (2 * n))
+    reach = int(np.ceil(options.cfo_range * size / step))
+    return SyncPattern(
+        basis=np.ascontiguousarray(left[:, :rank].T).astype(np.complex64),
+        transform_size=size,
+        carrier_bins=np.arange(-reach, reach + 1, dtype=np.int64) * step,
+        threshold=threshold(options.false_alarm, n, rank, channels),
+    )
+
+
+class FrameSearch:
+    """Finds sync sections in one segment; lags are asked for in rising order.
+
+    `lead`: symbol periods before a sync section that its frame still needs.
+    """
+
+    def __init__(
+        self, stream: SampleStream, bank: FilterBank, pattern: SyncPattern, lead: int = 0
+    ) -> None:
+        self._lead = lead
+        self._stream = stream
+        self._bank = bank
+        self._pattern = pattern
+        self._spacing = bank.samples_per_symbol / LAGS_PER_SYMBOL
+        self._hop = LAGS_PER_SYMBOL * (pattern.transform_size - pattern.length + 1)
+        self._spectra = self._pattern_spectra()
+        self._blocks: dict[int, tuple[NDArray[np.float32], NDArray[np.int64]]] = {}
+        count = int((stream.stop - stream.start) / self._spacing) + 1
+        self.last_lag = count - LAGS_PER_SYMBOL * (pattern.length - 1) - 1
+
+    def _pattern_spectra(self) -> NDArray[np.complex64]:
+        """Conjugate transforms of the basis at each carrier bin, complex64 (bins, P, size)."""
+        pattern = self._pattern
+        base = np.conj(scipy.fft.fft(pattern.basis, pattern.transform_size, axis=-1))
+        shifted = [np.roll(base, b, axis=-1) for b in pattern.carrier_bins]
+        return np.ascontiguousarray(np.stack(shifted)).astype(np.complex64)
+
+    def instants(self, first: int, count: int) -> NDArray[np.complex64]:
+        """Matched-filter outputs of the fixed half-symbol grid, complex64 (Nr, count)."""
+        half = self._bank.half
+        origin = int(np.floor(first * self._spacing)) - half
+        reach = int(np.ceil(count * self._spacing)) + 2 * half + 3
+        begin = self._stream.start + origin
+        planes = np.ascontiguousarray(self._stream.planes(begin, begin + reach))
+        out = np.empty((count, 2, planes.shape[0]), np.float32)
+        taps, phases = self._bank.taps, self._bank.phases
+        sample_instants(planes, origin, first, self._spacing, taps, phases, out)
+        return np.ascontiguousarray((out[:, 0] + 1j * out[:, 1]).T)
+
+    def _block(self, index: int) -> tuple[NDArray[np.float32], NDArray[np.int64]]:
+        """Best metric over carrier bins, and its bin, for the lags of one block of the grid."""
+        if index not in self._blocks:
+            self._blocks = {i: b for i, b in self._blocks.items() if i >= index - 1}
+            size = self._pattern.transform_size
+            y = self.instants(index * self._hop, LAGS_PER_SYMBOL * size)
+            halves = np.stack([y[:, 0::2], y[:, 1::2]])  # (2, Nr, size)
+            spectrum = scipy.fft.fft(halves, axis=-1)
+            lags = size - self._pattern.length + 1
+            best = np.zeros(2 * lags, np.float32)
+            where = np.zeros(2 * lags, np.int64)
+            for b in range(self._spectra.shape[0]):
+                product = spectrum[:, :, None, :] * self._spectra[b]
+                correlation = scipy.fft.ifft(product, axis=-1, overwrite_x=True)
+                peak_metric(halves, correlation, self._pattern.length, b, best, where)
+            self._blocks[index] = (best, where)
+        return self._blocks[index]
+
+    def scan(self, from_lag: int) -> Detection | None:
+        """First sync section at or after a lag: the largest metric within one sync length of the
+        first crossing of the threshold."""
+        lag = max(from_lag, 0)
+        while lag <= self.last_lag:
+            index, offset = divmod(lag, self._hop)
+            self.release(lag)
+            best, _ = self._block(index)
+            crossing = np.flatnonzero(best[offset:] >= self._pattern.threshold)
+            if crossing.size:
+                first = lag + int(crossing[0])
+                return self._peak(first) if first <= self.last_lag else None
+            lag = (index + 1) * self._hop
+        return None
+
+    def release(self, lag: int) -> None:
+        """Nothing before this lag is searched any more: keep its grid block, and the lead of a frame
+        and a peak's neighbourhood before it."""
+        keep = min(lag, lag // self._hop * self._hop)
+        keep -= LAGS_PER_SYMBOL * (self._lead + self._pattern.length)
+        samples = int(keep * self._spacing) - 2 * self._bank.half - 8
+        self._stream.release(self._stream.start + samples)
+
+    def _peak(self, first: int) -> Detection:
+        last = min(first + LAGS_PER_SYMBOL * self._pattern.length, self.last_lag)
+        top, at, carrier_bin = -1.0, first, 0
+        for index in range(first // self._hop, last // self._hop + 1):
+            best, where = self._block(index)
+            low = max(first - index * self._hop, 0)
+            high = min(last - index * self._hop, self._hop - 1) + 1
+            i = low + int(np.argmax(best[low:high]))
+            if best[i] > top:
+                top, at, carrier_bin = float(best[i]), index * self._hop + i, int(where[i])
+        return self.refine(at, carrier_bin)
+
+    def refine(self, lag: int, carrier_bin: int, lags: int = 2, bins: int = 1) -> Detection:
+        """Best metric by direct correlation in a neighbourhood: the same however one got there."""
+        pattern = self._pattern
+        first = max(lag - lags, 0)
+        last = min(lag + lags, self.last_lag)
+        y = self.instants(first, last - first + LAGS_PER_SYMBOL * (pattern.length - 1) + 1)
+        low = max(carrier_bin - bins, 0)
+        high = min(carrier_bin + bins, pattern.carrier_bins.size - 1)
+        carriers = pattern.carrier_bins[low : high + 1] / pattern.transform_size
+        metric = metric_at(y, pattern.basis, carriers, last - first + 1)
+        i, b = np.unravel_index(int(np.argmax(metric)), metric.shape)
+        return Detection(first + int(i), low + int(b), float(metric[i, b]))
+
+    def near(self, lag: int, carrier_bin: int, reach: int) -> Detection | None:
+        """A sync section expected at a lag, searched +-reach lags and +-1 bin around it."""
+        if lag - reach > self.last_lag or lag + reach < 0:
+            return None
+        found = self.refine(min(max(lag, 0), self.last_lag), carrier_bin, lags=reach)
+        if found.metric < self._pattern.threshold:
+            return None
+        return self.refine(found.lag, found.carrier_bin)
+
+
+def noise_metrics(search: FrameSearch) -> Iterator[NDArray[np.float32]]:
+    """Best metric of every lag, block by block: for measuring the false-alarm rate."""
+    index = 0
+    while index * search._hop <= search.last_lag:
+        search.release(index * search._hop)
+        best, _ = search._block(index)
+        yield best[: max(0, min(search._hop, search.last_lag + 1 - index * search._hop))]
+        index += 1

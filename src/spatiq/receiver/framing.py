@@ -1,0 +1,230 @@
+"""Framing: sync sections become frames, cut out of the recording and gathered into batches.
+
+Search and framing take turns: after a frame, the next sync section is looked for where the link says
+that it may follow, first where it is expected, then anywhere. What was expected and is not there is
+listed with its reason.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+
+from spatiq.link.description import Link
+from spatiq.receiver.expected_frames import FoundStart, lost_between
+from spatiq.receiver.frame_batch import FrameBatch, LostFrame, empty_batch
+from spatiq.receiver.frame_search import (
+    LAGS_PER_SYMBOL,
+    Detection,
+    FrameSearch,
+    SyncPattern,
+)
+from spatiq.receiver.framing_kernels import cut_window
+from spatiq.receiver.link_tables import LinkTables
+from spatiq.receiver.matched_filter import FilterBank, derotate
+from spatiq.receiver.options import ReceiverOptions
+from spatiq.receiver.sample_stream import SampleStream
+from spatiq.recording.placement import Segment
+from spatiq.recording.recording import Recording
+
+_BATCH_BYTES = 16 << 20  # of samples: enough frames to make Python's cost vanish, and bounded
+_BATCH_FRAMES = 512
+
+
+@dataclass(frozen=True)
+class FrameGeometry:
+    """Sizes in symbol periods and samples that follow from link and options.
+
+    Attributes:
+        length: K.
+        guard: symbol periods kept on either side, for clock offsets.
+        window: samples cut out for a frame.
+        half: matched-filter reach, samples.
+        samples_per_symbol: nominal.
+    """
+
+    length: int
+    guard: int
+    window: int
+    half: int
+    samples_per_symbol: float
+
+
+def frame_geometry(link: Link, bank: FilterBank, options: ReceiverOptions) -> FrameGeometry:
+    """Windows large enough for the frame at twice the expected clock offset."""
+    length = link.layout.length
+    guard = 2 + int(np.ceil(length * options.max_clock_ppm * 2e-6))
+    span = int(np.ceil((length + 2 * guard) * bank.samples_per_symbol))
+    window = span + 2 * bank.half + 4
+    return FrameGeometry(length, guard, window, bank.half, bank.samples_per_symbol)
+
+
+def clip_levels(recording: Recording) -> tuple[float, float]:
+    """Component values at or beyond which a sample counts as clipped; infinite when unknown."""
+    if not recording.clipping_known:
+        return -np.inf, np.inf
+    lows, highs = [], []
+    for dataset in recording.datasets:
+        kind = dataset.metadata.sample_type
+        low, high = kind.range_ends
+        lows.append((low - kind.offset) / kind.full_scale)
+        highs.append((high - kind.offset) / kind.full_scale)
+    return max(lows), min(highs)
+
+
+class Framing:
+    """The stage: a recording in, batches of frames out, in the order of time."""
+
+    def __init__(
+        self,
+        recording: Recording,
+        link: Link,
+        options: ReceiverOptions,
+        bank: FilterBank,
+        tables: LinkTables,
+        pattern: SyncPattern,
+    ) -> None:
+        self._recording = recording
+        self._link = link
+        self._options = options
+        self._bank = bank
+        self._tables = tables
+        self._pattern = pattern
+        self._geometry = frame_geometry(link, bank, options)
+        self._clip = clip_levels(recording)
+        frame_bytes = recording.channels * 2 * self._geometry.window * 4
+        self._batch_size = max(1, min(_BATCH_FRAMES, _BATCH_BYTES // frame_bytes))
+        self.samples_done = 0
+
+    def __iter__(self) -> Iterator[FrameBatch]:
+        """Batches of at most a few hundred frames; the last may hold lost frames only."""
+        batch, count = self._new_batch(), 0
+        previous: FoundStart | None = None
+        for segment in self._recording.segments:
+            for found, start in self._segment(segment):
+                here = None
+                if start is not None:
+                    position = start - segment.start + segment.global_index
+                    here = FoundStart(segment, start, position)
+                    batch.lost += self._missing(previous, here)
+                    previous = here
+                if isinstance(found, LostFrame):
+                    batch.lost.append(found)
+                    continue
+                self._enter(batch, count, segment, *found)
+                count += 1
+                if count == self._batch_size:
+                    yield batch
+                    batch, count = self._new_batch(), 0
+        batch.lost += self._missing(previous, None)
+        yield _first_frames(batch, count)
+
+    def _new_batch(self) -> FrameBatch:
+        return empty_batch(
+            self._batch_size,
+            self._recording.channels,
+            self._geometry.window,
+            self._link.antennas,
+            self._tables.active.size,
+            self._link.layout.payload_index.size,
+        )
+
+    def _missing(self, before: FoundStart | None, after: FoundStart | None) -> list[LostFrame]:
+        if self._link.period_symbols is None:
+            return []
+        period = self._link.period_symbols * self._geometry.samples_per_symbol
+        active = self._tables.active
+        sps = self._geometry.samples_per_symbol
+        span = (float(active[0]) * sps, float(active[-1]) * sps)
+        return lost_between(self._recording.segments, before, after, period, span)
+
+    def _segment(
+        self, segment: Segment
+    ) -> Iterator[tuple[tuple[Detection, np.ndarray] | LostFrame, float | None]]:
+        """Frames of one segment: what was found, and the start of a frame in file samples."""
+        blocks = self._recording.blocks(self._options.block_size, segment.start, segment.stop)
+        stream = SampleStream(blocks, segment.start, segment.stop, self._recording.channels)
+        sync = self._link.layout.sync.start
+        lead = sync + 2 * self._geometry.guard
+        search = FrameSearch(stream, self._bank, self._pattern, lead)
+        spacing = self._geometry.samples_per_symbol / LAGS_PER_SYMBOL
+        lag, last = 0, None
+        while True:
+            found = self._next(search, lag, last)
+            if found is None:
+                break
+            start = segment.start + (found.lag - LAGS_PER_SYMBOL * sync) * spacing
+            reason = self._cut_off(segment, start)
+            if reason:
+                yield LostFrame(segment.index, start, -1, reason), start
+            else:
+                window = self._first_sample(start)
+                yield (found, stream.planes(window, window + self._geometry.window)), start
+            last = found
+            drift = 1 + int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
+            lag = found.lag + LAGS_PER_SYMBOL * max(self._geometry.length - drift, 1)
+            self.samples_done = min(int(segment.start + lag * spacing), segment.stop)
+            search.release(lag)
+        self.samples_done = segment.stop
+
+    def _next(self, search: FrameSearch, lag: int, last: Detection | None) -> Detection | None:
+        """Where a frame is expected after the last one; failing that, wherever one is."""
+        if last is not None:
+            period = self._link.period_symbols or float(self._geometry.length)
+            drift = 1 + int(np.ceil(period * self._options.max_clock_ppm * 1e-6))
+            expected = last.lag + round(LAGS_PER_SYMBOL * period)
+            found = search.near(expected, last.carrier_bin, LAGS_PER_SYMBOL * drift)
+            if found is not None:
+                return found
+        return search.scan(lag)
+
+    def _first_sample(self, start: float) -> int:
+        geometry = self._geometry
+        margin = geometry.guard * geometry.samples_per_symbol
+        return int(np.floor(start - margin)) - geometry.half
+
+    def _cut_off(self, segment: Segment, start: float) -> str:
+        sps = self._geometry.samples_per_symbol
+        active = self._tables.active
+        if start + active[0] * sps < segment.start - 0.5:
+            return "cut off by the start" if segment.index == 0 else "cut off by a gap"
+        if start + active[-1] * sps > segment.stop - 0.5:
+            last = segment.index == len(self._recording.segments) - 1
+            return "cut off by the end" if last else "cut off by a gap"
+        return ""
+
+    def _enter(
+        self,
+        batch: FrameBatch,
+        i: int,
+        segment: Segment,
+        found: Detection,
+        samples: np.ndarray,
+    ) -> None:
+        """Copy a frame's window into the batch and remove the carrier that the search saw."""
+        sps = self._geometry.samples_per_symbol
+        sync = self._link.layout.sync.start
+        start = segment.start + (found.lag / LAGS_PER_SYMBOL - sync) * sps
+        first = self._first_sample(start)
+        inside = (int(start - first), int(start - first + self._geometry.length * sps) + 1)
+        batch.clipped[i] = cut_window(samples, batch.planes[i], *self._clip, *inside)
+        batch.first_sample[i] = first
+        batch.segment[i] = segment.index
+        batch.sync_metric[i] = found.metric
+        batch.t0[i] = start - first
+        batch.step[i] = sps
+        batch.carrier[i] = self._pattern.carrier(found.carrier_bin) / sps
+        origin = batch.t0[i] + self._tables.header_centroid * sps
+        derotate(batch.planes[i], batch.carrier[i], origin)
+
+
+def _first_frames(batch: FrameBatch, count: int) -> FrameBatch:
+    """The first `count` frames of a batch that did not fill."""
+    cut = {
+        name: value[:count]
+        for name, value in vars(batch).items()
+        if isinstance(value, np.ndarray)
+    }
+    return FrameBatch(**cut, lost=batch.lost)

@@ -1,0 +1,59 @@
+"""Receiver options: how to receive. The link description says what is on the air."""
+
+from __future__ import annotations
+
+from dataclasses import asdict, dataclass
+from typing import Any
+
+from spatiq.errors import InputError
+
+
+@dataclass(frozen=True)
+class ReceiverOptions:
+    """How to receive; the defaults suit a laboratory recording.
+
+    Attributes:
+        cfo_range: carrier offsets searched, +- this share of the symbol rate (0 to 0.25).
+        false_alarm: probability that noise alone passes as a sync section, per tested lag and
+            carrier bin.
+        detector: registered name, or "module:function" of one's own.
+        confidence: level of all intervals.
+        compare_two_step: also run the two-step detector and count its errors.
+        keep_symbols: keep received payload vectors and words in the results.
+        max_clock_ppm: clock offsets expected, +- ppm; frames are tracked a little beyond.
+        phase_noise_hz: linewidth of the oscillators' phase noise that carrier tracking expects.
+        block_size: samples read at a time; never changes a figure.
+    """
+
+    cfo_range: float = 0.02
+    false_alarm: float = 1e-10
+    detector: str = "maximum-likelihood"
+    confidence: float = 0.95
+    compare_two_step: bool = True
+    keep_symbols: bool = False
+    max_clock_ppm: float = 50.0
+    phase_noise_hz: float = 0.0
+    block_size: int = 1 << 18
+
+    def __post_init__(self) -> None:
+        """Refuse values outside their range.
+
+        Raises:
+            InputError: naming the option, the value found and the range accepted.
+        """
+        bounds = {
+            "cfo_range": (0.0, 0.25),
+            "false_alarm": (1e-30, 0.1),
+            "confidence": (0.5, 0.9999),
+            "max_clock_ppm": (0.0, 1000.0),
+            "phase_noise_hz": (0.0, 1e9),
+            "block_size": (1024, 1 << 30),
+        }
+        for name, (low, high) in bounds.items():
+            value = getattr(self, name)
+            if not low <= value <= high:
+                raise InputError("receiver options", name, value, f"a value from {low} to {high}")
+
+    def as_dict(self) -> dict[str, Any]:
+        """All options by name, for provenance."""
+        return asdict(self)

@@ -1,0 +1,233 @@
+"""Kernels of the refit: expectations over the codewords' posterior, and what follows from them."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from spatiq.kernels import C64, C128, F32, F64, I64, kernel
+from spatiq.receiver.soft_kernels import codeword_metrics, posterior, predict, smooth, update
+from spatiq.receiver.tracking_kernels import BLOCK
+
+
+@kernel
+def rotate_active(values: F32, phase: F32) -> None:
+    """Multiply values float32 (Ka, 2, Nr) in place by exp(-j phase[i])."""
+    for i in range(phase.size):
+        c, s = np.cos(phase[i]), np.sin(phase[i])
+        for r in range(values.shape[2]):
+            re, im = values[i, 0, r], values[i, 1, r]
+            values[i, 0, r] = re * c + im * s
+            values[i, 1, r] = im * c - re * s
+
+
+@kernel
+def add_known(antenna: I64, value: C64, begin: int, end: int, mean: C64, sxx: C128) -> None:
+    """Enter a known vector into mean (Nt,) and add x x^H to sxx (Nt, Nt)."""
+    for j in range(begin, end):
+        mean[antenna[j]] = value[j]
+        for m in range(begin, end):
+            sxx[antenna[m], antenna[j]] += np.conj(value[j]) * value[m]
+
+
+@kernel
+def add_expected(
+    index: I64, weight: F32, count: int, words: tuple[I64, I64, C64], amplitude: np.float32,
+    mean: C64, sxx: C128,
+) -> None:
+    """Enter E[x] into mean (Nt,) and add E[x x^H] to sxx, from the posterior of the codewords."""
+    pointer, antenna, value = words
+    for n in range(count):
+        first = weight[n] * amplitude
+        for j in range(pointer[index[n]], pointer[index[n] + 1]):
+            mean[antenna[j]] += first * value[j]
+            for m in range(pointer[index[n]], pointer[index[n] + 1]):
+                sxx[antenna[m], antenna[j]] += first * amplitude * np.conj(value[j]) * value[m]
+
+
+@kernel
+def expectation(
+    y: F32, active_word: I64, vectors: tuple[I64, I64, C64], amplitude: F32,
+    words: tuple[I64, I64, C64], codebook: tuple[F32, F32, F32], noise: float, mean: C64, sxx: C128,
+) -> float:
+    """One pass over all active periods of a frame.
+
+    Args:
+        y: float32 (Ka, 2, Nr); received vectors, carrier phase removed.
+        active_word, amplitude: (Ka,); payload word index or -1; amplitude of payload words.
+        vectors: known vectors of the active periods: pointer, antenna, value.
+        words: codeword vectors: pointer, antenna, value.
+        codebook: received codebook: real, imag (Nr, C), power (C,).
+        noise: N0.
+        mean: complex64 (Ka, Nt); filled with E[x], the known x where it is known.
+        sxx: complex128 (Nt, Nt); filled with the sum of E[x x^H].
+
+    Returns:
+        Sum over payload periods of E||y - H x||^2.
+    """
+    g_real, g_imag, g_power = codebook
+    channels, size = g_real.shape
+    metric, weight = np.empty(size, np.float32), np.empty(size, np.float32)
+    index = np.empty(size, np.int64)
+    z_real, z_imag = np.empty(channels, np.float32), np.empty(channels, np.float32)
+    sxx[:] = 0.0
+    mean[:] = 0.0
+    total = 0.0
+    for i in range(active_word.size):
+        if active_word[i] < 0:
+            begin, end = vectors[0][i], vectors[0][i + 1]
+            add_known(vectors[1], vectors[2], begin, end, mean[i], sxx)
+            continue
+        scale = np.float32(1.0) / amplitude[i]
+        square = amplitude[i] * amplitude[i]
+        power = np.float32(0.0)
+        for r in range(channels):
+            z_real[r] = y[i, 0, r] * scale
+            z_imag[r] = y[i, 1, r] * scale
+            power += z_real[r] * z_real[r] + z_imag[r] * z_imag[r]
+        best = codeword_metrics(g_real, g_imag, g_power, z_real, z_imag, metric)
+        count = posterior(metric, best, np.float32(square / noise), index, weight)
+        for n in range(count):
+            total += weight[n] * max(metric[index[n]] + power, np.float32(0.0)) * square
+        add_expected(index, weight, count, words, amplitude[i], mean[i], sxx)
+    return total
+
+
+@kernel
+def references(channel: C128, mean: C64, reference: F32) -> None:
+    """H E[x] of all active periods into reference float32 (Ka, 2, Nr)."""
+    for i in range(mean.shape[0]):
+        for r in range(channel.shape[0]):
+            v = 0j
+            for a in range(mean.shape[1]):
+                v += channel[r, a] * mean[i, a]
+            reference[i, 0, r] = v.real
+            reference[i, 1, r] = v.imag
+
+
+@kernel
+def known_error(y: F32, reference: F32, active_word: I64) -> float:
+    """Sum over known periods of ||y - H x||^2."""
+    total = 0.0
+    for i in range(active_word.size):
+        if active_word[i] < 0:
+            for r in range(y.shape[2]):
+                total += (y[i, 0, r] - reference[i, 0, r]) ** 2
+                total += (y[i, 1, r] - reference[i, 1, r]) ** 2
+    return total
+
+
+@kernel
+def cross_moments(y: F32, mean: C64, syx: C128) -> None:
+    """Sum over active periods of y E[x]^H into syx complex128 (Nr, Nt)."""
+    syx[:] = 0.0
+    for i in range(mean.shape[0]):
+        for r in range(y.shape[2]):
+            v = complex(y[i, 0, r], y[i, 1, r])
+            for a in range(mean.shape[1]):
+                syx[r, a] += v * np.conj(mean[i, a])
+
+
+@kernel
+def solve_moments(sxx: C128, syx: C128, channel: C128) -> None:
+    """H = S_yx S_xx^-1, antennas without energy left at zero; diagonal S_xx in one division."""
+    antennas = sxx.shape[0]
+    diagonal = True
+    for a in range(antennas):
+        for b in range(antennas):
+            if a != b and abs(sxx[a, b]) > 1e-9 * (abs(sxx[a, a]) + abs(sxx[b, b])):
+                diagonal = False
+    if diagonal:
+        for a in range(antennas):
+            for r in range(channel.shape[0]):
+                channel[r, a] = syx[r, a] / sxx[a, a].real if sxx[a, a].real > 0.0 else 0.0
+        return
+    loaded = sxx.copy()
+    for a in range(antennas):
+        if sxx[a, a].real <= 0.0:
+            loaded[a, a] = 1.0
+    solved = np.linalg.solve(loaded.T, syx.T.copy())
+    for a in range(antennas):
+        for r in range(channel.shape[0]):
+            channel[r, a] = solved[a, r]
+
+
+@kernel
+def refit_phase(
+    y: F32, reference: F32, active: I64, noise: float, prior: F64, walk: float, phase: F32
+) -> float:
+    """Smooth the phase left between y and reference; added to `phase` (Ka,).
+
+    Blocks of `BLOCK` active periods, two-state Kalman filter and Rauch-Tung-Striebel smoother.
+    Returns the variance of the carrier estimate, (radians per period)^2.
+    """
+    n = active.size
+    blocks = (n + BLOCK - 1) // BLOCK
+    position = np.empty(blocks)
+    filtered, filtered_cov = np.empty((blocks, 2)), np.empty((blocks, 3))
+    state, cov = np.zeros(2), np.array([prior[0], 0.0, prior[1]])
+    at = float(active[0])
+    gain = 2.0 / noise
+    for b in range(blocks):
+        begin, end = b * BLOCK, min(n, (b + 1) * BLOCK)
+        here = float(active[begin])
+        predict(state, cov, here - at, walk)
+        at = here
+        score, score_k, w, wk, wkk = 0.0, 0.0, 0.0, 0.0, 0.0
+        for i in range(begin, end):
+            k = active[i] - here
+            error, energy = np.float32(0.0), np.float32(0.0)
+            for r in range(y.shape[2]):
+                error += reference[i, 0, r] * y[i, 1, r] - reference[i, 1, r] * y[i, 0, r]
+                energy += reference[i, 0, r] ** 2 + reference[i, 1, r] ** 2
+            left = error - energy * (state[0] + state[1] * k)
+            score += left
+            score_k += left * k
+            w += energy
+            wk += energy * k
+            wkk += energy * k * k
+        update(state, cov, gain * score, gain * score_k, gain * w, gain * wk, gain * wkk)
+        position[b] = here
+        filtered[b, 0], filtered[b, 1] = state[0], state[1]
+        for j in range(3):
+            filtered_cov[b, j] = cov[j]
+    smoothed = np.empty((blocks, 2))
+    smooth(blocks, position, filtered, filtered_cov, walk, smoothed)
+    for b in range(blocks):
+        for i in range(b * BLOCK, min(n, (b + 1) * BLOCK)):
+            phase[i] += smoothed[b, 0] + smoothed[b, 1] * (active[i] - position[b])
+    return filtered_cov[blocks - 1, 2]
+
+
+@kernel
+def refit_timing(
+    slope: F32, reference: F32, active: I64, noise: float, slope_energy: float, step_var: float,
+    out: F64,
+) -> None:
+    """Least-squares correction of t0 and step, with a prior on step.
+
+    out (4,): corrections of t0 and step, their variances. All pulses are known to lie between known
+    neighbours, so that the score holds no intersymbol term (it is antisymmetric and cancels).
+    """
+    score, score_k, w, wk, wkk = 0.0, 0.0, 0.0, 0.0, 0.0
+    for i in range(active.size):
+        k = float(active[i])
+        error, energy = np.float32(0.0), np.float32(0.0)
+        for r in range(slope.shape[2]):
+            error += reference[i, 0, r] * slope[i, 0, r] + reference[i, 1, r] * slope[i, 1, r]
+            energy += reference[i, 0, r] ** 2 + reference[i, 1, r] ** 2
+        score += error
+        score_k += error * k
+        w += energy
+        wk += energy * k
+        wkk += energy * k * k
+    gain = 2.0 / noise
+    info = gain * slope_energy
+    j11, j12 = info * w, info * wk
+    j22 = info * wkk + (1.0 / step_var if step_var > 0.0 else 1e30)
+    det = j11 * j22 - j12 * j12
+    out[:] = 0.0
+    if det > 0.0:
+        out[0] = gain * (j22 * score - j12 * score_k) / det
+        out[1] = gain * (j11 * score_k - j12 * score) / det
+        out[2] = j22 / det
+        out[3] = j11 / det

@@ -1,0 +1,153 @@
+"""Kernels shared by tracking and refit: received codebook, posterior of the codewords, 2-state filter.
+
+Received vectors are held as float32 real and imaginary parts so that loops over the C codewords
+vectorise.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from spatiq.kernels import C64, C128, F32, F64, I64, comparing_kernel, kernel
+
+# Codewords with exp(-30) of the best one's likelihood change no sum in single precision.
+POSTERIOR_CUT = np.float32(30.0)
+
+
+@kernel
+def received_codebook(
+    channel: C128, pointer: I64, antenna: I64, value: C64, real: F32, imag: F32, power: F32
+) -> None:
+    """H x[c] for all c into real, imag (Nr, C), and ||H x[c]||^2 into power (C,)."""
+    for c in range(power.size):
+        total = 0.0
+        for r in range(channel.shape[0]):
+            v = 0j
+            for j in range(pointer[c], pointer[c + 1]):
+                v += channel[r, antenna[j]] * value[j]
+            real[r, c] = v.real
+            imag[r, c] = v.imag
+            total += v.real * v.real + v.imag * v.imag
+        power[c] = total
+
+
+@comparing_kernel
+def codeword_metrics(
+    real: F32, imag: F32, power: F32, z_real: F32, z_imag: F32, metric: F32
+) -> np.float32:
+    """||H x[c]||^2 - 2 Re(y^H H x[c]) for all c into metric (C,); returns the smallest."""
+    size = power.size
+    for c in range(size):
+        metric[c] = power[c]
+    for r in range(z_real.size):
+        twice_real = np.float32(2.0) * z_real[r]
+        twice_imag = np.float32(2.0) * z_imag[r]
+        row_real = real[r]
+        row_imag = imag[r]
+        for c in range(size):
+            metric[c] -= row_real[c] * twice_real + row_imag[c] * twice_imag
+    best = metric[0]
+    for c in range(1, size):
+        best = min(best, metric[c])
+    return best
+
+
+@kernel
+def posterior(
+    metric: F32, best: np.float32, inverse_noise: np.float32, index: I64, weight: F32
+) -> int:
+    """Codewords of noticeable posterior probability: their number; indices and weights filled."""
+    limit = best + POSTERIOR_CUT / inverse_noise
+    count = 0
+    total = np.float32(0.0)
+    for c in range(metric.size):
+        if metric[c] <= limit:
+            w = np.exp((best - metric[c]) * inverse_noise)
+            index[count] = c
+            weight[count] = w
+            total += w
+            count += 1
+    scale = np.float32(1.0) / total
+    for i in range(count):
+        weight[i] *= scale
+    return count
+
+
+@kernel
+def predict(state: F64, covariance: F64, distance: float, walk: float) -> None:
+    """Carry a (value, rate) state over `distance` symbol periods; `walk`: variance per period.
+
+    state (2,); covariance (3,) holds var(value), cov, var(rate).
+    """
+    state[0] += state[1] * distance
+    covariance[0] += (
+        2.0 * distance * covariance[1]
+        + distance * distance * covariance[2]
+        + walk * abs(distance)
+    )
+    covariance[1] += distance * covariance[2]
+
+
+@kernel
+def update(
+    state: F64, covariance: F64, score: float, score_k: float, w: float, wk: float, wkk: float
+) -> None:
+    """Take in a block of observations of the value at offsets k, in information form.
+
+    score = sum of weighted errors, score_k = the same times k; w, wk, wkk = sums of weights times
+    1, k, k^2. Kalman update, e.g. B. D. O. Anderson and J. B. Moore, "Optimal Filtering", ch. 6.
+    """
+    det = covariance[0] * covariance[2] - covariance[1] * covariance[1]
+    if det <= 0.0:
+        return
+    j11 = covariance[2] / det + w
+    j12 = -covariance[1] / det + wk
+    j22 = covariance[0] / det + wkk
+    det = j11 * j22 - j12 * j12
+    covariance[0] = j22 / det
+    covariance[1] = -j12 / det
+    covariance[2] = j11 / det
+    state[0] += covariance[0] * score + covariance[1] * score_k
+    state[1] += covariance[1] * score + covariance[2] * score_k
+
+
+@kernel
+def smooth(
+    count: int, position: F64, filtered: F64, filtered_cov: F64, walk: float, smoothed: F64
+) -> None:
+    """Rauch-Tung-Striebel smoothing of block states.
+
+    Method: H. E. Rauch, F. Tung, C. T. Striebel, AIAA J. 3(8), 1965.
+
+    Args:
+        count: number of blocks.
+        position: (n,); period each state refers to.
+        filtered, filtered_cov: (n, 2) and (n, 3); after each block's update.
+        walk: variance of the value's random walk per period.
+        smoothed: (n, 2); filled.
+    """
+    if count == 0:
+        return
+    smoothed[count - 1, 0] = filtered[count - 1, 0]
+    smoothed[count - 1, 1] = filtered[count - 1, 1]
+    for b in range(count - 2, -1, -1):
+        d = position[b + 1] - position[b]
+        p11, p12, p22 = filtered_cov[b, 0], filtered_cov[b, 1], filtered_cov[b, 2]
+        a11 = p11 + 2 * d * p12 + d * d * p22 + walk * abs(d)
+        a12 = p12 + d * p22
+        det = a11 * p22 - a12 * a12
+        e0 = smoothed[b + 1, 0] - (filtered[b, 0] + d * filtered[b, 1])
+        e1 = smoothed[b + 1, 1] - filtered[b, 1]
+        if det <= 0.0 or walk == 0.0:
+            # No process noise: the later state carried back exactly.
+            smoothed[b, 0] = smoothed[b + 1, 0] - d * smoothed[b + 1, 1]
+            smoothed[b, 1] = smoothed[b + 1, 1]
+            continue
+        c11 = p11 + d * p12  # P F^T
+        c12 = p12
+        c21 = p12 + d * p22
+        c22 = p22
+        i0 = (p22 * e0 - a12 * e1) / det
+        i1 = (a11 * e1 - a12 * e0) / det
+        smoothed[b, 0] = filtered[b, 0] + c11 * i0 + c12 * i1
+        smoothed[b, 1] = filtered[b, 1] + c21 * i0 + c22 * i1

@@ -1,0 +1,113 @@
+"""Tracking: the first look at the payload, following carrier phase and timing by its decisions.
+
+A two-state Kalman filter each for (phase, carrier) and (timing, clock), run outwards from the known
+symbols in short blocks. The reference of a payload period is the posterior mean of H x over all
+codewords, so that doubtful decisions weigh little (N. Noels et al., "Turbo synchronization: an EM
+algorithm interpretation", Proc. IEEE ICC 2003).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.link_tables import LinkTables
+from spatiq.receiver.matched_filter import FilterBank
+from spatiq.receiver.soft_kernels import received_codebook
+from spatiq.receiver.tracking_kernels import track_side
+
+# Drift within a frame that decisions do not notice: 0.01 symbol is an EVM of -40 dB.
+_NEGLIGIBLE_DRIFT = 0.01
+
+
+@dataclass(frozen=True, eq=False)
+class Tracking:
+    """The stage.
+
+    Attributes:
+        bank, tables: filter bank and link tables.
+        clock_std: standard deviation expected of the relative clock offset.
+        phase_walk: variance of the oscillator's phase walk per symbol period, radians^2.
+    """
+
+    bank: FilterBank
+    tables: LinkTables
+    clock_std: float
+    phase_walk: float
+
+    def __call__(self, batch: FrameBatch) -> FrameBatch:
+        """Fill phase; correct t0 and step."""
+        tables = self.tables
+        outside = tables.in_header == 0
+        later = np.flatnonzero(outside & (tables.active > tables.header_centroid))
+        earlier = np.flatnonzero(outside & (tables.active < tables.header_centroid))[::-1]
+        span = float(tables.active[-1] - tables.active[0])
+        with_timing = span * 2 * self.clock_std > _NEGLIGIBLE_DRIFT
+        size, channels = tables.codebook.size, batch.planes.shape[1]
+        real = np.empty((channels, size), np.float32)
+        imag = np.empty((channels, size), np.float32)
+        power = np.empty(size, np.float32)
+        words = tables.words
+        for i in range(batch.count):
+            received_codebook(
+                batch.channel[i], words.pointer, words.antenna, words.value, real, imag, power
+            )
+            noise = floored_noise(batch.noise[i], power)
+            self._track(batch, i, later, (real, imag, power), noise, with_timing)
+            if earlier.size:
+                self._track(batch, i, earlier, (real, imag, power), noise, with_timing)
+        return batch
+
+    def _track(
+        self,
+        batch: FrameBatch,
+        i: int,
+        order: NDArray[np.int64],
+        codebook: tuple[NDArray[np.float32], NDArray[np.float32], NDArray[np.float32]],
+        noise: float,
+        with_timing: bool,
+    ) -> None:
+        tables, bank = self.tables, self.bank
+        # The header's phase is known as well as its energy allows; the carrier as acquired.
+        phase_var = noise / (2.0 * max(float(np.mean(codebook[2])) * tables.header.size, 1e-30))
+        step_var = (self.clock_std * bank.samples_per_symbol) ** 2
+        prior = np.array([phase_var, batch.frequency_var[i], batch.timing_var[i], step_var])
+        track = np.zeros(4)
+        track_side(
+            batch.planes[i],
+            batch.t0[i],
+            batch.step[i],
+            order,
+            tables.active,
+            tables.active_word,
+            tables.active_vectors.pointer,
+            tables.active_vectors.antenna,
+            tables.active_vectors.value,
+            tables.active_amplitude,
+            batch.channel[i],
+            *codebook,
+            noise,
+            tables.header_centroid,
+            prior,
+            self.phase_walk,
+            bank.taps,
+            bank.slopes,
+            bank.phases,
+            bank.slope_energy,
+            with_timing,
+            batch.phase[i],
+            track,
+        )
+        batch.t0[i] += track[0]
+        batch.step[i] += track[1]
+        inside = tables.in_header == 1
+        distance = tables.active[inside] - tables.header_centroid
+        batch.phase[i, inside] = track[2] + track[3] * distance
+
+
+def floored_noise(noise: float, power: NDArray[np.float32]) -> float:
+    """N0 of a noiseless capture is single-precision rounding, never zero."""
+    return max(float(noise), 1e-12 * float(np.mean(power)), 1e-30)
