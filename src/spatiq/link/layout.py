@@ -1,0 +1,69 @@
+"""The frame as both ends see it: which symbol period carries what, from which antenna."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from enum import IntEnum
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+class Period(IntEnum):
+    """What a symbol period carries."""
+
+    SILENCE = 0
+    SYNC = 1
+    PILOT = 2
+    KNOWN = 3  # a known symbol interspersed in a payload section
+    PAYLOAD = 4
+
+
+@dataclass(frozen=True)
+class SectionSpan:
+    """One section of the frame: symbol periods start..stop-1."""
+
+    kind: str
+    start: int
+    stop: int
+    text: str  # one line for people: what is sent, from where
+
+    @property
+    def length(self) -> int:
+        """Symbol periods in this section."""
+        return self.stop - self.start
+
+
+@dataclass(frozen=True, eq=False)
+class FrameLayout:
+    """A frame of K symbol periods sent from Nt antennas.
+
+    Attributes:
+        known: complex128, shape (K, Nt); transmitted vectors of every period that is not payload,
+            section power included; zero in payload and silence.
+        kind: uint8, shape (K,); a `Period` for each symbol period.
+        payload_index: int64, shape (Kp,); symbol period of each payload word, ascending.
+        payload_amplitude: float64, shape (Kp,); amplitude factor of each payload word (section power).
+        sections: the sections in order, as spans.
+    """
+
+    known: NDArray[np.complex128]
+    kind: NDArray[np.uint8]
+    payload_index: NDArray[np.int64]
+    payload_amplitude: NDArray[np.float64]
+    sections: tuple[SectionSpan, ...]
+
+    @property
+    def length(self) -> int:
+        """Symbol periods per frame, K."""
+        return int(self.kind.size)
+
+    @property
+    def antennas(self) -> int:
+        """Number of transmit antennas, Nt."""
+        return int(self.known.shape[1])
+
+    @property
+    def sync(self) -> SectionSpan:
+        """The first sync section: what the frame search looks for."""
+        return next(s for s in self.sections if s.kind == "sync")
