@@ -1,0 +1,1 @@
+"""Figures with their uncertainty; predictions from theory."""

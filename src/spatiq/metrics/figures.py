@@ -1,0 +1,169 @@
+"""From a batch's estimates and counts to the columns of the frame table."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+import scipy.stats
+from numpy.typing import NDArray
+
+from spatiq.link.description import Link
+from spatiq.metrics.frame_table import Mark
+from spatiq.metrics.intervals import clopper_pearson
+from spatiq.metrics.loss import local_loss
+from spatiq.metrics.prediction import predict_ber
+from spatiq.metrics.reference_following import Numbering
+from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.options import ReceiverOptions
+from spatiq.recording.recording import Recording
+
+Columns = dict[str, NDArray[Any]]
+_LOST_TRACK = (
+    1e-6  # probability that chance raises the payload's noise over the known symbols' so far
+)
+
+
+def fill_figures(
+    columns: Columns,
+    batch: FrameBatch,
+    sums: NDArray[np.float64],
+    numbering: Numbering,
+    link: Link,
+    recording: Recording,
+    options: ReceiverOptions,
+) -> None:
+    """Fill all derived columns.
+
+    Args:
+        columns: counts are in already.
+        batch: received frames.
+        sums: (F, 6, Nt) of `error_vectors`.
+        numbering: which frames' numbers are known.
+        link, recording, options: as measured with.
+    """
+    with np.errstate(divide="ignore", invalid="ignore"):
+        _synchronisation(columns, batch, link, recording)
+        _power(columns, batch, sums, link)
+        _error_vector(columns, sums, link)
+        _ratios(columns, options.confidence)
+        _prediction(columns, batch, link, options.confidence)
+    _marks(columns, batch, numbering, link)
+
+
+def _synchronisation(columns: Columns, batch: FrameBatch, link: Link, recording: Recording) -> None:
+    rate = recording.sample_rate
+    nominal = rate / link.symbol_rate_hz
+    columns["segment"][:] = batch.segment
+    columns["sync_metric"][:] = batch.sync_metric
+    columns["cfo_hz"][:] = batch.carrier_estimate * rate
+    columns["cfo_std_hz"][:] = np.sqrt(batch.frequency_var) / (2 * np.pi) * link.symbol_rate_hz
+    if link.carrier_hz:
+        columns["cfo_ppm"][:] = columns["cfo_hz"] / link.carrier_hz * 1e6
+    columns["clock_ppm"][:] = (batch.step / nominal - 1.0) * 1e6
+    columns["clock_std_ppm"][:] = np.sqrt(batch.step_var) / nominal * 1e6
+    columns["timing_std_samples"][:] = np.sqrt(batch.timing_var)
+    columns["clipped_samples"][:] = batch.clipped
+
+
+def _power(columns: Columns, batch: FrameBatch, sums: NDArray[np.float64], link: Link) -> None:
+    channels = batch.channel.shape[1]
+    periods = np.maximum(_periods(sums, link), 1)
+    gain = float(np.mean(link.layout.payload_amplitude**2))
+    measured = gain * sums[:, 4].sum(axis=1) / periods / channels
+    # The estimate's own error adds N0 |x_a|^2 / energy behind it to |H x|^2.
+    share = np.where(batch.antenna_energy > 0, sums[:, 5] / batch.antenna_energy, 0.0)
+    excess = gain * batch.noise * share.sum(axis=1) / periods
+    columns["signal_power"][:] = np.maximum(measured - excess, 0.0)
+    columns["noise_power"][:] = batch.noise
+    snr = columns["signal_power"] / batch.noise
+    columns["snr_db"][:] = 10 * np.log10(snr)
+    freedom = channels * periods
+    spread = np.sqrt(1.0 / freedom + 2.0 / (snr * freedom))
+    columns["snr_std_db"][:] = 10 / np.log(10) * spread
+
+
+def _periods(sums: NDArray[np.float64], link: Link) -> NDArray[np.float64]:
+    """Payload periods that entered the sums; a period counts once for each active antenna."""
+    active = np.mean(np.count_nonzero(link.codebook.vectors, axis=1))
+    return np.asarray(sums[:, 3].sum(axis=1) / active)
+
+
+def _error_vector(columns: Columns, sums: NDArray[np.float64], link: Link) -> None:
+    active = np.mean(np.count_nonzero(link.codebook.vectors, axis=1))
+    power = float(np.mean(np.abs(link.codebook.constellation.points) ** 2))
+    columns["evm_error_energy"][:] = sums[:, 0].sum(axis=1) / active
+    columns["evm_reference_energy"][:] = sums[:, 1].sum(axis=1) / active
+    columns["equalised_error_energy"][:] = sums[:, 2].sum(axis=1) / active
+    columns["equalised_reference_energy"][:] = power * _periods(sums, link)
+    for kind in ("evm", "equalised"):
+        error = columns[f"{kind}_error_energy"]
+        ratio = np.sqrt(error / columns[f"{kind}_reference_energy"])
+        name = "evm" if kind == "evm" else "equalised_evm"
+        columns[f"{name}_percent"][:] = 100 * ratio
+        columns[f"{name}_db"][:] = 20 * np.log10(ratio)
+
+
+def _ratios(columns: Columns, confidence: float) -> None:
+    """Ratios of counts with exact binomial intervals; missing where nothing was compared."""
+    columns["ber"][:] = columns["bit_errors"] / columns["bits_compared"]
+    columns["ber_spatial"][:] = columns["spatial_bit_errors"] / columns["spatial_bits_compared"]
+    columns["ber_signal"][:] = columns["signal_bit_errors"] / columns["signal_bits_compared"]
+    two_step = columns["two_step_bit_errors"].astype(float)
+    two_step[two_step < 0] = np.nan
+    columns["two_step_ber"][:] = two_step / columns["bits_compared"]
+    right = columns["periods_compared"] - columns["antenna_errors"]
+    for name, errors, trials in (
+        ("ber", columns["bit_errors"], columns["bits_compared"]),
+        ("antenna_error_ratio", columns["antenna_errors"], columns["periods_compared"]),
+        ("symbol_error_ratio", columns["symbol_errors"], right),
+    ):
+        columns[name][:] = errors / trials
+        low, high = clopper_pearson(errors, trials, confidence)
+        columns[f"{name}_low"][:] = low
+        columns[f"{name}_high"][:] = high
+
+
+def channel_error_variance(batch: FrameBatch) -> NDArray[np.float64]:
+    """Variance of each channel coefficient's estimate, (F, Nt): N0 over the energy behind it.
+
+    Source: M. Biguesh and A. B. Gershman, IEEE Trans. Signal Process. 54(3), 2006.
+    """
+    energy = batch.antenna_energy
+    return np.where(energy > 0, batch.noise[:, None] / np.maximum(energy, 1e-300), 0.0)
+
+
+def _prediction(columns: Columns, batch: FrameBatch, link: Link, confidence: float) -> None:
+    amplitude = float(np.sqrt(np.mean(link.layout.payload_amplitude**2)))
+    channel = batch.channel * amplitude
+    variance = channel_error_variance(batch) * amplitude**2
+    predicted = predict_ber(channel, batch.noise, variance, link.codebook)
+    columns["predicted_ber"][:] = predicted.ber
+    columns["predicted_ber_spatial"][:] = predicted.spatial
+    columns["predicted_ber_signal"][:] = predicted.signal
+    some = columns["bit_errors"] > 0
+    if np.any(some):
+        columns["implementation_loss_db"][some] = local_loss(
+            channel[some],
+            batch.noise[some],
+            variance[some],
+            link.codebook,
+            columns["bit_errors"][some],
+            columns["bits_compared"][some],
+        )
+
+
+def _marks(columns: Columns, batch: FrameBatch, numbering: Numbering, link: Link) -> None:
+    marks = np.zeros(batch.count, np.uint32)
+    marks[batch.clipped > 0] |= np.uint32(Mark.CLIPPED)
+    marks[~numbering.resolved] |= np.uint32(Mark.REFERENCE_UNKNOWN)
+    marks[columns["crc_ok"] == 0] |= np.uint32(Mark.CRC_FAILED)
+    channels = batch.channel.shape[1]
+    header = max(batch.header_freedom, 1)
+    payload = channels * link.layout.payload_index.size
+    limit = scipy.stats.f.isf(_LOST_TRACK, 2 * payload, 2 * header)
+    # Below an EVM of -50 dB both are rounding and pulse truncation, which no chance law describes.
+    floor = 1e-5 * columns["signal_power"]
+    expected = np.maximum(batch.header_noise, floor)
+    marks[batch.noise > limit * expected] |= np.uint32(Mark.TRACKING_LOST)
+    columns["marks"][:] = marks

@@ -1,0 +1,153 @@
+"""The frame table: every per-frame figure with its name, type, unit and meaning, stated once.
+
+Results files, tables and documents are derived from `COLUMNS`. To add a figure: add a `Column` here
+and fill it in `measuring.py`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from enum import IntFlag
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spatiq.receiver.frame_batch import LostFrame
+
+
+class Mark(IntFlag):
+    """Why a found frame deserves a second look. Bits of the column `marks`."""
+
+    NONE = 0
+    CLIPPED = 1  # samples at the converter's full scale inside the frame
+    REFERENCE_UNKNOWN = 2  # the position in the reference sequence could not be told
+    CRC_FAILED = 4
+    TRACKING_LOST = 8  # the carrier-phase or timing track left its expected error
+
+
+@dataclass(frozen=True)
+class Column:
+    """One column of the frame table."""
+
+    name: str
+    dtype: str
+    unit: str
+    meaning: str
+
+
+_INT_MISSING = "-1 when unknown"
+
+COLUMNS: tuple[Column, ...] = (
+    Column("frame", "i8", "", "running index of the frame in the recording, from 0"),
+    Column("segment", "i4", "", "index of the contiguous run of samples it lies in"),
+    Column("start_sample", "f8", "samples", "centre of its first symbol, per-channel file index"),
+    Column("time_s", "f8", "s", "the same since the recording's first sample, gaps counted"),
+    Column("frame_number", "i8", "", f"number the transmitter gave it; {_INT_MISSING}"),
+    Column("marks", "u4", "", "bit flags: see the marks table"),
+    Column("sync_metric", "f8", "", "normalised correlation with the sync section, 0 to 1"),
+    Column("cfo_hz", "f8", "Hz", "carrier offset"),
+    Column("cfo_std_hz", "f8", "Hz", "its standard deviation, from the frame's own residuals"),
+    Column("cfo_ppm", "f8", "ppm", "carrier offset relative to the carrier; missing without one"),
+    Column("clock_ppm", "f8", "ppm", "symbol clock offset: positive when symbols are too long"),
+    Column("clock_std_ppm", "f8", "ppm", "its standard deviation"),
+    Column("timing_std_samples", "f8", "samples", "standard deviation of start_sample"),
+    Column("signal_power", "f8", "", "mean over payload of |h s|^2 / Nr, full scale squared"),
+    Column("noise_power", "f8", "", "N0, per complex component after the matched filter"),
+    Column("snr_db", "f8", "dB", "signal_power over noise_power"),
+    Column("snr_std_db", "f8", "dB", "its standard deviation"),
+    Column("clipped_samples", "i8", "samples", "samples at full scale inside the frame"),
+    Column("crc_ok", "i1", "", "1 passed, 0 failed, -1 no CRC in the link"),
+    Column("bits_compared", "i8", "bits", "payload bits with a known value"),
+    Column("bit_errors", "i8", "bits", "of these, wrong"),
+    Column("spatial_bits_compared", "i8", "bits", "of bits_compared, those that chose the antenna"),
+    Column("spatial_bit_errors", "i8", "bits", "of these, wrong"),
+    Column("signal_bits_compared", "i8", "bits", "of bits_compared, those in the symbol"),
+    Column("signal_bit_errors", "i8", "bits", "of these, wrong"),
+    Column("ber", "f8", "", "bit error ratio; missing when nothing was compared"),
+    Column("ber_low", "f8", "", "lower end of its interval"),
+    Column("ber_high", "f8", "", "upper end of its interval; the figure to quote at zero errors"),
+    Column("ber_spatial", "f8", "", "bit error ratio of the spatial bits"),
+    Column("ber_signal", "f8", "", "bit error ratio of the signal bits"),
+    Column("periods_compared", "i8", "symbol periods", "payload periods whose word is known"),
+    Column("antenna_errors", "i8", "symbol periods", "of these, wrong antenna"),
+    Column("symbol_errors", "i8", "symbol periods", "right antenna, wrong symbol"),
+    Column("antenna_error_ratio", "f8", "", "antenna_errors / periods_compared"),
+    Column("antenna_error_ratio_low", "f8", "", "lower end of its interval"),
+    Column("antenna_error_ratio_high", "f8", "", "upper end of its interval"),
+    Column("symbol_error_ratio", "f8", "", "symbol_errors / periods with the right antenna"),
+    Column("symbol_error_ratio_low", "f8", "", "lower end of its interval"),
+    Column("symbol_error_ratio_high", "f8", "", "upper end of its interval"),
+    Column("evm_data_aided", "u1", "", "1: against the known symbols; 0: against the decided ones"),
+    Column("evm_percent", "f8", "%", "EVM rms at the receive antennas"),
+    Column("evm_db", "f8", "dB", "the same in dB"),
+    Column("evm_error_energy", "f8", "", "sum of |y - h s|^2: add over frames to pool EVM"),
+    Column("evm_reference_energy", "f8", "", "sum of |h s|^2"),
+    Column("equalised_evm_percent", "f8", "%", "EVM rms after projection on the antenna's channel"),
+    Column("equalised_evm_db", "f8", "dB", "the same in dB"),
+    Column("equalised_error_energy", "f8", "", "sum of |z - s|^2: add over frames to pool"),
+    Column("equalised_reference_energy", "f8", "", "constellation power times symbol periods"),
+    Column(
+        "predicted_ber", "f8", "", "BER of a maximum-likelihood receiver on this channel, noise"
+    ),
+    Column("predicted_ber_spatial", "f8", "", "the same for the spatial bits"),
+    Column("predicted_ber_signal", "f8", "", "the same for the signal bits"),
+    Column("implementation_loss_db", "f8", "dB", "SNR between measured and predicted BER"),
+    Column(
+        "two_step_bit_errors", "i8", "bits", "wrong bits with the two-step detector; -1 not run"
+    ),
+    Column("two_step_ber", "f8", "", "bit error ratio of the two-step detector"),
+)
+
+COLUMN_NAMES = tuple(c.name for c in COLUMNS)
+
+
+@dataclass
+class MeasuredFrames:
+    """A batch of F measured frames.
+
+    Attributes:
+        columns: one array of shape (F,) for each of `COLUMN_NAMES`.
+        confusion: int64, shape (F, A, A); row = antenna set sent, column = antenna set decided.
+        channel: complex128, shape (F, Nr, Nt); estimated channel, phase at the centre of the known symbols;
+            the columns of antennas that the link never uses are zero.
+        antenna_evm_percent: float64, shape (F, Nt); EVM of the periods each antenna sent, NaN if none.
+        antenna_power: float64, shape (F, Nt); ||h_a||^2 / Nr.
+        lost: frames found to be lost before or between these.
+        symbols: complex64, shape (F, Kp, Nr); received payload vectors, carrier removed; or None.
+        channel_error_variance: float64, shape (F, Nt); variance of each coefficient of `channel`.
+        antenna_error_energy, antenna_reference_energy: float64, shape (F, Nt); the sums behind
+            antenna_evm_percent, to be added over frames.
+        words_decided: int64, shape (F, Kp).
+        words_sent: int64, shape (F, Kp); -1 where unknown.
+    """
+
+    columns: dict[str, NDArray[Any]]
+    confusion: NDArray[np.int64]
+    channel: NDArray[np.complex128]
+    antenna_evm_percent: NDArray[np.float64]
+    antenna_power: NDArray[np.float64]
+    words_decided: NDArray[np.int64]
+    words_sent: NDArray[np.int64]
+    symbols: NDArray[np.complex64] | None = None
+    channel_error_variance: NDArray[np.float64] | None = None
+    antenna_error_energy: NDArray[np.float64] | None = None
+    antenna_reference_energy: NDArray[np.float64] | None = None
+    lost: list[LostFrame] = field(default_factory=list)
+
+    @property
+    def count(self) -> int:
+        """Number of frames, F."""
+        return int(self.columns["frame"].size)
+
+
+def empty_columns(count: int) -> dict[str, NDArray[Any]]:
+    """All columns for `count` frames: NaN in floats, 0 in counts, -1 in the int columns that say so."""
+    columns: dict[str, NDArray[Any]] = {}
+    for c in COLUMNS:
+        if c.dtype.startswith("f"):
+            columns[c.name] = np.full(count, np.nan, c.dtype)
+        else:
+            value = -1 if "-1" in c.meaning else 0
+            columns[c.name] = np.full(count, value, c.dtype)
+    return columns

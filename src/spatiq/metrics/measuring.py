@@ -1,0 +1,223 @@
+"""Measuring: received frames in, figures out.
+
+receive -> unpacking (words -> bits -> fields) -> frame numbers -> comparison -> figures
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spatiq.link.description import Link
+from spatiq.metrics.figures import channel_error_variance, fill_figures
+from spatiq.metrics.frame_table import MeasuredFrames, empty_columns
+from spatiq.metrics.measuring_kernels import compare_words, error_vectors
+from spatiq.metrics.reference_following import Numbering, ReferenceFollower
+from spatiq.receiver.chain import Progress, Stage, receive
+from spatiq.receiver.frame_batch import FrameBatch, LostFrame
+from spatiq.receiver.link_tables import sparse_vectors
+from spatiq.receiver.options import ReceiverOptions
+from spatiq.recording.recording import Recording
+
+
+def measure(
+    recording: Recording,
+    link: Link,
+    options: ReceiverOptions | None = None,
+    *,
+    stages: Sequence[Stage] | None = None,
+    progress: Callable[[Progress], None] | None = None,
+) -> Iterator[MeasuredFrames]:
+    """Measured frames of a recording, batch by batch, in the order of time.
+
+    Args:
+        recording: opened recording.
+        link: link description.
+        options: how to receive.
+        stages: receiver stages of one's own, see `spatiq.receiver.chain`.
+        progress: called after each batch.
+
+    Raises:
+        InputError: when the link cannot be received from this recording.
+    """
+    options = options or ReceiverOptions()
+    measuring = Measuring(recording, link, options)
+    for batch in receive(recording, link, options, stages=stages, progress=progress):
+        yield measuring(batch)
+
+
+@dataclass
+class Measuring:
+    """The stage after the receiver; knows the payload, and uses it to count, never to receive."""
+
+    recording: Recording
+    link: Link
+    options: ReceiverOptions
+    _found: int = 0
+    _follower: ReferenceFollower = field(init=False)
+    _previous: tuple[int, float] | None = None
+
+    def __post_init__(self) -> None:
+        """Prepare what does not change from batch to batch."""
+        link = self.link
+        samples_per_symbol = self.recording.sample_rate / link.symbol_rate_hz
+        period = link.period_symbols
+        self._follower = ReferenceFollower(
+            link.payload, period * samples_per_symbol if period is not None else None
+        )
+        self._words = sparse_vectors(link.codebook.vectors)
+        self._spatial = np.tile(link.codebook.spatial_bits, link.layout.payload_index.size)
+        payload = link.payload
+        static = payload.known_mask.copy()
+        for span in payload.fields:
+            if span.is_running:
+                static[span.start : span.stop] = False
+        self._static = static
+
+    def __call__(self, batch: FrameBatch) -> MeasuredFrames:
+        """Figures of a batch."""
+        start = batch.first_sample + batch.t0
+        position = start + self._global_shift(batch)
+        columns = empty_columns(batch.count)
+        columns["frame"][:] = self._found + np.arange(batch.count)
+        columns["start_sample"][:] = start
+        first = self.recording.segments[0].global_index
+        columns["time_s"][:] = (position - first) / self.recording.sample_rate
+        self._found += batch.count
+        bits = self.link.codebook.words_to_bits(batch.words)
+        plain = self.link.payload.descramble(bits)
+        crc = self.link.payload.crc_ok(plain)
+        numbering = self._follower.number(plain, crc, position)
+        sent = self._sent_words(numbering)
+        self._count_bits(columns, batch, plain, numbering)
+        columns["frame_number"][:] = numbering.numbers
+        if crc is not None:
+            columns["crc_ok"][:] = crc
+        confusion, sums = self._compare(columns, batch, sent)
+        fill_figures(columns, batch, sums, numbering, self.link, self.recording, self.options)
+        lost = batch.lost + self._skipped(batch, columns, position)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            antenna_evm = 100.0 * np.sqrt(sums[:, 0] / sums[:, 1])
+        return MeasuredFrames(
+            columns=columns,
+            confusion=confusion,
+            channel=batch.channel,
+            antenna_evm_percent=antenna_evm,
+            antenna_power=np.mean(np.abs(batch.channel) ** 2, axis=1),
+            lost=lost,
+            symbols=batch.symbols if self.options.keep_symbols else None,
+            channel_error_variance=channel_error_variance(batch),
+            antenna_error_energy=sums[:, 0],
+            antenna_reference_energy=sums[:, 1],
+            words_decided=batch.words,
+            words_sent=sent,
+        )
+
+    def _global_shift(self, batch: FrameBatch) -> NDArray[np.float64]:
+        """What to add to file samples to get places in the original stream, gaps counted."""
+        shift = [s.global_index - s.start for s in self.recording.segments]
+        return np.asarray(shift, np.float64)[batch.segment]
+
+    def _sent_words(self, numbering: Numbering) -> NDArray[np.int64]:
+        """Words as sent, (F, Kp); -1 where any bit of the word is unknown."""
+        payload, codebook = self.link.payload, self.link.codebook
+        count = numbering.numbers.size
+        words = np.full((count, self.link.layout.payload_index.size), -1, np.int64)
+        reference = payload.reference(np.maximum(numbering.numbers, 0))
+        known = np.where(numbering.resolved[:, None], payload.reference_mask, self._static)
+        scrambler = payload.scrambler
+        if scrambler is not None:
+            reference = scrambler.scramble(reference)
+            if not hasattr(scrambler, "sequence"):
+                # A self-synchronising scrambler spreads an unknown bit over all that follow.
+                known = np.logical_and.accumulate(known, axis=1)
+        whole = known.reshape(*words.shape, codebook.bits).all(axis=2)
+        return np.where(whole, codebook.bits_to_words(reference), words)
+
+    def _count_bits(
+        self,
+        columns: dict[str, NDArray[np.generic]],
+        batch: FrameBatch,
+        plain: NDArray[np.uint8],
+        numbering: Numbering,
+    ) -> None:
+        payload = self.link.payload
+        reference = payload.reference(np.maximum(numbering.numbers, 0))
+        counted = np.where(numbering.resolved[:, None], payload.known_mask, self._static)
+        wrong = (plain != reference) & counted
+        columns["bits_compared"][:] = counted.sum(axis=1)
+        columns["bit_errors"][:] = wrong.sum(axis=1)
+        columns["spatial_bits_compared"][:] = counted[:, self._spatial].sum(axis=1)
+        columns["spatial_bit_errors"][:] = wrong[:, self._spatial].sum(axis=1)
+        columns["signal_bits_compared"][:] = counted[:, ~self._spatial].sum(axis=1)
+        columns["signal_bit_errors"][:] = wrong[:, ~self._spatial].sum(axis=1)
+        if batch.words_two_step is not None:
+            bits = self.link.codebook.words_to_bits(batch.words_two_step)
+            wrong = (payload.descramble(bits) != reference) & counted
+            columns["two_step_bit_errors"][:] = wrong.sum(axis=1)
+
+    def _compare(
+        self,
+        columns: dict[str, NDArray[np.generic]],
+        batch: FrameBatch,
+        sent: NDArray[np.int64],
+    ) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+        """Confusion matrices (F, A, A) and error-vector sums (F, 6, Nt)."""
+        codebook = self.link.codebook
+        sets = len(codebook.antenna_sets)
+        confusion = np.zeros((batch.count, sets, sets), np.int64)
+        sums = np.zeros((batch.count, 6, codebook.antennas))
+        counts = np.zeros(3, np.int64)
+        for i in range(batch.count):
+            compare_words(
+                batch.words[i],
+                sent[i],
+                codebook.set_index,
+                codebook.symbol_index,
+                confusion[i],
+                counts,
+            )
+            for name, value in zip(_COUNT_COLUMNS, counts, strict=True):
+                columns[name][i] = value
+            aided = counts[0] > 0
+            columns["evm_data_aided"][i] = aided
+            error_vectors(
+                batch.symbols[i],
+                batch.channel[i],
+                sent[i] if aided else batch.words[i],
+                self._words.pointer,
+                self._words.antenna,
+                self._words.value,
+                sums[i],
+            )
+        return confusion, sums
+
+    def _skipped(
+        self,
+        batch: FrameBatch,
+        columns: dict[str, NDArray[np.generic]],
+        position: NDArray[np.float64],
+    ) -> list[LostFrame]:
+        """Frames that the numbers say were sent in between; with a frame period, time says so."""
+        lost: list[LostFrame] = []
+        for i, number in enumerate(columns["frame_number"].tolist()):
+            if number < 0:
+                continue
+            if self._previous is not None and self.link.period_symbols is None:
+                before, at = self._previous
+                for n in range(before + 1, min(number, before + 1 + _MOST_SKIPPED)):
+                    share = (n - before) / (number - before)
+                    between = at + share * (position[i] - at)
+                    shift = position[i] - columns["start_sample"][i]
+                    lost.append(
+                        LostFrame(int(batch.segment[i]), float(between - shift), n, "not found")
+                    )
+            self._previous = (number, float(position[i]))
+        return lost
+
+
+_COUNT_COLUMNS = ("periods_compared", "antenna_errors", "symbol_errors")
+_MOST_SKIPPED = 100_000  # a restarted counter must not fill the memory

@@ -1,0 +1,77 @@
+"""Kernels of measuring: bare arrays in and out."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from spatiq.kernels import C64, C128, F64, I64, kernel
+
+
+@kernel
+def compare_words(
+    decided: I64, sent: I64, set_index: I64, symbol_index: I64, confusion: I64, counts: I64
+) -> None:
+    """Compare the words of one frame.
+
+    Args:
+        decided, sent: (Kp,); sent is -1 where unknown.
+        set_index, symbol_index: (C,); of each word.
+        confusion: (A, A); added to, row = set sent.
+        counts: (3,); periods compared, wrong antenna, right antenna but wrong symbol; filled.
+    """
+    counts[:] = 0
+    for k in range(decided.size):
+        if sent[k] < 0:
+            continue
+        row, column = set_index[sent[k]], set_index[decided[k]]
+        confusion[row, column] += 1
+        counts[0] += 1
+        if row != column:
+            counts[1] += 1
+        elif symbol_index[sent[k]] != symbol_index[decided[k]]:
+            counts[2] += 1
+
+
+@kernel
+def error_vectors(
+    y: C64, channel: C128, words: I64, pointer: I64, antenna: I64, value: C64, sums: F64
+) -> None:
+    """Energies of error and reference of one frame, per antenna.
+
+    A period counts for every antenna active in it.
+
+    Args:
+        y: complex64 (Kp, Nr); carrier and phase removed.
+        channel: complex128 (Nr, Nt).
+        words: (Kp,); reference word of each period, -1 to leave it out.
+        pointer, antenna, value: codeword vectors, sparse.
+        sums: (6, Nt) float64, filled: error energy, reference energy, equalised error energy (over
+            the received energy of a unit symbol), equalised periods, received energy, sent energy.
+    """
+    sums[:] = 0.0
+    channels = y.shape[1]
+    for k in range(words.size):
+        c = words[k]
+        if c < 0:
+            continue
+        error, reference, projected, gain = 0.0, 0.0, 0j, 0.0
+        first = value[pointer[c]]
+        for r in range(channels):
+            v = 0j
+            for j in range(pointer[c], pointer[c + 1]):
+                v += channel[r, antenna[j]] * value[j]
+            e = y[k, r] - v
+            error += e.real * e.real + e.imag * e.imag
+            reference += v.real * v.real + v.imag * v.imag
+            unit = v / first
+            projected += np.conj(unit) * y[k, r]
+            gain += unit.real * unit.real + unit.imag * unit.imag
+        deviation = projected / gain - first if gain > 0.0 else 0j
+        for j in range(pointer[c], pointer[c + 1]):
+            a = antenna[j]
+            sums[0, a] += error
+            sums[1, a] += reference
+            sums[2, a] += deviation.real * deviation.real + deviation.imag * deviation.imag
+            sums[3, a] += 1.0
+            sums[5, a] += value[j].real * value[j].real + value[j].imag * value[j].imag
+        sums[4, antenna[pointer[c]]] += reference

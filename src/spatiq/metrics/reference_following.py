@@ -1,0 +1,173 @@
+"""Which number did the transmitter give each frame? Counter, running reference and time tell.
+
+The usual case costs one comparison: the next frame has the next number (or the number that the frame
+period says). Where that does not fit, the frame is looked at by itself: its counter if its CRC
+passes, or the place of its bits in the running reference.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+import scipy.stats
+from numpy.typing import NDArray
+
+from spatiq.link.payload import PayloadFormat
+from spatiq.link.payload_fields import CounterSource, FieldSpan, PrbsSource
+from spatiq.metrics.reference_search import SIGNIFICANCE, PrbsSearch, agreement
+
+# A number that neighbours or time suggest needs less evidence than one found by searching.
+_CONFIRMATION = 1e-3
+
+
+@dataclass(frozen=True, eq=False)
+class Numbering:
+    """Frame numbers, int64 (F,), -1 where unknown, and whether each is known, bool (F,)."""
+
+    numbers: NDArray[np.int64]
+    resolved: NDArray[np.bool_]
+
+
+@dataclass
+class ReferenceFollower:
+    """Numbers frames in the order of time; keeps the last one between batches.
+
+    Attributes:
+        payload: what the payload's bits are.
+        period: frame period in samples; None when frames may come at any time.
+    """
+
+    payload: PayloadFormat
+    period: float | None
+    _last: tuple[int, float] | None = None
+    _dependent: NDArray[np.int64] = field(init=False)
+    _most_wrong: int = field(init=False)
+    _counter: FieldSpan | None = field(init=False)
+    _search: PrbsSearch | None = field(init=False)
+    _running: FieldSpan | None = field(init=False)
+
+    def __post_init__(self) -> None:
+        """Note which bits depend on the frame number."""
+        spans = [
+            s for s in self.payload.fields if s.is_running or isinstance(s.source, CounterSource)
+        ]
+        bits = [np.arange(s.start, s.stop) for s in spans]
+        self._dependent = np.concatenate(bits) if bits else np.zeros(0, np.int64)
+        count = self._dependent.size
+        self._most_wrong = int(scipy.stats.binom.ppf(_CONFIRMATION, count, 0.5)) - 1
+        self._counter = next((s for s in spans if isinstance(s.source, CounterSource)), None)
+        self._running = next((s for s in spans if isinstance(s.source, PrbsSource)), None)
+        self._search = None
+
+    def number(
+        self,
+        plain: NDArray[np.uint8],
+        crc_ok: NDArray[np.bool_] | None,
+        position: NDArray[np.float64],
+    ) -> Numbering:
+        """Number a batch.
+
+        Args:
+            plain: descrambled bits as decided, (F, n_bits).
+            crc_ok: (F,), or None when the link has no CRC.
+            position: global sample position of each frame's start, (F,), ascending.
+        """
+        count = plain.shape[0]
+        numbers = np.full(count, -1, np.int64)
+        if not self._dependent.size:
+            return Numbering(numbers, np.ones(count, np.bool_))
+        i = 0
+        while i < count:
+            i = self._follow(plain, position, numbers, i)
+            if i < count:
+                numbers[i] = self._resolve(plain, crc_ok, position, i)
+                if numbers[i] >= 0:
+                    self._last = (int(numbers[i]), float(position[i]))
+                i += 1
+        return Numbering(numbers, numbers >= 0)
+
+    def _expected(self, position: NDArray[np.float64]) -> NDArray[np.int64]:
+        """Numbers after the last known one: by the period, else one more each time."""
+        assert self._last is not None
+        number, start = self._last
+        if self.period is None:
+            return number + 1 + np.arange(position.size, dtype=np.int64)
+        steps = np.rint((position - start) / self.period).astype(np.int64)
+        return number + np.maximum(steps, 1)
+
+    def _follow(
+        self,
+        plain: NDArray[np.uint8],
+        position: NDArray[np.float64],
+        numbers: NDArray[np.int64],
+        i: int,
+    ) -> int:
+        """Number frames from i on while expectation fits; returns the first that it does not fit."""
+        if self._last is None:
+            return i
+        expected = self._expected(position[i:])
+        reference = self.payload.reference(expected)[:, self._dependent]
+        wrong = np.count_nonzero(reference != plain[i:, self._dependent], axis=1)
+        misfit = np.flatnonzero(wrong > self._most_wrong)
+        fits = int(misfit[0]) if misfit.size else expected.size
+        numbers[i : i + fits] = expected[:fits]
+        if fits:
+            self._last = (int(expected[fits - 1]), float(position[i + fits - 1]))
+        return i + fits
+
+    def _resolve(
+        self,
+        plain: NDArray[np.uint8],
+        crc_ok: NDArray[np.bool_] | None,
+        position: NDArray[np.float64],
+        i: int,
+    ) -> int:
+        """Number of one frame by its own evidence, else by time; -1 when there is none."""
+        by_counter = self._by_counter(plain, i)
+        if by_counter is not None:
+            trusted = crc_ok is not None and bool(crc_ok[i])
+            if self._agrees(by_counter, plain[i]) and (trusted or self._running is not None):
+                return by_counter
+            following = i + 1 < plain.shape[0] and self._by_counter(plain, i + 1)
+            if self._running is None and following == by_counter + 1:
+                return by_counter
+        found = self._by_search(plain[i])
+        if found is not None:
+            return found
+        if self._last is not None and self.period is not None:
+            return int(self._expected(position[i : i + 1])[0])
+        return -1
+
+    def _agrees(self, number: int, bits: NDArray[np.uint8]) -> bool:
+        dependent = self._dependent
+        if self._running is not None:
+            dependent = np.arange(self._running.start, self._running.stop)
+        reference = self.payload.reference(np.array([number]))[0, dependent]
+        wrong = int(np.count_nonzero(reference != bits[dependent]))
+        return self._running is None or agreement(wrong, dependent.size) < SIGNIFICANCE
+
+    def _by_counter(self, plain: NDArray[np.uint8], i: int) -> int | None:
+        """Frame number that the counter shows, lifted past the last known one."""
+        if self._counter is None or not isinstance(self._counter.source, CounterSource):
+            return None
+        values = self.payload.counter(plain[i : i + 1])
+        if values is None:
+            return None
+        modulus = 1 << self._counter.width
+        return self._lift((int(values[0]) - self._counter.source.start) % modulus, modulus)
+
+    def _lift(self, number: int, modulus: int) -> int:
+        """Smallest number of that residue after the last known one."""
+        if self._last is not None and number <= self._last[0]:
+            number += -(-(self._last[0] + 1 - number) // modulus) * modulus
+        return number
+
+    def _by_search(self, bits: NDArray[np.uint8]) -> int | None:
+        span = self._running
+        if span is None or not isinstance(span.source, PrbsSource):
+            return None
+        if self._search is None:
+            self._search = PrbsSearch(span.source.prbs, span.width)
+        found = self._search.frame_number(bits[span.start : span.stop])
+        return None if found is None else self._lift(found, self._search.modulus)

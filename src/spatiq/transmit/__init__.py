@@ -1,0 +1,1 @@
+"""Reference waveforms; channel and front-end simulation."""
