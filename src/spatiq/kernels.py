@@ -17,6 +17,7 @@ F32 = NDArray[np.float32]
 F64 = NDArray[np.float64]
 C64 = NDArray[np.complex64]
 C128 = NDArray[np.complex128]
+I32 = NDArray[np.int32]
 I64 = NDArray[np.int64]
 U8 = NDArray[np.uint8]
 
@@ -48,10 +49,8 @@ def kernel(function: F) -> F:
     return compiled
 
 
-def comparing_kernel(function: F) -> F:
-    """The same for loops that search a minimum: these vectorise only when NaN is ruled out.
-
-    A NaN among the inputs then yields some index, never a fault: callers see to finite samples.
-    """
-    compiled: F = numba.njit(cache=_CACHE, nogil=True, fastmath=True)(function)
+def inlined(function: F) -> F:
+    """A piece of a kernel that runs once per symbol: entered into its caller, for handing arrays
+    over would cost as much as its work."""
+    compiled: F = numba.njit(nogil=True, forceinline=True, fastmath=FAST_ARITHMETIC)(function)
     return compiled

@@ -14,11 +14,19 @@ from spatiq.results.text import show_results
 _LEAST_WIDTH = 140
 
 
+class _PipeConsole(Console):
+    """A console that leaves a closed pipe to the command's guard; its own way is exit code 1."""
+
+    def on_broken_pipe(self) -> None:
+        """Called while the exception is handled: pass it on."""
+        raise BrokenPipeError
+
+
 def print_results(results: Results, *, rows: int, as_json: bool) -> None:
     """Print the tables, or the summary as JSON and nothing else."""
     if as_json:
         sys.stdout.write(json_text(results.summary) + "\n")
         return
-    console = Console(highlight=False, markup=False, emoji=False)
+    console = _PipeConsole(highlight=False, markup=False, emoji=False)
     console.width = max(console.width, _LEAST_WIDTH)
     show_results(results, console, rows=rows)

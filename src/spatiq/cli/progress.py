@@ -11,7 +11,8 @@ from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 
 _SHOWN_AFTER_S = 1.0
 
-_FIRST_TEXT = "loading (the first run compiles for this machine, which takes up to a minute)"
+# Nothing is reported before the first batch; on a new machine most of that time is compiling.
+_FIRST_TEXT = "starting (the first run compiles: half a minute)"
 
 
 class Report(Protocol):
@@ -44,7 +45,7 @@ class ProgressBar:
         console = Console(stderr=True, highlight=False, markup=False)
         self._progress = Progress(
             TextColumn("{task.description}", markup=False),
-            BarColumn(),
+            BarColumn(bar_width=20),
             TextColumn("{task.percentage:3.0f} %", markup=False),
             TextColumn("{task.fields[note]}", markup=False),
             TimeRemainingColumn(),

@@ -47,7 +47,7 @@ def fill_figures(
         _power(columns, batch, sums, link)
         _error_vector(columns, sums, link)
         _ratios(columns, options.confidence)
-        _prediction(columns, batch, link, options.confidence)
+        _prediction(columns, batch, link)
     _marks(columns, batch, numbering, link)
 
 
@@ -133,7 +133,7 @@ def channel_error_variance(batch: FrameBatch) -> NDArray[np.float64]:
     return np.where(energy > 0, batch.noise[:, None] / np.maximum(energy, 1e-300), 0.0)
 
 
-def _prediction(columns: Columns, batch: FrameBatch, link: Link, confidence: float) -> None:
+def _prediction(columns: Columns, batch: FrameBatch, link: Link) -> None:
     amplitude = float(np.sqrt(np.mean(link.layout.payload_amplitude**2)))
     channel = batch.channel * amplitude
     variance = channel_error_variance(batch) * amplitude**2
@@ -150,6 +150,7 @@ def _prediction(columns: Columns, batch: FrameBatch, link: Link, confidence: flo
             link.codebook,
             columns["bit_errors"][some],
             columns["bits_compared"][some],
+            predicted.ber[some],
         )
 
 

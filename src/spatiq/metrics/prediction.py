@@ -64,6 +64,8 @@ class Prediction:
         ber: wrong bits over bits.
         spatial: wrong spatial bits over spatial bits; NaN when the scheme has none.
         signal: wrong signal bits over signal bits; NaN when the scheme has none.
+
+    Where one of `spatial` and `signal` is below 1e-7 of the other, it is not resolved and may be 0.
     """
 
     ber: NDArray[np.float64]
@@ -173,7 +175,9 @@ def _checked(h: ArrayLike, n0: ArrayLike, error_variance: ArrayLike, codebook: C
             raise InputError("prediction", field, f"shape {array.shape}", f"{shape}")
     root = np.sqrt(np.where(noise > 0.0, noise, np.nan))
     deviation = np.sqrt(np.where(variance >= 0.0, variance, np.nan)) / root[:, None]
-    with np.errstate(over="ignore"):  # what single precision cannot hold counts as not finite
+    with np.errstate(
+        over="ignore", invalid="ignore"
+    ):  # what single precision cannot hold counts as not finite
         scaled = (channels / root[:, None, None]).astype(np.complex64)
         deviation32 = deviation.astype(np.float32)
     usable = np.isfinite(scaled).all(axis=(1, 2)) & np.isfinite(deviation32).all(axis=1)

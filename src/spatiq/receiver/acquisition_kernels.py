@@ -10,7 +10,13 @@ from spatiq.receiver.matched_filter import sample_periods
 
 @kernel
 def correlate_known(
-    y: F32, periods: I64, carrier: float, origin: float, pointer: I64, antenna: I64, value: C64,
+    y: F32,
+    periods: I64,
+    carrier: float,
+    origin: float,
+    pointer: I64,
+    antenna: I64,
+    value: C64,
     out: C128,
 ) -> None:
     """Z = X^H D_f^H Y into out complex128 (Nt, Nr); y float32 (n, 2, Nr), carrier in cycles/symbol."""
@@ -68,8 +74,18 @@ def parabola_top(left: float, centre: float, right: float) -> float:
 
 @kernel
 def grid_search(
-    planes: F32, t0: float, step: float, grid: F64, periods: I64, pointer: I64, antenna: I64,
-    value: C64, root: C128, origin: float, taps: F32, phases: int,
+    planes: F32,
+    t0: float,
+    step: float,
+    grid: F64,
+    periods: I64,
+    pointer: I64,
+    antenna: I64,
+    value: C64,
+    root: C128,
+    origin: float,
+    taps: F32,
+    phases: int,
 ) -> tuple[float, float]:
     """Timing and carrier of the likelihood's largest grid point, refined by parabolas."""
     channels = planes.shape[0]
@@ -96,8 +112,17 @@ def grid_search(
 
 @kernel
 def scoring_step(
-    y: F32, slope: F32, periods: I64, carrier: float, origin: float, pointer: I64, antenna: I64,
-    value: C64, root: C128, channel: C128, slope_energy: float,
+    y: F32,
+    slope: F32,
+    periods: I64,
+    carrier: float,
+    origin: float,
+    pointer: I64,
+    antenna: I64,
+    value: C64,
+    root: C128,
+    channel: C128,
+    slope_energy: float,
 ) -> tuple[float, float, float, float, float]:
     """One Fisher scoring step with the channel concentrated out.
 
@@ -133,7 +158,9 @@ def scoring_step(
             e = complex(y[i, 0, r], y[i, 1, r]) * turn - model[i, r]
             carrier_score += (np.conj(b) * e).imag
             carrier_info += b.real * b.real + b.imag * b.imag
-            timing_score += (np.conj(model[i, r]) * complex(slope[i, 0, r], slope[i, 1, r]) * turn).real
+            timing_score += (
+                np.conj(model[i, r]) * complex(slope[i, 0, r], slope[i, 1, r]) * turn
+            ).real
             timing_info += model[i, r].real ** 2 + model[i, r].imag ** 2
             error += e.real * e.real + e.imag * e.imag
     timing_info *= slope_energy
@@ -146,9 +173,21 @@ def scoring_step(
 
 @kernel
 def acquire_frame(
-    planes: F32, t0: float, step: float, grid: F64, periods: I64, pointer: I64, antenna: I64,
-    value: C64, root: C128, origin: float, taps: F32, slopes: F32, phases: int,
-    slope_energy: float, channel: C128,
+    planes: F32,
+    t0: float,
+    step: float,
+    grid: F64,
+    periods: I64,
+    pointer: I64,
+    antenna: I64,
+    value: C64,
+    root: C128,
+    origin: float,
+    taps: F32,
+    slopes: F32,
+    phases: int,
+    slope_energy: float,
+    channel: C128,
 ) -> tuple[float, float, float, float, float]:
     """Maximum-likelihood timing and carrier of one frame; channel complex128 (Nr, Nt) is filled.
 

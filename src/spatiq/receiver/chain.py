@@ -113,6 +113,8 @@ def receive(
     chosen = list(stages) if stages is not None else standard_stages(link, options, parts)
     framing = Framing(recording, link, options, parts.bank, parts.tables, parts.pattern)
     frames = 0
+    if progress is not None:
+        progress(Progress(0, recording.n_samples, 0, "preparing (the first run compiles)"))
     for batch in framing:
         for stage in chosen:
             batch = stage(batch)

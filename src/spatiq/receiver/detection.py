@@ -133,7 +133,11 @@ class Detection:
 
 def _check_words(words: NDArray[np.int64], shape: tuple[int, ...], size: int) -> None:
     integers = np.issubdtype(words.dtype, np.integer)
-    if words.shape != shape or not integers or (words.size and not 0 <= words.min() <= words.max() < size):
+    if (
+        words.shape != shape
+        or not integers
+        or (words.size and not 0 <= words.min() <= words.max() < size)
+    ):
         raise InputError(
             "detector",
             "",

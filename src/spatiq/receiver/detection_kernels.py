@@ -4,8 +4,11 @@ from __future__ import annotations
 
 import numpy as np
 
-from spatiq.kernels import C64, F32, I64, comparing_kernel, kernel
-from spatiq.receiver.soft_kernels import codeword_metrics
+from spatiq.kernels import C64, F32, I64, kernel
+from spatiq.receiver.soft_kernels import block_metrics
+
+
+BLOCK = 64  # received vectors handled at once
 
 
 @kernel
@@ -19,22 +22,26 @@ def detect_maximum_likelihood(y: C64, real: F32, imag: F32, power: F32, words: I
         words: int64 (K,); filled.
     """
     channels = y.shape[1]
-    metric = np.empty(power.size, np.float32)
-    z_real, z_imag = np.empty(channels, np.float32), np.empty(channels, np.float32)
-    for k in range(y.shape[0]):
-        for r in range(channels):
-            z_real[r] = y[k, r].real
-            z_imag[r] = y[k, r].imag
-        best = codeword_metrics(real, imag, power, z_real, z_imag, metric)
-        words[k] = 0
-        for c in range(power.size):
-            if metric[c] == best:
-                words[k] = c
-                break
+    metric = np.empty((power.size, BLOCK), np.float32)
+    best, second = np.empty(BLOCK, np.float32), np.empty(BLOCK, np.float32)
+    nearest = np.empty(BLOCK, np.int32)
+    z_real = np.empty((channels, BLOCK), np.float32)
+    z_imag = np.empty((channels, BLOCK), np.float32)
+    for first in range(0, y.shape[0], BLOCK):
+        count = min(BLOCK, y.shape[0] - first)
+        for k in range(count):
+            for r in range(channels):
+                z_real[r, k] = y[first + k, r].real
+                z_imag[r, k] = y[first + k, r].imag
+        block_metrics(real, imag, power, z_real, z_imag, count, metric, best, second, nearest)
+        for k in range(count):
+            words[first + k] = nearest[k]
 
 
-@comparing_kernel
-def detect_two_step(y: C64, columns: C64, members: I64, counts: I64, values: C64, words: I64) -> None:
+@kernel
+def detect_two_step(
+    y: C64, columns: C64, members: I64, counts: I64, values: C64, words: I64
+) -> None:
     """Antenna by argmax |h^H y| / ||h||, then the nearest symbol of that antenna.
 
     Args:

@@ -47,7 +47,9 @@ def lost_between(
         steps = round((after.global_position - before.global_position) / period)
         if steps > 1:
             each = (after.global_position - before.global_position) / steps
-            positions = [before.global_position + n * each for n in range(1, min(steps, _MOST_LISTED))]
+            positions = [
+                before.global_position + n * each for n in range(1, min(steps, _MOST_LISTED))
+            ]
     elif before is not None:
         end = segments[-1].global_index + segments[-1].count
         n = 1
@@ -81,6 +83,8 @@ def _lost(segments: Sequence[Segment], position: float, span: tuple[float, float
         else:
             reason = "not found"
         return LostFrame(segment.index, start, -1, reason)
-    before = max((s for s in segments if s.global_index <= begin), key=lambda s: s.index, default=segments[0])
+    before = max(
+        (s for s in segments if s.global_index <= begin), key=lambda s: s.index, default=segments[0]
+    )
     start = position - before.global_index + before.start
     return LostFrame(before.index, start, -1, "in a gap")

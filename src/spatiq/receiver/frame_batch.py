@@ -24,7 +24,7 @@ class FrameBatch:
 
     Attributes:
         planes: float32 (F, Nr, 2, W); samples, real and imaginary planes; derotated in place as the
-            carrier becomes known.
+            carrier becomes known. Valid until the next batch is asked for.
         first_sample: int64 (F,); per-channel file index of each window's first sample.
         segment: int32 (F,); index of the segment.
         sync_metric: float64 (F,); normalised correlation at the detected lag.
@@ -81,11 +81,12 @@ class FrameBatch:
 
 
 def empty_batch(
-    count: int, channels: int, window: int, antennas: int, active: int, payload: int
+    planes: NDArray[np.float32], antennas: int, active: int, payload: int
 ) -> FrameBatch:
-    """A batch with room for everything, nothing known yet."""
+    """A batch with room for everything, nothing known yet; its samples go into `planes`."""
+    count, channels = planes.shape[:2]
     return FrameBatch(
-        planes=np.zeros((count, channels, 2, window), np.float32),
+        planes=planes,
         first_sample=np.zeros(count, np.int64),
         segment=np.zeros(count, np.int32),
         sync_metric=np.zeros(count),

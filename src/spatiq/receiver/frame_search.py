@@ -23,12 +23,13 @@ import scipy.stats
 from numpy.typing import NDArray
 
 from spatiq.link.description import Link
-from spatiq.receiver.frame_search_kernels import metric_at, peak_metric
+from spatiq.receiver.frame_search_kernels import metric_at, raise_peak, window_energy
 from spatiq.receiver.matched_filter import FilterBank, sample_instants
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
 
 LAGS_PER_SYMBOL = 2
+_TRANSFORM_BYTES = 1 << 20  # correlations computed at once: they stay in the cache
 
 
 @dataclass(frozen=True)
@@ -108,7 +109,7 @@ class FrameSearch:
         self._spacing = bank.samples_per_symbol / LAGS_PER_SYMBOL
         self._hop = LAGS_PER_SYMBOL * (pattern.transform_size - pattern.length + 1)
         self._spectra = self._pattern_spectra()
-        self._blocks: dict[int, tuple[NDArray[np.float32], NDArray[np.int64]]] = {}
+        self._blocks: dict[int, tuple[NDArray[np.float32], NDArray[np.int32]]] = {}
         count = int((stream.stop - stream.start) / self._spacing) + 1
         self.last_lag = count - LAGS_PER_SYMBOL * (pattern.length - 1) - 1
 
@@ -126,27 +127,35 @@ class FrameSearch:
         reach = int(np.ceil(count * self._spacing)) + 2 * half + 3
         begin = self._stream.start + origin
         planes = np.ascontiguousarray(self._stream.planes(begin, begin + reach))
-        out = np.empty((count, 2, planes.shape[0]), np.float32)
+        out = np.empty((planes.shape[0], count), np.complex64)
         taps, phases = self._bank.taps, self._bank.phases
         sample_instants(planes, origin, first, self._spacing, taps, phases, out)
-        return np.ascontiguousarray((out[:, 0] + 1j * out[:, 1]).T)
+        return out
 
-    def _block(self, index: int) -> tuple[NDArray[np.float32], NDArray[np.int64]]:
+    def _block(self, index: int) -> tuple[NDArray[np.float32], NDArray[np.int32]]:
         """Best metric over carrier bins, and its bin, for the lags of one block of the grid."""
         if index not in self._blocks:
             self._blocks = {i: b for i, b in self._blocks.items() if i >= index - 1}
             size = self._pattern.transform_size
             y = self.instants(index * self._hop, LAGS_PER_SYMBOL * size)
             halves = np.stack([y[:, 0::2], y[:, 1::2]])  # (2, Nr, size)
-            spectrum = scipy.fft.fft(halves, axis=-1)
             lags = size - self._pattern.length + 1
-            best = np.zeros(2 * lags, np.float32)
-            where = np.zeros(2 * lags, np.int64)
-            for b in range(self._spectra.shape[0]):
-                product = spectrum[:, :, None, :] * self._spectra[b]
-                correlation = scipy.fft.ifft(product, axis=-1, overwrite_x=True)
-                peak_metric(halves, correlation, self._pattern.length, b, best, where)
-            self._blocks[index] = (best, where)
+            inverse = np.empty((2, lags), np.float32)
+            window_energy(halves, self._pattern.length, inverse)
+            spectrum = scipy.fft.fft(halves, axis=-1)[:, :, None, :]
+            best = np.zeros((2, lags), np.float32)
+            where = np.zeros((2, lags), np.int32)
+            metric = np.empty(lags, np.float32)
+            each = spectrum.size * self._spectra.shape[1] * 8  # bytes of one bin's correlations
+            together = max(1, _TRANSFORM_BYTES // each)
+            for first in range(0, self._spectra.shape[0], together):
+                products = spectrum * self._spectra[first : first + together, None, None]
+                correlations = scipy.fft.ifft(products, axis=-1, overwrite_x=True)
+                parts = correlations.reshape(correlations.shape[0], 2, -1, size, 1)
+                parts = parts.view(np.float32)
+                for b in range(parts.shape[0]):
+                    raise_peak(parts[b], inverse, first + b, metric, best, where)
+            self._blocks[index] = (best.T.ravel(), where.T.ravel())  # lags in order
         return self._blocks[index]
 
     def scan(self, from_lag: int) -> Detection | None:

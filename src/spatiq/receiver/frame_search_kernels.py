@@ -4,47 +4,65 @@ from __future__ import annotations
 
 import numpy as np
 
-from spatiq.kernels import C64, F32, F64, I64, kernel
+from spatiq.kernels import C64, F32, F64, I32, kernel
 
 
 @kernel
-def peak_metric(
-    halves: C64, correlation: C64, length: int, carrier_bin: int, best: F32, where: I64
-) -> None:
-    """Raise `best` (and note the bin in `where`) to the metric of one carrier bin.
+def window_energy(halves: C64, length: int, inverse: F32) -> None:
+    """1 / energy of `length` symbol periods from each lag on, all channels.
 
     Args:
         halves: complex64 (2, Nr, n); even and odd half-symbol instants.
-        correlation: complex64 (2, Nr, P, n); correlation with each basis row.
-        length: N, symbol periods summed.
-        carrier_bin: index to note.
-        best, where: (2*(n-N+1),); interleaved even, odd.
+        inverse: float32 (2, n-length+1); filled. A window that has faded to rounding residue
+            carries no evidence and gets 0.
     """
-    channels, n = halves.shape[1], halves.shape[2]
-    rank = correlation.shape[2]
+    channels = halves.shape[1]
     for h in range(2):
         energy = np.float64(0.0)
         for i in range(length - 1):
             for r in range(channels):
                 v = halves[h, r, i]
                 energy += np.float64(v.real) ** 2 + np.float64(v.imag) ** 2
-        for lag in range(n - length + 1):
+        for lag in range(inverse.shape[1]):
             for r in range(channels):
                 v = halves[h, r, lag + length - 1]
                 energy += np.float64(v.real) ** 2 + np.float64(v.imag) ** 2
-            projected = np.float32(0.0)
-            for r in range(channels):
-                for p in range(rank):
-                    c = correlation[h, r, p, lag]
-                    projected += c.real * c.real + c.imag * c.imag
-            # A window that has faded to rounding residue carries no evidence.
-            metric = np.float32(projected / energy) if energy > 1e-30 else np.float32(0.0)
-            if metric > best[2 * lag + h]:
-                best[2 * lag + h] = metric
-                where[2 * lag + h] = carrier_bin
+            inverse[h, lag] = 1.0 / energy if energy > 1e-30 else 0.0
             for r in range(channels):
                 v = halves[h, r, lag]
                 energy -= np.float64(v.real) ** 2 + np.float64(v.imag) ** 2
+
+
+@kernel
+def raise_peak(
+    correlation: F32, inverse: F32, carrier_bin: int, metric: F32, best: F32, where: I32
+) -> None:
+    """Raise `best` (and note the bin in `where`) to the metric of one carrier bin.
+
+    Args:
+        correlation: float32 (2, L, n, 2); correlation with each basis row in each channel (L of
+            them), real and imaginary parts side by side.
+        inverse: float32 (2, lags); 1 / window energy.
+        carrier_bin: index to note.
+        metric: float32 (lags,); scratch.
+        best, where: (2, lags).
+    """
+    lags = inverse.shape[1]
+    for h in range(2):
+        for i in range(lags):
+            metric[i] = np.float32(0.0)
+        for c in range(correlation.shape[1]):
+            part = correlation[h, c]
+            for i in range(lags):
+                metric[i] += part[i, 0] * part[i, 0] + part[i, 1] * part[i, 1]
+        scale = inverse[h]
+        top = best[h]
+        at = where[h]
+        for i in range(lags):
+            m = metric[i] * scale[i]
+            higher = m > top[i]
+            top[i] = m if higher else top[i]
+            at[i] = carrier_bin if higher else at[i]
 
 
 @kernel

@@ -96,6 +96,9 @@ class Framing:
         self._clip = clip_levels(recording)
         frame_bytes = recording.channels * 2 * self._geometry.window * 4
         self._batch_size = max(1, min(_BATCH_FRAMES, _BATCH_BYTES // frame_bytes))
+        # One array for all batches: fresh memory would cost as much as the filter.
+        shape = (self._batch_size, recording.channels, 2, self._geometry.window)
+        self._planes = np.empty(shape, np.float32)
         self.samples_done = 0
 
     def __iter__(self) -> Iterator[FrameBatch]:
@@ -123,9 +126,7 @@ class Framing:
 
     def _new_batch(self) -> FrameBatch:
         return empty_batch(
-            self._batch_size,
-            self._recording.channels,
-            self._geometry.window,
+            self._planes,
             self._link.antennas,
             self._tables.active.size,
             self._link.layout.payload_index.size,
@@ -223,8 +224,6 @@ class Framing:
 def _first_frames(batch: FrameBatch, count: int) -> FrameBatch:
     """The first `count` frames of a batch that did not fill."""
     cut = {
-        name: value[:count]
-        for name, value in vars(batch).items()
-        if isinstance(value, np.ndarray)
+        name: value[:count] for name, value in vars(batch).items() if isinstance(value, np.ndarray)
     }
     return FrameBatch(**cut, lost=batch.lost)

@@ -6,9 +6,7 @@ from spatiq.kernels import F32, kernel
 
 
 @kernel
-def cut_window(
-    samples: F32, window: F32, low: float, high: float, begin: int, end: int
-) -> int:
+def cut_window(samples: F32, window: F32, low: float, high: float, begin: int, end: int) -> int:
     """Copy samples (Nr, 2, W) into window, counting samples at or beyond [low, high] in begin..end-1.
 
     Returns:

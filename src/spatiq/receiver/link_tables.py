@@ -24,6 +24,11 @@ class SparseVectors:
     antenna: NDArray[np.int64]
     value: NDArray[np.complex64]
 
+    @property
+    def parts(self) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.complex64]]:
+        """Pointer, antenna, value: as kernels take them."""
+        return self.pointer, self.antenna, self.value
+
 
 def sparse_vectors(rows: NDArray[np.complex128]) -> SparseVectors:
     """Keep the non-zero entries of an array of shape (n, Nt)."""
@@ -47,6 +52,7 @@ class LinkTables:
         active: int64 (Ka,); all periods in which something is sent, ascending.
         active_word: int64 (Ka,); running index of the payload word sent there, -1 for known symbols.
         active_vectors: known vectors of the active periods (empty rows at payload).
+        known_gram: complex128 (Nt, Nt); sum of x x^H over all known vectors.
         active_amplitude: float32 (Ka,); amplitude factor of payload words, 1 elsewhere.
         in_header: uint8 (Ka,); 1 where the active period belongs to the header.
         words: codeword vectors, sparse.
@@ -60,6 +66,7 @@ class LinkTables:
     active: NDArray[np.int64]
     active_word: NDArray[np.int64]
     active_vectors: SparseVectors
+    known_gram: NDArray[np.complex128]
     active_amplitude: NDArray[np.float32]
     in_header: NDArray[np.uint8]
     words: SparseVectors
@@ -94,6 +101,7 @@ def link_tables(link: Link) -> LinkTables:
         active=active,
         active_word=word_of_period[active],
         active_vectors=sparse_vectors(layout.known[active]),
+        known_gram=layout.known.T @ layout.known.conj(),
         active_amplitude=amplitude[active],
         in_header=is_header[active].astype(np.uint8),
         words=sparse_vectors(codebook.vectors),

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.errors import InputError
-from spatiq.kernels import F32, I64, kernel
+from spatiq.kernels import C64, F32, I64, inlined, kernel
 from spatiq.signal.pulses import Pulse
 
 # Table steps per symbol. The nearest row is read; its instant is off by a uniform error of at most half
@@ -76,9 +76,7 @@ def filter_bank(pulse: Pulse, samples_per_symbol: float) -> FilterBank:
     )
 
 
-def _slopes(
-    pulse: Pulse, t: NDArray[np.float64], samples_per_symbol: float
-) -> NDArray[np.float64]:
+def _slopes(pulse: Pulse, t: NDArray[np.float64], samples_per_symbol: float) -> NDArray[np.float64]:
     """Derivative of the taps with respect to the sampling instant, per sample.
 
     Differences reach only to points inside the pulse: the jump where it is cut off is no slope.
@@ -94,7 +92,7 @@ def _slopes(
     return slope / (samples_per_symbol * np.sqrt(samples_per_symbol))
 
 
-@kernel
+@inlined
 def filter_at(planes: F32, t: float, table: F32, phases: int, out: F32, row: int) -> None:
     """Filter outputs of all channels at instant t into out[row], out float32 (n, 2, Nr).
 
@@ -128,15 +126,18 @@ def filter_at(planes: F32, t: float, table: F32, phases: int, out: F32, row: int
 
 @kernel
 def sample_instants(
-    planes: F32, origin: float, first: int, step: float, table: F32, phases: int, out: F32
+    planes: F32, origin: float, first: int, step: float, table: F32, phases: int, out: C64
 ) -> None:
-    """Matched-filter outputs at (first + m)*step - origin, m = 0..n-1, into out float32 (n, 2, Nr).
+    """Matched-filter outputs at (first + m)*step - origin, m = 0..n-1, into out complex64 (Nr, n).
 
     The product is formed before the subtraction, so that an instant of the grid has the same bits
     whatever the window it is read from.
     """
-    for m in range(out.shape[0]):
-        filter_at(planes, (first + m) * step - origin, table, phases, out, m)
+    y = np.empty((1, 2, planes.shape[0]), np.float32)
+    for m in range(out.shape[1]):
+        filter_at(planes, (first + m) * step - origin, table, phases, y, 0)
+        for r in range(planes.shape[0]):
+            out[r, m] = complex(y[0, 0, r], y[0, 1, r])
 
 
 @kernel

@@ -19,6 +19,7 @@ from spatiq.receiver.matched_filter import FilterBank, sample_periods
 from spatiq.receiver.refit_kernels import (
     cross_moments,
     expectation,
+    gram,
     known_error,
     references,
     refit_phase,
@@ -81,17 +82,19 @@ class Refit:
         sxx = np.empty((antennas, antennas), np.complex128)
         syx = np.empty((channels, antennas), np.complex128)
         vectors, words = tables.active_vectors, tables.words
+        energy = np.empty(tables.codebook.size)
         error = expectation(
             y,
             tables.active_word,
-            (vectors.pointer, vectors.antenna, vectors.value),
+            vectors.parts,
             tables.active_amplitude,
-            (words.pointer, words.antenna, words.value),
+            words.parts,
             codebook,
             noise,
             mean,
-            sxx,
+            energy,
         )
+        gram(words.parts, energy, tables.known_gram, sxx)
         references(batch.channel[i], mean, reference)
         error += known_error(y, reference, tables.active_word)
         before = batch.phase[i].copy()

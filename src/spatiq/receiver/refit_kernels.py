@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from spatiq.kernels import C64, C128, F32, F64, I64, kernel
-from spatiq.receiver.soft_kernels import codeword_metrics, posterior, predict, smooth, update
+from spatiq.kernels import C64, C128, F32, F64, I64, inlined, kernel
+from spatiq.receiver.soft_kernels import block_metrics, posterior, predict, smooth, update
 from spatiq.receiver.tracking_kernels import BLOCK
 
 
@@ -20,34 +20,55 @@ def rotate_active(values: F32, phase: F32) -> None:
             values[i, 1, r] = im * c - re * s
 
 
-@kernel
-def add_known(antenna: I64, value: C64, begin: int, end: int, mean: C64, sxx: C128) -> None:
-    """Enter a known vector into mean (Nt,) and add x x^H to sxx (Nt, Nt)."""
-    for j in range(begin, end):
-        mean[antenna[j]] = value[j]
-        for m in range(begin, end):
-            sxx[antenna[m], antenna[j]] += np.conj(value[j]) * value[m]
+@inlined
+def enter_known(vectors: tuple[I64, I64, C64], i: int, mean: C64) -> None:
+    """Enter known vector i into mean[i] (Nt,)."""
+    pointer, antenna, value = vectors
+    for j in range(pointer[i], pointer[i + 1]):
+        mean[i, antenna[j]] = value[j]
 
 
-@kernel
-def add_expected(
-    index: I64, weight: F32, count: int, words: tuple[I64, I64, C64], amplitude: np.float32,
-    mean: C64, sxx: C128,
+@inlined
+def enter_expected(
+    index: I64,
+    weight: F32,
+    count: int,
+    words: tuple[I64, I64, C64],
+    amplitude: np.float32,
+    i: int,
+    mean: C64,
 ) -> None:
-    """Enter E[x] into mean (Nt,) and add E[x x^H] to sxx, from the posterior of the codewords."""
+    """Enter E[x] under the posterior of the codewords into mean[i] (Nt,)."""
     pointer, antenna, value = words
     for n in range(count):
-        first = weight[n] * amplitude
         for j in range(pointer[index[n]], pointer[index[n] + 1]):
-            mean[antenna[j]] += first * value[j]
-            for m in range(pointer[index[n]], pointer[index[n] + 1]):
-                sxx[antenna[m], antenna[j]] += first * amplitude * np.conj(value[j]) * value[m]
+            mean[i, antenna[j]] += weight[n] * amplitude * value[j]
+
+
+@kernel
+def gram(words: tuple[I64, I64, C64], energy: F64, known: C128, sxx: C128) -> None:
+    """Sum of E[x x^H]: that of the known vectors, and of each codeword times its expected energy."""
+    pointer, antenna, value = words
+    sxx[:] = known
+    for c in range(energy.size):
+        if energy[c] == 0.0:
+            continue
+        for j in range(pointer[c], pointer[c + 1]):
+            for m in range(pointer[c], pointer[c + 1]):
+                sxx[antenna[m], antenna[j]] += energy[c] * np.conj(value[j]) * value[m]
 
 
 @kernel
 def expectation(
-    y: F32, active_word: I64, vectors: tuple[I64, I64, C64], amplitude: F32,
-    words: tuple[I64, I64, C64], codebook: tuple[F32, F32, F32], noise: float, mean: C64, sxx: C128,
+    y: F32,
+    active_word: I64,
+    vectors: tuple[I64, I64, C64],
+    amplitude: F32,
+    words: tuple[I64, I64, C64],
+    codebook: tuple[F32, F32, F32],
+    noise: float,
+    mean: C64,
+    energy: F64,
 ) -> float:
     """One pass over all active periods of a frame.
 
@@ -59,36 +80,48 @@ def expectation(
         codebook: received codebook: real, imag (Nr, C), power (C,).
         noise: N0.
         mean: complex64 (Ka, Nt); filled with E[x], the known x where it is known.
-        sxx: complex128 (Nt, Nt); filled with the sum of E[x x^H].
+        energy: float64 (C,); filled with each codeword's expected number of uses, times amplitude
+            squared.
 
     Returns:
         Sum over payload periods of E||y - H x||^2.
     """
     g_real, g_imag, g_power = codebook
     channels, size = g_real.shape
-    metric, weight = np.empty(size, np.float32), np.empty(size, np.float32)
-    index = np.empty(size, np.int64)
-    z_real, z_imag = np.empty(channels, np.float32), np.empty(channels, np.float32)
-    sxx[:] = 0.0
+    weight, index = np.empty(size, np.float32), np.empty(size, np.int64)
+    metric = np.empty((size, BLOCK), np.float32)
+    best, second = np.empty(BLOCK, np.float32), np.empty(BLOCK, np.float32)
+    nearest = np.empty(BLOCK, np.int32)
+    z_real = np.zeros((channels, BLOCK), np.float32)
+    z_imag = np.zeros((channels, BLOCK), np.float32)
+    energy[:] = 0.0
     mean[:] = 0.0
     total = 0.0
-    for i in range(active_word.size):
-        if active_word[i] < 0:
-            begin, end = vectors[0][i], vectors[0][i + 1]
-            add_known(vectors[1], vectors[2], begin, end, mean[i], sxx)
-            continue
-        scale = np.float32(1.0) / amplitude[i]
-        square = amplitude[i] * amplitude[i]
-        power = np.float32(0.0)
-        for r in range(channels):
-            z_real[r] = y[i, 0, r] * scale
-            z_imag[r] = y[i, 1, r] * scale
-            power += z_real[r] * z_real[r] + z_imag[r] * z_imag[r]
-        best = codeword_metrics(g_real, g_imag, g_power, z_real, z_imag, metric)
-        count = posterior(metric, best, np.float32(square / noise), index, weight)
-        for n in range(count):
-            total += weight[n] * max(metric[index[n]] + power, np.float32(0.0)) * square
-        add_expected(index, weight, count, words, amplitude[i], mean[i], sxx)
+    for first in range(0, active_word.size, BLOCK):
+        block = min(BLOCK, active_word.size - first)
+        for k in range(block):
+            scale = np.float32(1.0) / amplitude[first + k]
+            for r in range(channels):
+                z_real[r, k] = y[first + k, 0, r] * scale
+                z_imag[r, k] = y[first + k, 1, r] * scale
+        block_metrics(g_real, g_imag, g_power, z_real, z_imag, block, metric, best, second, nearest)
+        for k in range(block):
+            i = first + k
+            if active_word[i] < 0:
+                enter_known(vectors, i, mean)
+                continue
+            power = np.float32(0.0)
+            for r in range(channels):
+                power += z_real[r, k] * z_real[r, k] + z_imag[r, k] * z_imag[r, k]
+            square = amplitude[i] * amplitude[i]
+            count = posterior(
+                metric, k, best, second, nearest, np.float32(square / noise), index, weight
+            )
+            for n in range(count):
+                distance = max(metric[index[n], k] + power, np.float32(0.0))
+                total += weight[n] * distance * square
+                energy[index[n]] += weight[n] * square
+            enter_expected(index, weight, count, words, amplitude[i], i, mean)
     return total
 
 
@@ -200,7 +233,12 @@ def refit_phase(
 
 @kernel
 def refit_timing(
-    slope: F32, reference: F32, active: I64, noise: float, slope_energy: float, step_var: float,
+    slope: F32,
+    reference: F32,
+    active: I64,
+    noise: float,
+    slope_energy: float,
+    step_var: float,
     out: F64,
 ) -> None:
     """Least-squares correction of t0 and step, with a prior on step.

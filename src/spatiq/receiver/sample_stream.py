@@ -72,7 +72,9 @@ class SampleStream:
         """Samples before this position are no longer needed."""
         before = min(max(before, self._kept_from), self._read_to)
         dead = before - self._kept_from
-        if dead > self._planes.shape[2] // 2:  # moving rarely keeps its cost below one copy a sample
+        if (
+            dead > self._planes.shape[2] // 2
+        ):  # moving rarely keeps its cost below one copy a sample
             kept = self._read_to - before
             self._planes[:, :, :kept] = self._planes[:, :, dead : dead + kept].copy()
             self._kept_from = before

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from spatiq.kernels import C64, C128, F32, F64, I64, comparing_kernel, kernel
+from spatiq.kernels import C64, C128, F32, F64, I32, I64, inlined, kernel
 
 # Codewords with exp(-30) of the best one's likelihood change no sum in single precision.
 POSTERIOR_CUT = np.float32(30.0)
@@ -31,38 +31,86 @@ def received_codebook(
         power[c] = total
 
 
-@comparing_kernel
-def codeword_metrics(
-    real: F32, imag: F32, power: F32, z_real: F32, z_imag: F32, metric: F32
-) -> np.float32:
-    """||H x[c]||^2 - 2 Re(y^H H x[c]) for all c into metric (C,); returns the smallest."""
-    size = power.size
-    for c in range(size):
-        metric[c] = power[c]
-    for r in range(z_real.size):
-        twice_real = np.float32(2.0) * z_real[r]
-        twice_imag = np.float32(2.0) * z_imag[r]
-        row_real = real[r]
-        row_imag = imag[r]
-        for c in range(size):
-            metric[c] -= row_real[c] * twice_real + row_imag[c] * twice_imag
-    best = metric[0]
-    for c in range(1, size):
-        best = min(best, metric[c])
-    return best
-
-
 @kernel
+def block_metrics(
+    real: F32,
+    imag: F32,
+    power: F32,
+    z_real: F32,
+    z_imag: F32,
+    count: int,
+    metric: F32,
+    best: F32,
+    second: F32,
+    nearest: I32,
+) -> None:
+    """||H x[c]||^2 - 2 Re(y^H H x[c]) of all codewords for a block of `count` received vectors.
+
+    The innermost loop runs over the block, so that it vectorises whatever the number of codewords.
+
+    Args:
+        real, imag: float32 (Nr, C); received codebook.
+        power: float32 (C,).
+        z_real, z_imag: float32 (Nr, B); received vectors, B >= count.
+        metric: float32 (C, B); filled.
+        best, nearest: (B,); smallest metric and its codeword (the lowest one on a tie), filled.
+        second: (B,); second smallest metric, filled.
+    """
+    smallest = best[:count]
+    runner_up = second[:count]
+    where = nearest[:count]
+    for c in range(power.size):
+        row = metric[c, :count]
+        for k in range(count):
+            row[k] = power[c]
+        for r in range(z_real.shape[0]):
+            a = np.float32(2.0) * real[r, c]
+            b = np.float32(2.0) * imag[r, c]
+            part_real = z_real[r, :count]
+            part_imag = z_imag[r, :count]
+            for k in range(count):
+                row[k] -= a * part_real[k] + b * part_imag[k]
+        if c == 0:
+            for k in range(count):
+                smallest[k] = row[k]
+                runner_up[k] = np.float32(3.0e38)
+                where[k] = 0
+        else:
+            for k in range(count):
+                nearer = row[k] < smallest[k]
+                behind = smallest[k] if nearer else row[k]
+                runner_up[k] = behind if behind < runner_up[k] else runner_up[k]
+                smallest[k] = row[k] if nearer else smallest[k]
+                where[k] = c if nearer else where[k]
+
+
+@inlined
 def posterior(
-    metric: F32, best: np.float32, inverse_noise: np.float32, index: I64, weight: F32
+    metric: F32,
+    k: int,
+    best: F32,
+    second: F32,
+    nearest: I32,
+    inverse_noise: np.float32,
+    index: I64,
+    weight: F32,
 ) -> int:
-    """Codewords of noticeable posterior probability: their number; indices and weights filled."""
-    limit = best + POSTERIOR_CUT / inverse_noise
+    """Codewords of noticeable posterior probability for vector k of a block: their number.
+
+    metric float32 (C, B), best, second, nearest (B,) of `block_metrics`; index and weight (C,) are
+    filled.
+    """
+    smallest = best[k]
+    limit = smallest + POSTERIOR_CUT / inverse_noise
+    if second[k] > limit:
+        index[0] = nearest[k]
+        weight[0] = np.float32(1.0)
+        return 1
     count = 0
     total = np.float32(0.0)
-    for c in range(metric.size):
-        if metric[c] <= limit:
-            w = np.exp((best - metric[c]) * inverse_noise)
+    for c in range(metric.shape[0]):
+        if metric[c, k] <= limit:
+            w = np.exp((smallest - metric[c, k]) * inverse_noise)
             index[count] = c
             weight[count] = w
             total += w
@@ -73,7 +121,7 @@ def posterior(
     return count
 
 
-@kernel
+@inlined
 def predict(state: F64, covariance: F64, distance: float, walk: float) -> None:
     """Carry a (value, rate) state over `distance` symbol periods; `walk`: variance per period.
 
@@ -81,14 +129,12 @@ def predict(state: F64, covariance: F64, distance: float, walk: float) -> None:
     """
     state[0] += state[1] * distance
     covariance[0] += (
-        2.0 * distance * covariance[1]
-        + distance * distance * covariance[2]
-        + walk * abs(distance)
+        2.0 * distance * covariance[1] + distance * distance * covariance[2] + walk * abs(distance)
     )
     covariance[1] += distance * covariance[2]
 
 
-@kernel
+@inlined
 def update(
     state: F64, covariance: F64, score: float, score_k: float, w: float, wk: float, wkk: float
 ) -> None:

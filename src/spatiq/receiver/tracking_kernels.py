@@ -1,142 +1,220 @@
-"""Kernel of the first look at the payload: decision-directed tracking of carrier phase and timing."""
+"""Kernels of the first look at the payload: decision-directed tracking of carrier phase and timing."""
 
 from __future__ import annotations
 
 import numpy as np
 
-from spatiq.kernels import C64, C128, F32, F64, I64, kernel
+from spatiq.kernels import C64, C128, F32, F64, I32, I64, inlined, kernel
 from spatiq.receiver.matched_filter import filter_at
-from spatiq.receiver.soft_kernels import codeword_metrics, posterior, predict, smooth, update
+from spatiq.receiver.soft_kernels import block_metrics, posterior, predict, smooth, update
 
 BLOCK = 16  # symbol periods between updates of the track
 
 
 @kernel
-def known_reference(
-    channel: C128, pointer: I64, antenna: I64, value: C64, i: int, real: F32, imag: F32
+def derotated_block(
+    planes: F32,
+    instants: F64,
+    angles: F32,
+    scales: F32,
+    table: F32,
+    phases: int,
+    real: F32,
+    imag: F32,
 ) -> None:
-    """H x of known vector i into real, imag (Nr,)."""
-    for r in range(real.size):
+    """Filter outputs at `instants` (n,), turned by -angles and scaled, into real, imag (Nr, B)."""
+    channels = planes.shape[0]
+    y = np.empty((1, 2, channels), np.float32)
+    for k in range(instants.size):
+        filter_at(planes, instants[k], table, phases, y, 0)
+        c = np.cos(angles[k]) * scales[k]
+        s = np.sin(angles[k]) * scales[k]
+        for r in range(channels):
+            real[r, k] = y[0, 0, r] * c + y[0, 1, r] * s
+            imag[r, k] = y[0, 1, r] * c - y[0, 0, r] * s
+
+
+@inlined
+def known_reference(
+    channel: C128, vectors: tuple[I64, I64, C64], i: int, k: int, real: F32, imag: F32
+) -> None:
+    """H x of known vector i into column k of real, imag (Nr, B)."""
+    pointer, antenna, value = vectors
+    for r in range(real.shape[0]):
         v = 0j
         for j in range(pointer[i], pointer[i + 1]):
             v += channel[r, antenna[j]] * value[j]
-        real[r] = v.real
-        imag[r] = v.imag
+        real[r, k] = v.real
+        imag[r, k] = v.imag
 
 
 @kernel
-def soft_reference(
-    g_real: F32, g_imag: F32, g_power: F32, z_real: F32, z_imag: F32, inverse_noise: np.float32,
-    metric: F32, index: I64, weight: F32, real: F32, imag: F32,
-) -> int:
-    """Posterior mean of H x into real, imag (Nr,); returns the number of weights filled."""
-    best = codeword_metrics(g_real, g_imag, g_power, z_real, z_imag, metric)
-    count = posterior(metric, best, inverse_noise, index, weight)
-    for r in range(real.size):
-        a = np.float32(0.0)
-        b = np.float32(0.0)
-        for j in range(count):
-            a += weight[j] * g_real[r, index[j]]
-            b += weight[j] * g_imag[r, index[j]]
-        real[r] = a
-        imag[r] = b
-    return count
+def block_references(
+    periods: I64,
+    active_word: I64,
+    vectors: tuple[I64, I64, C64],
+    channel: C128,
+    codebook: tuple[F32, F32, F32],
+    z: tuple[F32, F32],
+    scales: F32,
+    noise: float,
+    scratch: tuple[F32, F32, F32, I32, I64, F32],
+    means: tuple[F32, F32],
+) -> None:
+    """Posterior mean of H x for a block, the known one where it is known, into means (Nr, B).
+
+    Args:
+        periods: (n,); indices of the active periods.
+        z: received vectors (Nr, B), real and imaginary.
+        scales: (n,); 1 / amplitude, with which z was scaled.
+        scratch: metric (C, B), best, second, nearest (B,), index (C,), weight (C,).
+    """
+    g_real, g_imag, g_power = codebook
+    metric, best, second, nearest, index, weight = scratch
+    block_metrics(g_real, g_imag, g_power, z[0], z[1], periods.size, metric, best, second, nearest)
+    for k in range(periods.size):
+        i = periods[k]
+        if active_word[i] < 0:
+            known_reference(channel, vectors, i, k, means[0], means[1])
+            continue
+        inverse_noise = np.float32(1.0 / (noise * scales[k] * scales[k]))
+        count = posterior(metric, k, best, second, nearest, inverse_noise, index, weight)
+        for r in range(g_real.shape[0]):
+            a = np.float32(0.0)
+            b = np.float32(0.0)
+            for j in range(count):
+                a += weight[j] * g_real[r, index[j]]
+                b += weight[j] * g_imag[r, index[j]]
+            means[0][r, k] = a
+            means[1][r, k] = b
+
+
+@kernel
+def block_score(
+    observed: tuple[F32, F32],
+    means: tuple[F32, F32],
+    offsets: F64,
+    scales: F32,
+    quadrature: bool,
+    sums: F64,
+) -> None:
+    """Sums over a block of errors and weights, and of them times the offset.
+
+    The error of a period is the part of `observed` along j*mean (quadrature) or along mean; its
+    weight is |mean|^2; both in units of the symbol as sent. sums (5,): error, error k, weight,
+    weight k, weight k^2.
+    """
+    sums[:] = 0.0
+    for k in range(offsets.size):
+        error, energy = np.float32(0.0), np.float32(0.0)
+        for r in range(means[0].shape[0]):
+            a, b = means[0][r, k], means[1][r, k]
+            if quadrature:
+                error += a * observed[1][r, k] - b * observed[0][r, k]
+            else:
+                error += a * observed[0][r, k] + b * observed[1][r, k]
+            energy += a * a + b * b
+        square = 1.0 / (scales[k] * scales[k])
+        sums[0] += error * square
+        sums[1] += error * square * offsets[k]
+        sums[2] += energy * square
+        sums[3] += energy * square * offsets[k]
+        sums[4] += energy * square * offsets[k] * offsets[k]
+
+
+@inlined
+def update_timing(
+    state: F64, cov: F64, sums: F64, count: int, noise: float, slope_energy: float, step: float
+) -> None:
+    """Take a block's timing score into the (timing, step) state.
+
+    Symbols beyond the block's edges are not yet known: their pulses add to the score about
+    (weight/n)^2 / step^2, on top of the thermal weight * slope_energy * N0 / 2.
+    """
+    thermal = sums[2] * slope_energy * noise / 2.0
+    edge = (sums[2] / count) ** 2 / (step * step)
+    gain = slope_energy * sums[2] / (thermal + edge)
+    info = gain * slope_energy
+    update(
+        state, cov, gain * sums[0], gain * sums[1], info * sums[2], info * sums[3], info * sums[4]
+    )
 
 
 @kernel
 def track_side(
-    planes: F32, t0: float, step: float, order: I64, active: I64, active_word: I64,
-    pointer: I64, antenna: I64, value: C64, amplitude: F32, channel: C128, g_real: F32,
-    g_imag: F32, g_power: F32, noise: float, centroid: float, prior: F64, walk: float, taps: F32,
-    slopes: F32, phases: int, slope_energy: float, with_timing: bool, phase: F32, track: F64,
+    planes: F32,
+    t0: float,
+    step: float,
+    order: I64,
+    active: I64,
+    active_word: I64,
+    vectors: tuple[I64, I64, C64],
+    amplitude: F32,
+    channel: C128,
+    codebook: tuple[F32, F32, F32],
+    noise: float,
+    centroid: float,
+    prior: F64,
+    walk: float,
+    bank: tuple[F32, F32, int, float],
+    with_timing: bool,
+    phase: F32,
+    track: F64,
 ) -> None:
     """Track from the header outwards over the active periods listed in `order`.
 
     Args:
         order: indices into `active`, in the order of travel.
-        prior: (6,); var(phase), var(carrier), var(timing), var(step) at the header's centroid, then
-            unused.
+        prior: (4,); variances of phase, carrier, timing and step at the header's centroid.
+        walk: variance of the phase's random walk per period.
+        bank: taps, slopes, phases and slope energy of the filter bank.
         phase: float32 (Ka,); filled at the periods travelled.
         track: (4,); filled with the corrections of t0 and step, and the phase and its slope at the
             header's centroid.
     """
-    channels, size = g_real.shape
-    y, d = np.empty((1, 2, channels), np.float32), np.empty((1, 2, channels), np.float32)
-    z_real, z_imag = np.empty(channels, np.float32), np.empty(channels, np.float32)
-    m_real, m_imag = np.empty(channels, np.float32), np.empty(channels, np.float32)
-    metric, weight = np.empty(size, np.float32), np.empty(size, np.float32)
-    index = np.empty(size, np.int64)
+    taps, slopes, phases, slope_energy = bank
+    channels, size = codebook[0].shape
+    shape = (channels, BLOCK)
+    z = (np.empty(shape, np.float32), np.empty(shape, np.float32))
+    means = (np.empty(shape, np.float32), np.empty(shape, np.float32))
+    scratch = (
+        np.empty((size, BLOCK), np.float32),
+        np.empty(BLOCK, np.float32),
+        np.empty(BLOCK, np.float32),
+        np.empty(BLOCK, np.int32),
+        np.empty(size, np.int64),
+        np.empty(size, np.float32),
+    )
     blocks = (order.size + BLOCK - 1) // BLOCK
-    position = np.empty(blocks)
+    position, sums = np.empty(blocks), np.empty(5)
     filtered, filtered_cov = np.empty((blocks, 2)), np.empty((blocks, 3))
     state, cov = np.zeros(2), np.array([prior[0], 0.0, prior[1]])
     t_state, t_cov = np.zeros(2), np.array([prior[2], 0.0, prior[3]])
     at = centroid
     for b in range(blocks):
-        begin, end = b * BLOCK, min(order.size, (b + 1) * BLOCK)
-        here = float(active[order[begin]])
+        periods = order[b * BLOCK : min(order.size, (b + 1) * BLOCK)]
+        here = float(active[periods[0]])
         predict(state, cov, here - at, walk)
         predict(t_state, t_cov, here - at, 0.0)
         at = here
-        score, score_k, w, wk, wkk = 0.0, 0.0, 0.0, 0.0, 0.0
-        t_score, t_score_k = 0.0, 0.0
-        for n in range(begin, end):
-            i = order[n]
-            k = active[i] - here
-            t = t0 + active[i] * step + t_state[0] + t_state[1] * k
-            filter_at(planes, t, taps, phases, y, 0)
-            angle = np.float32(state[0] + state[1] * k)
-            c, s = np.cos(angle), np.sin(angle)
-            scale = np.float32(1.0) / amplitude[i]
-            for r in range(channels):
-                re = y[0, 0, r] * scale
-                im = y[0, 1, r] * scale
-                z_real[r] = re * c + im * s
-                z_imag[r] = im * c - re * s
-            if active_word[i] >= 0:
-                inverse_noise = np.float32(1.0 / (noise * scale * scale))
-                soft_reference(
-                    g_real, g_imag, g_power, z_real, z_imag, inverse_noise, metric, index, weight,
-                    m_real, m_imag,
-                )
-            else:
-                known_reference(channel, pointer, antenna, value, i, m_real, m_imag)
-            error, energy = np.float32(0.0), np.float32(0.0)
-            for r in range(channels):
-                error += m_real[r] * z_imag[r] - m_imag[r] * z_real[r]
-                energy += m_real[r] * m_real[r] + m_imag[r] * m_imag[r]
-            # In the units of the sent symbol: both error and energy carry amplitude squared.
-            square = amplitude[i] * amplitude[i]
-            score += error * square
-            score_k += error * square * k
-            w += energy * square
-            wk += energy * square * k
-            wkk += energy * square * k * k
-            if with_timing:
-                filter_at(planes, t, slopes, phases, d, 0)
-                total = np.float32(0.0)
-                for r in range(channels):
-                    re = d[0, 0, r] * c + d[0, 1, r] * s
-                    im = d[0, 1, r] * c - d[0, 0, r] * s
-                    total += (m_real[r] * re + m_imag[r] * im) * scale
-                t_score += total * square
-                t_score_k += total * square * k
-        gain = 2.0 / noise
-        update(state, cov, gain * score, gain * score_k, gain * w, gain * wk, gain * wkk)
-        if with_timing and w > 0.0:
-            # Symbols beyond the block's edges are not yet known: their pulses add to the score
-            # about (w/n)^2 / step^2, on top of the thermal w * slope_energy * N0 / 2.
-            thermal = w * slope_energy * noise / 2.0
-            edge = (w / (end - begin)) ** 2 / (step * step)
-            t_gain = slope_energy * w / (thermal + edge)
-            update(
-                t_state, t_cov, t_gain * t_score, t_gain * t_score_k,
-                t_gain * slope_energy * w, t_gain * slope_energy * wk, t_gain * slope_energy * wkk,
-            )
+        offsets = active[periods] - here
+        instants = t0 + t_state[0] + active[periods] * step + t_state[1] * offsets
+        angles = (state[0] + state[1] * offsets).astype(np.float32)
+        scales = np.float32(1.0) / amplitude[periods]
+        derotated_block(planes, instants, angles, scales, taps, phases, z[0], z[1])
+        block_references(
+            periods, active_word, vectors, channel, codebook, z, scales, noise, scratch, means
+        )
+        block_score(z, means, offsets, scales, True, sums)
+        g = 2.0 / noise
+        update(state, cov, g * sums[0], g * sums[1], g * sums[2], g * sums[3], g * sums[4])
+        if with_timing and sums[2] > 0.0:
+            derotated_block(planes, instants, angles, scales, slopes, phases, z[0], z[1])
+            block_score(z, means, offsets, scales, False, sums)
+            update_timing(t_state, t_cov, sums, periods.size, noise, slope_energy, step)
         position[b] = here
-        filtered[b, 0], filtered[b, 1] = state[0], state[1]
-        for j in range(3):
-            filtered_cov[b, j] = cov[j]
+        filtered[b] = state
+        filtered_cov[b] = cov
     smoothed = np.empty((blocks, 2))
     smooth(blocks, position, filtered, filtered_cov, walk, smoothed)
     for b in range(blocks):

@@ -59,11 +59,12 @@ class Codebook:
         """Words, shape (..., n) -> bits, shape (..., n*b), first bit of a word first."""
         shifts = np.arange(self.bits - 1, -1, -1)
         bits = (np.asarray(words)[..., None] >> shifts) & 1
-        return bits.reshape(*bits.shape[:-2], -1).astype(np.uint8)
+        return bits.reshape(*bits.shape[:-2], bits.shape[-2] * self.bits).astype(np.uint8)
 
     def bits_to_words(self, bits: NDArray[np.uint8]) -> NDArray[np.int64]:
         """Bits, shape (..., n*b) -> words, shape (..., n). Raises ValueError when n*b does not fit."""
-        grouped = np.asarray(bits).reshape(*bits.shape[:-1], -1, self.bits).astype(np.int64)
+        shape = (*bits.shape[:-1], bits.shape[-1] // self.bits, self.bits)
+        grouped = np.asarray(bits).reshape(shape).astype(np.int64)
         weights = 1 << np.arange(self.bits - 1, -1, -1)
         return np.asarray(grouped @ weights, dtype=np.int64)
 

@@ -1,0 +1,1 @@
+"""What is kept: HDF5, tables, SigMF annotations."""
