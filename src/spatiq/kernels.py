@@ -6,7 +6,7 @@ import os
 import tempfile
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any, TypeVar, cast
 
 import numba
 import numpy as np
@@ -23,12 +23,12 @@ U8 = NDArray[np.uint8]
 
 F = TypeVar("F", bound=Callable[..., Any])
 
-# Reassociation lets loops vectorise; "nnan" and "ninf" are left out so that isnan checks still work.
+# Reassociation lets loops vectorise; "nnan" and "ninf" are left out: isnan checks still work.
 FAST_ARITHMETIC = {"nsz", "contract", "arcp", "reassoc"}
 
 
 def _cache_is_writable() -> bool:
-    """numba refuses to import a cached function when it finds no folder to write to: probe first."""
+    """numba refuses to import a cached function when no folder can be written to: probe first."""
     chosen = os.environ.get("NUMBA_CACHE_DIR")
     here = Path(__file__).resolve().parent
     for folder in [Path(chosen)] if chosen else [here / "__pycache__", here]:
@@ -45,12 +45,12 @@ _CACHE = _cache_is_writable()
 
 def kernel(function: F) -> F:
     """Compile a hot loop: bare arrays in and out, no objects, no files."""
-    compiled: F = numba.njit(cache=_CACHE, nogil=True, fastmath=FAST_ARITHMETIC)(function)
-    return compiled
+    compiled = numba.njit(cache=_CACHE, nogil=True, fastmath=FAST_ARITHMETIC)(function)
+    return cast(F, compiled)
 
 
 def inlined(function: F) -> F:
     """A piece of a kernel that runs once per symbol: entered into its caller, for handing arrays
     over would cost as much as its work."""
-    compiled: F = numba.njit(nogil=True, forceinline=True, fastmath=FAST_ARITHMETIC)(function)
-    return compiled
+    compiled = numba.njit(nogil=True, forceinline=True, fastmath=FAST_ARITHMETIC)(function)
+    return cast(F, compiled)

@@ -101,8 +101,9 @@ def equalised_symbols(
     _check(y, h, codebook, words)
     g = _received(h, _unit_vectors(codebook), words)
     power = np.sum(np.abs(g) ** 2, axis=2)
-    safe = np.where(power > 0, power, np.nan)
-    return np.asarray(np.sum(g.conj() * y, axis=2) / safe, dtype=np.complex128)
+    safe = np.where(power > 0, power, 1.0)
+    z = np.sum(g.conj() * y, axis=2) / safe
+    return np.asarray(np.where(power > 0, z, np.nan), dtype=np.complex128)
 
 
 def equalised_evm(

@@ -19,9 +19,8 @@ from spatiq.receiver.options import ReceiverOptions
 from spatiq.recording.recording import Recording
 
 Columns = dict[str, NDArray[Any]]
-_LOST_TRACK = (
-    1e-6  # probability that chance raises the payload's noise over the known symbols' so far
-)
+# Probability that chance raises the payload's noise so far over that of the known symbols.
+_LOST_TRACK = 1e-6
 
 
 def fill_figures(

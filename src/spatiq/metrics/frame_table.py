@@ -109,9 +109,10 @@ class MeasuredFrames:
     Attributes:
         columns: one array of shape (F,) for each of `COLUMN_NAMES`.
         confusion: int64, shape (F, A, A); row = antenna set sent, column = antenna set decided.
-        channel: complex128, shape (F, Nr, Nt); estimated channel, phase at the centre of the known symbols;
-            the columns of antennas that the link never uses are zero.
-        antenna_evm_percent: float64, shape (F, Nt); EVM of the periods each antenna sent, NaN if none.
+        channel: complex128, shape (F, Nr, Nt); estimated channel, phase at the centre of the known
+            symbols; the columns of antennas that the link never uses are zero.
+        antenna_evm_percent: float64, shape (F, Nt); EVM of the periods that each antenna sent, NaN
+            if none.
         antenna_power: float64, shape (F, Nt); ||h_a||^2 / Nr.
         lost: frames found to be lost before or between these.
         symbols: complex64, shape (F, Kp, Nr); received payload vectors, carrier removed; or None.
@@ -142,7 +143,7 @@ class MeasuredFrames:
 
 
 def empty_columns(count: int) -> dict[str, NDArray[Any]]:
-    """All columns for `count` frames: NaN in floats, 0 in counts, -1 in the int columns that say so."""
+    """All columns for `count` frames: NaN in floats, 0 in counts, -1 where the column says so."""
     columns: dict[str, NDArray[Any]] = {}
     for c in COLUMNS:
         if c.dtype.startswith("f"):

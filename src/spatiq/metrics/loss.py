@@ -23,7 +23,7 @@ from spatiq.metrics.prediction import predict_ber
 from spatiq.signal.codebooks import Codebook
 
 OFFSETS_DB = (-6.0, -4.0, -3.0, -2.0, -1.0, 0.0, 1.0, 2.0, 3.0, 4.0, 6.0, 8.0, 12.0, 16.0)
-SLOPE_STEP_DB = 0.5
+SLOPE_STEP_DB = 1.0
 
 
 @dataclass(frozen=True)
@@ -164,9 +164,9 @@ def local_loss(
 ) -> NDArray[np.float64]:
     """Loss of each frame from the local slope of its predicted curve, dB.
 
-    Two predictions a frame, one when `predicted`, the BER of `predict_ber`, is given. Good within
-    some 2 dB of zero; farther out it is an extrapolation of log BER along a straight line in dB,
-    which overstates a large loss.
+    Two predictions a frame, or one when `predicted`, the BER of `predict_ber`, is given; the second
+    lies 1 dB away on the side of the measured ratio. Good within some 2 dB; farther out log BER is
+    extrapolated along a straight line in dB, which overstates the size of a gain and of a loss.
 
     Returns:
         float64 (F,); NaN where no bit was wrong, none was compared, or the prediction has no slope.
@@ -178,13 +178,14 @@ def local_loss(
     if predicted is None:
         predicted = predict_ber(h, noise, error_variance, codebook).ber
     at = np.asarray(predicted, dtype=np.float64)
-    raised = noise * 10.0 ** (SLOPE_STEP_DB / 10.0)
-    above = predict_ber(h, raised, error_variance, codebook).ber
     wrong = np.asarray(errors, dtype=np.float64)
     compared = np.asarray(bits, dtype=np.float64)
-    usable = (wrong > 0) & (compared > 0) & (at > 0) & (above > at)
+    some = (wrong > 0) & (compared > 0)
+    measured = np.where(some, wrong, np.nan) / np.where(some, compared, 1.0)
+    step = np.where(measured < at, -SLOPE_STEP_DB, SLOPE_STEP_DB)
+    beside = predict_ber(h, noise * 10.0 ** (step / 10.0), error_variance, codebook).ber
+    usable = some & (at > 0) & (beside > 0) & ((beside - at) * step > 0)
     loss = np.full(at.shape, np.nan)
-    ratio = wrong[usable] / compared[usable]
-    slope = np.log(above[usable] / at[usable]) / SLOPE_STEP_DB
-    loss[usable] = np.log(ratio / at[usable]) / slope
+    slope = np.log(beside[usable] / at[usable]) / step[usable]
+    loss[usable] = np.log(measured[usable] / at[usable]) / slope
     return loss

@@ -122,10 +122,15 @@ class Measuring:
         return np.asarray(shift, np.float64)[batch.segment]
 
     def _sent_words(self, numbering: Numbering) -> NDArray[np.int64]:
-        """Words as sent, (F, Kp); -1 where any bit of the word is unknown."""
+        """Words as sent, (F, Kp); -1 where any bit of the word is unknown.
+
+        Without reference bits all are: a few words of counter would pass for the whole payload.
+        """
         payload, codebook = self.link.payload, self.link.codebook
         count = numbering.numbers.size
         words = np.full((count, self.link.layout.payload_index.size), -1, np.int64)
+        if not payload.has_reference:
+            return words
         reference = payload.reference(np.maximum(numbering.numbers, 0))
         known = np.where(numbering.resolved[:, None], payload.reference_mask, self._static)
         scrambler = payload.scrambler

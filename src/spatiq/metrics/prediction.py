@@ -20,8 +20,8 @@ estimate without bias is
 used in the form Q(z exp(-s/2)), equal to first order and always within 0 and 1/2. No prior of H
 enters: it holds on a channel that stands still as well as under fading. What is left is of second
 order. With e_a = N0/Np (Np unit pilots per antenna) the mean ratio of simulated links came out
-within 2.5 % at Np = 16 and within 5 % at Np = 8 on Rayleigh channels; single pairs were off by up
-to 25 % at Np = 4.
+within 2.5 % at Np = 16 and at worst 5 % low at Np = 8 on Rayleigh channels; single pairs were off
+by up to 25 % at Np = 4.
 
 Method. The union bound on the fixed channel, a sum of Q over pairs of words (J. Jeganathan et
 al., IEEE Commun. Lett. 12(8), 2008, before it is averaged over fading), stands alone up to

@@ -142,7 +142,7 @@ def union_bound_pairs(
         squared_distances(gr[:, c].copy(), gi[:, c].copy(), gr, gi, first, distance)
         inner_products(c, wr, wi, first, common)
         for d in range(first, size):
-            half = distance[d] * 0.25  # z^2 / 2 with z = ||D|| / sqrt(2 N0)
+            half = 0.25 * float(distance[d])  # z^2 / 2 with z = ||D|| / sqrt(2 N0)
             if half > nearest + PAIR_RANGE or d == c:
                 continue
             nearest = min(nearest, half)
@@ -150,10 +150,11 @@ def union_bound_pairs(
             plain = tail(z)
             error = plain
             if wr.shape[0] > 0:
-                lost = 0.5 * (power[c] + power[d]) - common[d]
-                error = corrected_tail(half, common[d], lost, nr)
+                shared = float(common[d])
+                lost = 0.5 * float(power[c] + power[d]) - shared
+                error = corrected_tail(half, shared, lost, nr)
             add_pair(c, d, error, times, weights, sets, sums, shares)
-            bits = weights[0, c ^ d] + weights[1, c ^ d]
+            bits = float(weights[0, c ^ d] + weights[1, c ^ d])
             sums[2] += times * bits * plain
             sums[3] += times * bits * 0.5 * z * density(z)
 
@@ -163,8 +164,8 @@ def add_pair(
     c: int, d: int, error: float, times: float, weights: F32, sets: I64, sums: F64, shares: F64
 ) -> None:
     """Enter one pair, sent c and decided d, or both ways round when `times` is 2."""
-    sums[0] += times * weights[0, c ^ d] * error
-    sums[1] += times * weights[1, c ^ d] * error
+    sums[0] += times * float(weights[0, c ^ d]) * error
+    sums[1] += times * float(weights[1, c ^ d]) * error
     if shares.shape[0] > 0:
         shares[sets[c], sets[d]] += error
         if times > 1.0:

@@ -1,8 +1,8 @@
 """Which number did the transmitter give each frame? Counter, running reference and time tell.
 
-The usual case costs one comparison: the next frame has the next number (or the number that the frame
-period says). Where that does not fit, the frame is looked at by itself: its counter if its CRC
-passes, or the place of its bits in the running reference.
+The usual case costs one comparison: the next frame has the next number (or the number that the
+frame period says). Where that does not fit, the frame is looked at by itself: its counter if its
+CRC passes, or the place of its bits in the running reference.
 """
 
 from __future__ import annotations
@@ -103,7 +103,7 @@ class ReferenceFollower:
         numbers: NDArray[np.int64],
         i: int,
     ) -> int:
-        """Number frames from i on while expectation fits; returns the first that it does not fit."""
+        """Number frames from i on while expectation fits; returns the first that does not fit."""
         if self._last is None:
             return i
         expected = self._expected(position[i:])

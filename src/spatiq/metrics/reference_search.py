@@ -50,7 +50,7 @@ class PrbsSearch:
         return self.prbs.period // gcd(self.length, self.prbs.period)
 
     def frame_number(self, bits: NDArray[np.uint8]) -> int | None:
-        """Smallest frame number whose reference agrees with received bits (length,); None if none."""
+        """Smallest frame number whose reference agrees with bits (length,); None if none."""
         order = self.prbs.order
         last = bits.size - order
         if last < 0 or not self.prbs.supports_state:

@@ -60,12 +60,12 @@ class Spread:
         self.low = min(self.low, float(values.min()))
         self.high = max(self.high, float(values.max()))
 
-    def as_dict(self) -> dict[str, float] | None:
+    def as_dict(self) -> dict[str, float | None] | None:
         """Mean, std, min, max; None when there was no value."""
         if not self.count:
             return None
         std = float(np.sqrt(self.square / (self.count - 1))) if self.count > 1 else None
-        return {"mean": self.mean, "std": std, "min": self.low, "max": self.high}  # type: ignore[dict-item]
+        return {"mean": self.mean, "std": std, "min": self.low, "max": self.high}
 
 
 @dataclass
@@ -84,6 +84,7 @@ class Summary:
     marks: Counter[str] = field(default_factory=Counter)
     crc: Counter[int] = field(default_factory=Counter)
     _sums: Counter[str] = field(default_factory=Counter)
+    _energies: dict[str, float] = field(default_factory=lambda: dict.fromkeys(_ENERGIES, 0.0))
     _spreads: dict[str, Spread] = field(default_factory=dict)
     _kept: list[tuple[int, Any]] = field(default_factory=list)
     _stride: int = 1
@@ -108,7 +109,7 @@ class Summary:
         for name in _COUNTS:
             self._sums[name] += int(columns[name].sum())
         for name in _ENERGIES:
-            self._sums[name] += float(np.nansum(columns[name]))  # type: ignore[assignment]
+            self._energies[name] += float(np.nansum(columns[name]))
         for name, spread in self._spreads.items():
             spread.add(columns[name])
         for mark in Mark:
@@ -231,8 +232,8 @@ class Summary:
         return {"value": loss.value, "low": loss.low, "high": loss.high}
 
     def _evm(self, kind: str) -> dict[str, Any] | None:
-        error = self._sums[f"{kind}_error_energy"]
-        reference = self._sums[f"{kind}_reference_energy"]
+        error = self._energies[f"{kind}_error_energy"]
+        reference = self._energies[f"{kind}_reference_energy"]
         if reference <= 0:
             return None
         ratio = float(np.sqrt(error / reference))

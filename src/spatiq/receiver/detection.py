@@ -106,7 +106,7 @@ def find_detector(name: str) -> Detector:
 
 @dataclass(frozen=True, eq=False)
 class Detection:
-    """The stage: words of all payload periods by one detector, and by the two-step for comparison."""
+    """The stage: words of all payload periods by one detector, and by two-step to compare."""
 
     codebook: Codebook
     detector: Detector

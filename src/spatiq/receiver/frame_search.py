@@ -75,7 +75,8 @@ def threshold(false_alarm: float, length: int, rank: int, channels: int) -> floa
 def sync_pattern(link: Link, options: ReceiverOptions, channels: int) -> SyncPattern:
     """Basis, carrier grid and threshold of a link's first sync section.
 
-    Carrier bins lie at most 1/(2N) cycles per symbol apart: the loss half way between two is 0.9 dB.
+    Carrier bins lie at most 1/(2N) cycles per symbol apart: half way between two the loss is
+    0.9 dB.
     """
     span = link.layout.sync
     vectors = link.layout.known[span.start : span.stop]
@@ -159,8 +160,10 @@ class FrameSearch:
         return self._blocks[index]
 
     def scan(self, from_lag: int) -> Detection | None:
-        """First sync section at or after a lag: the largest metric within one sync length of the
-        first crossing of the threshold."""
+        """First sync section at or after a lag.
+
+        That is the largest metric within one sync length of the first crossing of the threshold.
+        """
         lag = max(from_lag, 0)
         while lag <= self.last_lag:
             index, offset = divmod(lag, self._hop)
@@ -174,8 +177,10 @@ class FrameSearch:
         return None
 
     def release(self, lag: int) -> None:
-        """Nothing before this lag is searched any more: keep its grid block, and the lead of a frame
-        and a peak's neighbourhood before it."""
+        """Nothing before this lag is searched any more.
+
+        Its grid block is kept, and before it the lead of a frame and a peak's neighbourhood.
+        """
         keep = min(lag, lag // self._hop * self._hop)
         keep -= LAGS_PER_SYMBOL * (self._lead + self._pattern.length)
         samples = int(keep * self._spacing) - 2 * self._bank.half - 8

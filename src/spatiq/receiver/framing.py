@@ -1,26 +1,23 @@
 """Framing: sync sections become frames, cut out of the recording and gathered into batches.
 
-Search and framing take turns: after a frame, the next sync section is looked for where the link says
-that it may follow, first where it is expected, then anywhere. What was expected and is not there is
-listed with its reason.
+Search and framing take turns: after a frame, the next sync section is looked for where the link
+says that it may follow, first where it is expected, then anywhere. What was expected and is not
+there is listed with its reason.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from spatiq.link.description import Link
 from spatiq.receiver.expected_frames import FoundStart, lost_between
 from spatiq.receiver.frame_batch import FrameBatch, LostFrame, empty_batch
-from spatiq.receiver.frame_search import (
-    LAGS_PER_SYMBOL,
-    Detection,
-    FrameSearch,
-    SyncPattern,
-)
+from spatiq.receiver.frame_search import LAGS_PER_SYMBOL, Detection, FrameSearch, SyncPattern
 from spatiq.receiver.framing_kernels import cut_window
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank, derotate
@@ -143,7 +140,7 @@ class Framing:
 
     def _segment(
         self, segment: Segment
-    ) -> Iterator[tuple[tuple[Detection, np.ndarray] | LostFrame, float | None]]:
+    ) -> Iterator[tuple[tuple[Detection, NDArray[np.float32]] | LostFrame, float | None]]:
         """Frames of one segment: what was found, and the start of a frame in file samples."""
         blocks = self._recording.blocks(self._options.block_size, segment.start, segment.stop)
         stream = SampleStream(blocks, segment.start, segment.stop, self._recording.channels)
@@ -202,7 +199,7 @@ class Framing:
         i: int,
         segment: Segment,
         found: Detection,
-        samples: np.ndarray,
+        samples: NDArray[np.float32],
     ) -> None:
         """Copy a frame's window into the batch and remove the carrier that the search saw."""
         sps = self._geometry.samples_per_symbol
@@ -223,7 +220,7 @@ class Framing:
 
 def _first_frames(batch: FrameBatch, count: int) -> FrameBatch:
     """The first `count` frames of a batch that did not fill."""
-    cut = {
+    cut: dict[str, Any] = {
         name: value[:count] for name, value in vars(batch).items() if isinstance(value, np.ndarray)
     }
     return FrameBatch(**cut, lost=batch.lost)

@@ -7,10 +7,10 @@ from spatiq.kernels import F32, kernel
 
 @kernel
 def cut_window(samples: F32, window: F32, low: float, high: float, begin: int, end: int) -> int:
-    """Copy samples (Nr, 2, W) into window, counting samples at or beyond [low, high] in begin..end-1.
+    """Copy samples (Nr, 2, W) into window, counting clipped ones.
 
     Returns:
-        Clipped samples, each counted once though both parts may clip, all channels.
+        Samples of begin..end-1 of which a part lies at or beyond low or high, all channels.
     """
     clipped = 0
     for r in range(samples.shape[0]):

@@ -1,4 +1,4 @@
-"""What the kernels need to know of a link, as bare arrays: known symbols, codewords, Gram matrices."""
+"""What kernels need to know of a link, as bare arrays: known symbols, codewords, Gram matrices."""
 
 from __future__ import annotations
 
@@ -50,7 +50,8 @@ class LinkTables:
         header_rank: rank of X.
         header_centroid: energy-weighted mean period of the header.
         active: int64 (Ka,); all periods in which something is sent, ascending.
-        active_word: int64 (Ka,); running index of the payload word sent there, -1 for known symbols.
+        active_word: int64 (Ka,); running index of the payload word sent there, -1 for known
+            symbols.
         active_vectors: known vectors of the active periods (empty rows at payload).
         known_gram: complex128 (Nt, Nt); sum of x x^H over all known vectors.
         active_amplitude: float32 (Ka,); amplitude factor of payload words, 1 elsewhere.

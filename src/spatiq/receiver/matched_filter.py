@@ -16,8 +16,8 @@ from spatiq.errors import InputError
 from spatiq.kernels import C64, F32, I64, inlined, kernel
 from spatiq.signal.pulses import Pulse
 
-# Table steps per symbol. The nearest row is read; its instant is off by a uniform error of at most half
-# a step, an EVM of (1/4096) sqrt(4 pi^2 xi / 12), -78 dB.
+# Table steps per symbol. The nearest row is read; its instant is off by a uniform error of at most
+# half a step, an EVM of (1/4096) sqrt(4 pi^2 xi / 12), -78 dB.
 _STEPS_PER_SYMBOL = 4096
 _SLOPE_STEP = 1e-4  # samples; central difference in double precision, error below 1e-7
 
@@ -42,6 +42,11 @@ class FilterBank:
     taps: NDArray[np.float32]
     slopes: NDArray[np.float32]
     slope_energy: float
+
+    @property
+    def parts(self) -> tuple[NDArray[np.float32], NDArray[np.float32], int, float]:
+        """Taps, slopes, phases, slope energy: as kernels take them."""
+        return self.taps, self.slopes, self.phases, self.slope_energy
 
 
 def filter_bank(pulse: Pulse, samples_per_symbol: float) -> FilterBank:
@@ -89,7 +94,8 @@ def _slopes(pulse: Pulse, t: NDArray[np.float64], samples_per_symbol: float) -> 
     gap = np.where(inside, after - before, 1.0)
     rise = pulse.samples(after, samples_per_symbol) - pulse.samples(before, samples_per_symbol)
     slope = np.where(inside, -rise / gap, 0.0)
-    return slope / (samples_per_symbol * np.sqrt(samples_per_symbol))
+    scale = samples_per_symbol * np.sqrt(samples_per_symbol)
+    return np.asarray(slope / scale, np.float64)
 
 
 @inlined
@@ -99,8 +105,8 @@ def filter_at(planes: F32, t: float, table: F32, phases: int, out: F32, row: int
     Whole arrays and an index are handed on rather than slices, whose bookkeeping costs more than
     the filter.
 
-    planes float32 (Nr, 2, n), C-contiguous. Instants whose taps would leave the planes read as zero:
-    a track that has run away yields nothing, and shows in its residuals.
+    planes float32 (Nr, 2, n), C-contiguous. Instants whose taps would leave the planes read as
+    zero: a track that has run away yields nothing, and shows in its residuals.
     """
     whole = int(np.floor(t))
     length = table.shape[1]
@@ -144,7 +150,7 @@ def sample_instants(
 def sample_periods(
     planes: F32, t0: float, step: float, periods: I64, table: F32, phases: int, out: F32
 ) -> None:
-    """Matched-filter outputs of given symbol periods at t0 + k*step, into out float32 (n, 2, Nr)."""
+    """Matched-filter outputs of symbol periods at t0 + k*step, into out float32 (n, 2, Nr)."""
     for i in range(periods.size):
         filter_at(planes, t0 + periods[i] * step, table, phases, out, i)
 

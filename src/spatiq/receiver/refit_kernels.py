@@ -47,7 +47,7 @@ def enter_expected(
 
 @kernel
 def gram(words: tuple[I64, I64, C64], energy: F64, known: C128, sxx: C128) -> None:
-    """Sum of E[x x^H]: that of the known vectors, and of each codeword times its expected energy."""
+    """Sum of E[x x^H]: of the known vectors, and of each codeword times its expected energy."""
     pointer, antenna, value = words
     sxx[:] = known
     for c in range(energy.size):
@@ -213,11 +213,11 @@ def refit_phase(
                 error += reference[i, 0, r] * y[i, 1, r] - reference[i, 1, r] * y[i, 0, r]
                 energy += reference[i, 0, r] ** 2 + reference[i, 1, r] ** 2
             left = error - energy * (state[0] + state[1] * k)
-            score += left
-            score_k += left * k
-            w += energy
-            wk += energy * k
-            wkk += energy * k * k
+            score += float(left)
+            score_k += float(left * k)
+            w += float(energy)
+            wk += float(energy * k)
+            wkk += float(energy * k * k)
         update(state, cov, gain * score, gain * score_k, gain * w, gain * wk, gain * wkk)
         position[b] = here
         filtered[b, 0], filtered[b, 1] = state[0], state[1]
@@ -228,7 +228,7 @@ def refit_phase(
     for b in range(blocks):
         for i in range(b * BLOCK, min(n, (b + 1) * BLOCK)):
             phase[i] += smoothed[b, 0] + smoothed[b, 1] * (active[i] - position[b])
-    return filtered_cov[blocks - 1, 2]
+    return float(filtered_cov[blocks - 1, 2])
 
 
 @kernel
@@ -253,11 +253,11 @@ def refit_timing(
         for r in range(slope.shape[2]):
             error += reference[i, 0, r] * slope[i, 0, r] + reference[i, 1, r] * slope[i, 1, r]
             energy += reference[i, 0, r] ** 2 + reference[i, 1, r] ** 2
-        score += error
-        score_k += error * k
-        w += energy
-        wk += energy * k
-        wkk += energy * k * k
+        score += float(error)
+        score_k += float(error * k)
+        w += float(energy)
+        wk += float(energy * k)
+        wkk += float(energy * k * k)
     gain = 2.0 / noise
     info = gain * slope_energy
     j11, j12 = info * w, info * wk

@@ -1,4 +1,4 @@
-"""Samples of one contiguous segment, read forward once, kept only as long as somebody needs them."""
+"""Samples of one contiguous segment, read forward once, kept only as long as they are needed."""
 
 from __future__ import annotations
 
@@ -72,9 +72,8 @@ class SampleStream:
         """Samples before this position are no longer needed."""
         before = min(max(before, self._kept_from), self._read_to)
         dead = before - self._kept_from
-        if (
-            dead > self._planes.shape[2] // 2
-        ):  # moving rarely keeps its cost below one copy a sample
+        # Moving rarely keeps its cost below one copy a sample.
+        if dead > self._planes.shape[2] // 2:
             kept = self._read_to - before
             self._planes[:, :, :kept] = self._planes[:, :, dead : dead + kept].copy()
             self._kept_from = before

@@ -1,4 +1,4 @@
-"""Kernels shared by tracking and refit: received codebook, posterior of the codewords, 2-state filter.
+"""Kernels of tracking and refit: received codebook, posterior of codewords, two-state filter.
 
 Received vectors are held as float32 real and imaginary parts so that loops over the C codewords
 vectorise.
@@ -10,8 +10,8 @@ import numpy as np
 
 from spatiq.kernels import C64, C128, F32, F64, I32, I64, inlined, kernel
 
-# Codewords with exp(-30) of the best one's likelihood change no sum in single precision.
-POSTERIOR_CUT = np.float32(30.0)
+# Codewords below exp(-14) = 1e-6 of the best one's likelihood change no estimate noticeably.
+POSTERIOR_CUT = np.float32(14.0)
 
 
 @kernel

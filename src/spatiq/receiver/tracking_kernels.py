@@ -1,4 +1,4 @@
-"""Kernels of the first look at the payload: decision-directed tracking of carrier phase and timing."""
+"""Kernels of the first look at the payload: decision-directed carrier phase and timing."""
 
 from __future__ import annotations
 

@@ -1,8 +1,8 @@
 """The codebook: one idea that carries the whole family of index-modulation schemes.
 
-A scheme is an array of C = 2^b transmit vectors, one per word of b bits. The transmitter looks a word
-up; the receiver searches for the nearest vector. To add a scheme: write a function that returns a
-`Codebook` and enter it in `SCHEMES`; the contract suite in tests/ then runs over it.
+A scheme is an array of C = 2^b transmit vectors, one per word of b bits. The transmitter looks a
+word up; the receiver searches for the nearest vector. To add a scheme: write a function that
+returns a `Codebook` and enter it in `SCHEMES`; the contract suite in tests/ then runs over it.
 """
 
 from __future__ import annotations
@@ -62,7 +62,11 @@ class Codebook:
         return bits.reshape(*bits.shape[:-2], bits.shape[-2] * self.bits).astype(np.uint8)
 
     def bits_to_words(self, bits: NDArray[np.uint8]) -> NDArray[np.int64]:
-        """Bits, shape (..., n*b) -> words, shape (..., n). Raises ValueError when n*b does not fit."""
+        """Bits, shape (..., n*b) -> words, shape (..., n).
+
+        Raises:
+            ValueError: when the number of bits is no multiple of b.
+        """
         shape = (*bits.shape[:-1], bits.shape[-1] // self.bits, self.bits)
         grouped = np.asarray(bits).reshape(shape).astype(np.int64)
         weights = 1 << np.arange(self.bits - 1, -1, -1)
