@@ -11,11 +11,11 @@ LIST = {"type": "list", "symbols": [1, [0, 1], [-2, 0]]}
 
 
 def layout_of(*sections, antennas=3):
-    """Layout of a frame that ends in a one-symbol sync section."""
+    """Layout of a frame that ends in a sync section of two symbols."""
     tables = base()
     tables["air"]["antennas"] = antennas
     tables["modulation"] = {"scheme": "space-shift-keying", "antenna_order": [0, 1]}
-    sync = {"kind": "sync", "sequence": {"type": "list", "symbols": [1]}, "antennas": [0]}
+    sync = {"kind": "sync", "sequence": {"type": "list", "symbols": [1, 1]}, "antennas": [0]}
     tables["frame"] = {"section": [*sections, sync]}
     if any(s["kind"] == "payload" for s in sections):
         tables["payload"] = {"field": [{"type": "data", "bits": "rest"}]}
@@ -35,7 +35,7 @@ def test_in_turn_sends_the_round_again():
     assert (layout.kind[:12] == Period.PILOT).all()
     assert [(s.kind, s.start, s.stop) for s in layout.sections] == [
         ("pilots", 0, 12),
-        ("sync", 12, 13),
+        ("sync", 12, 14),
     ]
     assert layout.sync.start == 12
 
@@ -112,3 +112,11 @@ def test_known_symbols_leave_room_for_a_word():
     section = {"kind": "payload", "symbols": 1, "known": {"every": 2, "sequence": LIST}}
     with pytest.raises(InputError, match=r"section\[0\]\.symbols: found 1; expected room"):
         layout_of(section)
+
+
+def test_sync_section_must_leave_the_search_something_to_compare():
+    sync = {"kind": "sync", "sequence": {"type": "list", "symbols": [1]}, "send": "in-turn"}
+    with pytest.raises(InputError, match=r"section\[0\]: found 3 symbol periods; .*least 4, as 3"):
+        layout_of(sync)
+    # All antennas alike: one degree of freedom in two periods.
+    layout_of({**sync, "send": "together", "repeat": 2})

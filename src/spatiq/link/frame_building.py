@@ -59,6 +59,8 @@ def _known_part(
     vectors = section_vectors(table, antennas, place)
     if not np.any(vectors != 0):
         raise (place / "sequence").fault("symbols that are all zero", "a symbol other than zero")
+    if table.kind == "sync":
+        _check_searchable(vectors, place)
     chosen = list(range(antennas)) if table.antennas is None else table.antennas
     how = f" {table.send}" if len(chosen) > 1 else ""
     repeated = f", {table.repeat} times" if table.repeat > 1 else ""
@@ -68,6 +70,21 @@ def _known_part(
     period = Period.SYNC if table.kind == "sync" else Period.PILOT
     kind = np.full(vectors.shape[0], period, np.uint8)
     return _Part(vectors, kind, 0.0, text + extras + _power_text(table.power_db))
+
+
+def _check_searchable(vectors: NDArray[np.complex128], place: Place) -> None:
+    """A search compares a section with noise: that needs more periods than the section has freedom.
+
+    Whatever is received fits N symbols of N independent antennas, so such a section says nothing.
+    """
+    periods, antennas = vectors.shape
+    if periods <= antennas:
+        rank = int(np.linalg.matrix_rank(vectors))
+        if periods <= rank:
+            raise place.fault(
+                f"{periods} symbol periods",
+                f"at least {rank + 1}, as {rank} independent antennas send in this sync section",
+            )
 
 
 def _payload_part(table: tables.PayloadSection, antennas: int, place: Place) -> _Part:

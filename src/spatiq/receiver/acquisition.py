@@ -12,6 +12,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from spatiq.receiver.acquisition_kernels import acquire_frame
 from spatiq.receiver.frame_batch import FrameBatch
@@ -50,29 +51,25 @@ class Acquisition:
         batch.header_freedom = channels * (header.size - self.tables.header_rank) - 1
         return batch
 
-    def _acquire(self, batch: FrameBatch, i: int, grid: np.ndarray) -> None:
+    def _acquire(self, batch: FrameBatch, i: int, grid: NDArray[np.float64]) -> None:
         """Two looks: the first with the search's carrier, the second with the samples derotated."""
+        tables = self.tables
+        known = (tables.header, *tables.header_vectors.parts)
         for look in (grid, grid[:0]):
             found = acquire_frame(
                 batch.planes[i],
                 batch.t0[i],
                 batch.step[i],
                 look,
-                self.tables.header,
-                self.tables.header_vectors.pointer,
-                self.tables.header_vectors.antenna,
-                self.tables.header_vectors.value,
-                self.tables.gram_root,
-                self.tables.header_centroid,
-                self.bank.taps,
-                self.bank.slopes,
-                self.bank.phases,
-                self.bank.slope_energy,
+                known,
+                tables.gram_root,
+                tables.header_centroid,
+                self.bank.parts,
                 batch.channel[i],
             )
             batch.t0[i] = found[0]
             residual = found[1] / batch.step[i]  # cycles per symbol -> cycles per sample
-            origin = batch.t0[i] + self.tables.header_centroid * batch.step[i]
+            origin = batch.t0[i] + tables.header_centroid * batch.step[i]
             derotate(batch.planes[i], residual, origin)
             batch.carrier[i] += residual
             if self.locked_carrier is not None:

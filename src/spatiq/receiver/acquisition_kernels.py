@@ -7,19 +7,24 @@ import numpy as np
 from spatiq.kernels import C64, C128, F32, F64, I64, kernel
 from spatiq.receiver.matched_filter import sample_periods
 
+# Known symbols, sparse: their periods; pointer, antenna and value as in `SparseVectors`.
+Known = tuple[I64, I64, I64, C64]
+# Filter bank: taps, slopes, phases, slope energy.
+Bank = tuple[F32, F32, int, float]
+
 
 @kernel
-def correlate_known(
-    y: F32,
-    periods: I64,
-    carrier: float,
-    origin: float,
-    pointer: I64,
-    antenna: I64,
-    value: C64,
-    out: C128,
-) -> None:
-    """Z = X^H D_f^H Y into out complex128 (Nt, Nr); y float32 (n, 2, Nr), carrier in cycles/symbol."""
+def correlate_known(y: F32, known: Known, carrier: float, origin: float, out: C128) -> None:
+    """Z = X^H D_f^H Y into out complex128 (Nt, Nr).
+
+    Args:
+        y: float32 (n, 2, Nr); received vectors.
+        known: known symbols.
+        carrier: f, cycles per symbol period.
+        origin: period at which D_f turns by nothing.
+        out: filled.
+    """
+    periods, pointer, antenna, value = known
     out[:] = 0.0
     turn = 1.0 + 0.0j
     step = complex(np.cos(2 * np.pi * carrier), -np.sin(2 * np.pi * carrier))
@@ -78,27 +83,24 @@ def grid_search(
     t0: float,
     step: float,
     grid: F64,
-    periods: I64,
-    pointer: I64,
-    antenna: I64,
-    value: C64,
+    known: Known,
     root: C128,
     origin: float,
-    taps: F32,
-    phases: int,
+    bank: Bank,
 ) -> tuple[float, float]:
     """Timing and carrier of the likelihood's largest grid point, refined by parabolas."""
+    taps, _, phases, _ = bank
     channels = planes.shape[0]
-    y = np.empty((periods.size, 2, channels), np.float32)
+    y = np.empty((known[0].size, 2, channels), np.float32)
     z = np.empty((root.shape[1], channels), np.complex128)
     score = np.empty((3, grid.size))
     reach = 0.25 * step  # the search's lags lie half a symbol apart
     for i in range(3):
-        sample_periods(planes, t0 + (i - 1) * reach, step, periods, taps, phases, y)
+        sample_periods(planes, t0 + (i - 1) * reach, step, known[0], taps, phases, y)
         for j in range(grid.size):
-            correlate_known(y, periods, grid[j], origin, pointer, antenna, value, z)
+            correlate_known(y, known, grid[j], origin, z)
             score[i, j] = projected_energy(z, root)
-    top = np.argmax(score)
+    top = int(np.argmax(score))
     i, j = top // grid.size, top % grid.size
     carrier = grid[j]
     if 0 < j < grid.size - 1:
@@ -114,25 +116,32 @@ def grid_search(
 def scoring_step(
     y: F32,
     slope: F32,
-    periods: I64,
+    known: Known,
     carrier: float,
     origin: float,
-    pointer: I64,
-    antenna: I64,
-    value: C64,
     root: C128,
     channel: C128,
     slope_energy: float,
 ) -> tuple[float, float, float, float, float]:
     """One Fisher scoring step with the channel concentrated out.
 
+    Args:
+        y, slope: float32 (n, 2, Nr); filter outputs and their derivatives in time, per sample.
+        known: known symbols.
+        carrier: where the step starts, cycles per symbol period.
+        origin: period to which the channel's phase refers.
+        root: complex128 (rank, Nt); square root of the inverse Gram matrix.
+        channel: complex128 (Nr, Nt); filled with the estimate at `carrier`.
+        slope_energy: of the filter bank.
+
     Returns:
         Corrections of timing (samples) and carrier (cycles per symbol), N0, and the information
         (times N0/2) about the carrier in (radians per symbol)^-2 and about timing in samples^-2.
     """
+    periods, pointer, antenna, value = known
     channels, antennas = y.shape[2], root.shape[1]
     z = np.empty((antennas, channels), np.complex128)
-    correlate_known(y, periods, carrier, origin, pointer, antenna, value, z)
+    correlate_known(y, known, carrier, origin, z)
     solve_channel(z, root, channel)
     # b = (k - origin) X H^T; its part outside the column space of X carries the carrier.
     xb = np.zeros((antennas, channels), np.complex128)
@@ -177,16 +186,10 @@ def acquire_frame(
     t0: float,
     step: float,
     grid: F64,
-    periods: I64,
-    pointer: I64,
-    antenna: I64,
-    value: C64,
+    known: Known,
     root: C128,
     origin: float,
-    taps: F32,
-    slopes: F32,
-    phases: int,
-    slope_energy: float,
+    bank: Bank,
     channel: C128,
 ) -> tuple[float, float, float, float, float]:
     """Maximum-likelihood timing and carrier of one frame; channel complex128 (Nr, Nt) is filled.
@@ -195,20 +198,19 @@ def acquire_frame(
         planes: float32 (Nr, 2, W); samples.
         t0, step: first guess of symbol 0's centre, and samples per symbol.
         grid: carriers to try, cycles per symbol; empty to start from the first guess.
-        periods, pointer, antenna, value: known symbols, sparse.
+        known: known symbols.
         root: complex128 (rank, Nt); square root of the inverse Gram matrix.
         origin: period to which the channel's phase refers.
-        taps, slopes, phases, slope_energy: filter bank.
+        bank: filter bank.
 
     Returns:
         t0, carrier (cycles per symbol), N0, variance of the carrier ((rad/symbol)^2), of t0.
     """
-    channels = planes.shape[0]
+    taps, slopes, phases, slope_energy = bank
+    channels, periods = planes.shape[0], known[0]
     carrier = 0.0
     if grid.size > 0:
-        t0, carrier = grid_search(
-            planes, t0, step, grid, periods, pointer, antenna, value, root, origin, taps, phases
-        )
+        t0, carrier = grid_search(planes, t0, step, grid, known, root, origin, bank)
     y = np.empty((periods.size, 2, channels), np.float32)
     slope = np.empty((periods.size, 2, channels), np.float32)
     noise, carrier_info, timing_info = 0.0, 0.0, 0.0
@@ -216,7 +218,7 @@ def acquire_frame(
         sample_periods(planes, t0, step, periods, taps, phases, y)
         sample_periods(planes, t0, step, periods, slopes, phases, slope)
         timing, turn, noise, carrier_info, timing_info = scoring_step(
-            y, slope, periods, carrier, origin, pointer, antenna, value, root, channel, slope_energy
+            y, slope, known, carrier, origin, root, channel, slope_energy
         )
         t0 += min(max(timing, -0.25 * step), 0.25 * step)
         carrier += turn

@@ -15,7 +15,8 @@ from spatiq.errors import InputError
 from spatiq.link.description import Link
 from spatiq.receiver.acquisition import Acquisition
 from spatiq.receiver.detection import Detection, find_detector
-from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.edge_frames import EdgeFrames
+from spatiq.receiver.frame_batch import FrameBatch, LostFrame
 from spatiq.receiver.frame_search import SyncPattern, sync_pattern
 from spatiq.receiver.framing import Framing
 from spatiq.receiver.link_tables import LinkTables, link_tables
@@ -61,6 +62,9 @@ def chain_parts(recording: Recording, link: Link, options: ReceiverOptions) -> C
             f"{recording.sample_rate:.9g} Hz, {samples_per_symbol:.6g} samples per symbol",
             "1.25 to 64 samples per symbol period",
         )
+    if not link.layout.payload_index.size:
+        place = link.path or "link description"
+        raise InputError(place, "frame.section", "no payload", "a payload section to receive")
     return ChainParts(
         bank=filter_bank(link.pulse, samples_per_symbol),
         tables=link_tables(link),
@@ -115,10 +119,40 @@ def receive(
     frames = 0
     if progress is not None:
         progress(Progress(0, recording.n_samples, 0, "preparing (the first run compiles)"))
+    edges = _edge_frames(recording, link, parts)
+    last: FrameBatch | None = None
     for batch in framing:
         for stage in chosen:
             batch = stage(batch)
+        if edges is not None and batch.count:
+            if last is None:
+                batch.lost = _merged(edges.before(batch), batch.lost, edges.period)
+            last = batch
+        if edges is not None and batch.final and last is not None:
+            batch.lost = _merged(edges.after(last), batch.lost, edges.period)
         frames += batch.count
         if progress is not None:
             progress(Progress(framing.samples_done, recording.n_samples, frames))
         yield batch
+
+
+def _edge_frames(recording: Recording, link: Link, parts: ChainParts) -> EdgeFrames | None:
+    """Looks for frames cut off by the recording's ends; only a frame period says where."""
+    if link.period_symbols is None:
+        return None
+    samples_per_symbol = parts.bank.samples_per_symbol
+    period = link.period_symbols * samples_per_symbol
+    return EdgeFrames(recording, parts.tables, period, samples_per_symbol)
+
+
+def _merged(edge: list[LostFrame], listed: list[LostFrame], period: float) -> list[LostFrame]:
+    """Lost frames in order of time; one whose sync section was seen is listed by it already."""
+    new = [
+        e
+        for e in edge
+        if all(
+            e.segment != f.segment or abs(e.start_sample - f.start_sample) > period / 2
+            for f in listed
+        )
+    ]
+    return sorted(listed + new, key=lambda f: (f.segment, f.start_sample))

@@ -7,7 +7,6 @@ import numpy as np
 from spatiq.kernels import C64, F32, I64, kernel
 from spatiq.receiver.soft_kernels import block_metrics
 
-
 BLOCK = 64  # received vectors handled at once
 
 

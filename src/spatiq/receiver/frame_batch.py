@@ -15,7 +15,11 @@ class LostFrame:
     segment: int
     start_sample: float  # expected centre of its first symbol, per-channel file index
     frame_number: int  # -1 when unknown
-    reason: str  # "cut off by the start", "cut off by the end", "not found", "gap", ...
+    reason: str  # "cut off by the start", "cut off by the end", "not found", "in a gap", ...
+
+
+NOT_FOUND = "not found"
+NOT_FINITE = "samples not finite"
 
 
 @dataclass
@@ -33,6 +37,7 @@ class FrameBatch:
         step: float64 (F,); samples per symbol as received.
         carrier: float64 (F,); carrier offset removed from `planes` so far, cycles per sample.
         lost: frames known to be lost before the last of these.
+        final: True for the recording's last batch, which may be empty.
 
     Filled by acquisition and refined by the refit:
         carrier_estimate: float64 (F,); carrier offset including what the phase track shows.
@@ -73,6 +78,7 @@ class FrameBatch:
     header_freedom: int = 0
     words_two_step: NDArray[np.int64] | None = None
     lost: list[LostFrame] = field(default_factory=list)
+    final: bool = False
 
     @property
     def count(self) -> int:

@@ -8,7 +8,7 @@ there is listed with its reason.
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -16,13 +16,20 @@ from numpy.typing import NDArray
 
 from spatiq.link.description import Link
 from spatiq.receiver.expected_frames import FoundStart, lost_between
-from spatiq.receiver.frame_batch import FrameBatch, LostFrame, empty_batch
+from spatiq.receiver.frame_batch import (
+    NOT_FINITE,
+    NOT_FOUND,
+    FrameBatch,
+    LostFrame,
+    empty_batch,
+)
 from spatiq.receiver.frame_search import LAGS_PER_SYMBOL, Detection, FrameSearch, SyncPattern
 from spatiq.receiver.framing_kernels import cut_window
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank, derotate
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
+from spatiq.receiver.spoiled_samples import SpoiledSamples
 from spatiq.recording.placement import Segment
 from spatiq.recording.recording import Recording
 
@@ -91,6 +98,7 @@ class Framing:
         self._pattern = pattern
         self._geometry = frame_geometry(link, bank, options)
         self._clip = clip_levels(recording)
+        self._spoiled = SpoiledSamples(2 * bank.half)
         frame_bytes = recording.channels * 2 * self._geometry.window * 4
         self._batch_size = max(1, min(_BATCH_FRAMES, _BATCH_BYTES // frame_bytes))
         # One array for all batches: fresh memory would cost as much as the filter.
@@ -109,6 +117,7 @@ class Framing:
                     position = start - segment.start + segment.global_index
                     here = FoundStart(segment, start, position)
                     batch.lost += self._missing(previous, here)
+                    self._spoiled.forget(self._reach(start)[0])
                     previous = here
                 if isinstance(found, LostFrame):
                     batch.lost.append(found)
@@ -118,8 +127,9 @@ class Framing:
                 if count == self._batch_size:
                     yield batch
                     batch, count = self._new_batch(), 0
-        batch.lost += self._missing(previous, None)
-        yield _first_frames(batch, count)
+        last = _first_frames(batch, count)
+        last.final = True
+        yield last
 
     def _new_batch(self) -> FrameBatch:
         return empty_batch(
@@ -129,21 +139,34 @@ class Framing:
             self._link.layout.payload_index.size,
         )
 
-    def _missing(self, before: FoundStart | None, after: FoundStart | None) -> list[LostFrame]:
-        if self._link.period_symbols is None:
+    def _missing(self, before: FoundStart | None, after: FoundStart) -> list[LostFrame]:
+        if self._link.period_symbols is None or before is None:
             return []
         period = self._link.period_symbols * self._geometry.samples_per_symbol
         active = self._tables.active
         sps = self._geometry.samples_per_symbol
         span = (float(active[0]) * sps, float(active[-1]) * sps)
-        return lost_between(self._recording.segments, before, after, period, span)
+        lost = lost_between(self._recording.segments, before, after, period, span)
+        return [
+            replace(f, reason=NOT_FINITE) if f.reason == NOT_FOUND and self._is_spoiled(f) else f
+            for f in lost
+        ]
+
+    def _reach(self, start: float) -> tuple[float, float]:
+        """First and last sample that the matched filter of a frame's symbols touches."""
+        sps, half, active = self._bank.samples_per_symbol, self._bank.half, self._tables.active
+        return start + active[0] * sps - half, start + active[-1] * sps + half
+
+    def _is_spoiled(self, frame: LostFrame) -> bool:
+        return self._spoiled.within(*self._reach(frame.start_sample))
 
     def _segment(
         self, segment: Segment
     ) -> Iterator[tuple[tuple[Detection, NDArray[np.float32]] | LostFrame, float | None]]:
         """Frames of one segment: what was found, and the start of a frame in file samples."""
         blocks = self._recording.blocks(self._options.block_size, segment.start, segment.stop)
-        stream = SampleStream(blocks, segment.start, segment.stop, self._recording.channels)
+        channels = self._recording.channels
+        stream = SampleStream(blocks, segment.start, segment.stop, channels, self._spoiled)
         sync = self._link.layout.sync.start
         lead = sync + 2 * self._geometry.guard
         search = FrameSearch(stream, self._bank, self._pattern, lead)
@@ -155,11 +178,14 @@ class Framing:
                 break
             start = segment.start + (found.lag - LAGS_PER_SYMBOL * sync) * spacing
             reason = self._cut_off(segment, start)
+            window = self._first_sample(start)
+            samples = stream.planes(window, window + self._geometry.window)
+            if not reason and self._spoiled.within(*self._reach(start)):
+                reason = NOT_FINITE
             if reason:
                 yield LostFrame(segment.index, start, -1, reason), start
             else:
-                window = self._first_sample(start)
-                yield (found, stream.planes(window, window + self._geometry.window)), start
+                yield (found, samples), start
             last = found
             drift = 1 + int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
             lag = found.lag + LAGS_PER_SYMBOL * max(self._geometry.length - drift, 1)

@@ -8,8 +8,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.errors import InputError
-from spatiq.link.layout import FrameLayout, Period
 from spatiq.link.description import Link
+from spatiq.link.layout import FrameLayout, Period
 from spatiq.signal.codebooks import Codebook
 
 

@@ -30,7 +30,6 @@ from spatiq.receiver.refit_kernels import (
 from spatiq.receiver.soft_kernels import received_codebook
 from spatiq.receiver.tracking import floored_noise
 
-
 _WIDE = np.array([10.0, 1.0])  # prior variances of phase and carrier left: nothing is assumed
 
 

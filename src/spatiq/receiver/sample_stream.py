@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.kernels import C64, F32, kernel
+from spatiq.receiver.spoiled_samples import SpoiledSamples
 
 
 class SampleBlock(Protocol):
@@ -21,12 +22,22 @@ class SampleBlock(Protocol):
 
 
 @kernel
-def _to_planes(samples: C64, planes: F32, at: int) -> None:
-    """complex64 (Nr, n) -> float32 planes (Nr, 2, capacity) from column `at`."""
+def to_planes(samples: C64, planes: F32, at: int) -> int:
+    """complex64 (Nr, n) -> float32 planes (Nr, 2, capacity) from column `at`.
+
+    Returns:
+        Number of samples that are not finite, in all channels; they are entered as zero.
+    """
+    spoiled = 0
+    zero = np.float32(0.0)
     for r in range(samples.shape[0]):
         for i in range(samples.shape[1]):
-            planes[r, 0, at + i] = samples[r, i].real
-            planes[r, 1, at + i] = samples[r, i].imag
+            re, im = samples[r, i].real, samples[r, i].imag
+            finite = np.isfinite(re) and np.isfinite(im)
+            planes[r, 0, at + i] = re if finite else zero
+            planes[r, 1, at + i] = im if finite else zero
+            spoiled += 0 if finite else 1
+    return spoiled
 
 
 class SampleStream:
@@ -34,10 +45,19 @@ class SampleStream:
 
     Real and imaginary parts are held in planes of their own, because the matched filter's inner
     loops then vectorise. Positions are per-channel file indices. Samples outside the segment read
-    as zero. Memory: what lies between `release` and the furthest position asked for, plus a block.
+    as zero, and so do samples that are not finite in any channel, which are entered in `spoiled`.
+    Memory: what lies between `release` and the furthest position asked for, plus a block.
     """
 
-    def __init__(self, blocks: Iterator[SampleBlock], start: int, stop: int, channels: int) -> None:
+    def __init__(
+        self,
+        blocks: Iterator[SampleBlock],
+        start: int,
+        stop: int,
+        channels: int,
+        spoiled: SpoiledSamples | None = None,
+    ) -> None:
+        self._spoiled = spoiled
         self.start = start
         self.stop = stop
         self.channels = channels
@@ -86,5 +106,7 @@ class SampleStream:
             grown = np.zeros((self.channels, 2, max(needed, 2 * self._planes.shape[2])), np.float32)
             grown[:, :, :at] = self._planes[:, :, :at]
             self._planes = grown
-        _to_planes(samples, self._planes, at)
+        if to_planes(samples, self._planes, at) and self._spoiled is not None:
+            where = np.flatnonzero(~np.isfinite(samples).all(axis=0))
+            self._spoiled.add(self._read_to + where)
         self._read_to += samples.shape[1]

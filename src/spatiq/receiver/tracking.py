@@ -76,22 +76,21 @@ class Tracking:
         step_var = (self.clock_std * bank.samples_per_symbol) ** 2
         prior = np.array([phase_var, batch.frequency_var[i], batch.timing_var[i], step_var])
         track = np.zeros(4)
+        vectors, amplitude = tables.active_vectors.parts, tables.active_amplitude
+        sent = (tables.active, tables.active_word, vectors, amplitude)
         track_side(
             batch.planes[i],
             batch.t0[i],
             batch.step[i],
             order,
-            tables.active,
-            tables.active_word,
-            tables.active_vectors.parts,
-            tables.active_amplitude,
+            sent,
             batch.channel[i],
             codebook,
             noise,
             tables.header_centroid,
             prior,
             self.phase_walk,
-            (bank.taps, bank.slopes, bank.phases, bank.slope_energy),
+            bank.parts,
             with_timing,
             batch.phase[i],
             track,

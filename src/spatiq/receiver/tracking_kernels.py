@@ -141,15 +141,40 @@ def update_timing(
 
 
 @kernel
+def block_vectors(channels: int) -> tuple[F32, F32]:
+    """Room for a block's vectors, real and imaginary, (Nr, B) each."""
+    return np.empty((channels, BLOCK), np.float32), np.empty((channels, BLOCK), np.float32)
+
+
+@kernel
+def block_scratch(size: int) -> tuple[F32, F32, F32, I32, I64, F32]:
+    """Room for `block_references` with a codebook of `size` words."""
+    return (
+        np.empty((size, BLOCK), np.float32),
+        np.empty(BLOCK, np.float32),
+        np.empty(BLOCK, np.float32),
+        np.empty(BLOCK, np.int32),
+        np.empty(size, np.int64),
+        np.empty(size, np.float32),
+    )
+
+
+@kernel
+def write_phase(position: F64, smoothed: F64, order: I64, active: I64, phase: F32) -> None:
+    """Phase of the periods travelled, from the smoothed (phase, carrier) of each block."""
+    for b in range(position.size):
+        for n in range(b * BLOCK, min(order.size, (b + 1) * BLOCK)):
+            i = order[n]
+            phase[i] = smoothed[b, 0] + smoothed[b, 1] * (active[i] - position[b])
+
+
+@kernel
 def track_side(
     planes: F32,
     t0: float,
     step: float,
     order: I64,
-    active: I64,
-    active_word: I64,
-    vectors: tuple[I64, I64, C64],
-    amplitude: F32,
+    sent: tuple[I64, I64, tuple[I64, I64, C64], F32],
     channel: C128,
     codebook: tuple[F32, F32, F32],
     noise: float,
@@ -164,7 +189,9 @@ def track_side(
     """Track from the header outwards over the active periods listed in `order`.
 
     Args:
-        order: indices into `active`, in the order of travel.
+        order: indices of active periods, in the order of travel.
+        sent: of the active periods: period, payload word or -1, known vectors (pointer, antenna,
+            value), amplitude.
         prior: (4,); variances of phase, carrier, timing and step at the header's centroid.
         walk: variance of the phase's random walk per period.
         bank: taps, slopes, phases and slope energy of the filter bank.
@@ -172,19 +199,10 @@ def track_side(
         track: (4,); filled with the corrections of t0 and step, and the phase and its slope at the
             header's centroid.
     """
+    active, active_word, vectors, amplitude = sent
     taps, slopes, phases, slope_energy = bank
     channels, size = codebook[0].shape
-    shape = (channels, BLOCK)
-    z = (np.empty(shape, np.float32), np.empty(shape, np.float32))
-    means = (np.empty(shape, np.float32), np.empty(shape, np.float32))
-    scratch = (
-        np.empty((size, BLOCK), np.float32),
-        np.empty(BLOCK, np.float32),
-        np.empty(BLOCK, np.float32),
-        np.empty(BLOCK, np.int32),
-        np.empty(size, np.int64),
-        np.empty(size, np.float32),
-    )
+    z, means, scratch = block_vectors(channels), block_vectors(channels), block_scratch(size)
     blocks = (order.size + BLOCK - 1) // BLOCK
     position, sums = np.empty(blocks), np.empty(5)
     filtered, filtered_cov = np.empty((blocks, 2)), np.empty((blocks, 3))
@@ -197,7 +215,7 @@ def track_side(
         predict(state, cov, here - at, walk)
         predict(t_state, t_cov, here - at, 0.0)
         at = here
-        offsets = active[periods] - here
+        offsets = active[periods].astype(np.float64) - here
         instants = t0 + t_state[0] + active[periods] * step + t_state[1] * offsets
         angles = (state[0] + state[1] * offsets).astype(np.float32)
         scales = np.float32(1.0) / amplitude[periods]
@@ -217,10 +235,7 @@ def track_side(
         filtered_cov[b] = cov
     smoothed = np.empty((blocks, 2))
     smooth(blocks, position, filtered, filtered_cov, walk, smoothed)
-    for b in range(blocks):
-        for n in range(b * BLOCK, min(order.size, (b + 1) * BLOCK)):
-            i = order[n]
-            phase[i] = smoothed[b, 0] + smoothed[b, 1] * (active[i] - position[b])
+    write_phase(position, smoothed, order, active, phase)
     track[0] = t_state[0] - t_state[1] * at
     track[1] = t_state[1]
     track[2] = smoothed[0, 0] + smoothed[0, 1] * (centroid - position[0])

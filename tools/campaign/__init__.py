@@ -1,0 +1,1 @@
+"""Measuring campaigns: how true, how fast and how small the program is."""
