@@ -3,8 +3,8 @@
     python3 tools/fidelity.py            the whole campaign, some minutes
     python3 tools/fidelity.py --quick    a few of its points, within 50 seconds
 
-Prints a table; its last line is the worst ratio of the measured BER to the genie's. Ends with 1 when
-a bar is missed. Progress goes to standard error.
+Prints a table; its last line is the worst ratio of the measured BER to the genie's. Ends with 1
+when a bar is missed. Progress goes to standard error.
 """
 
 from __future__ import annotations

@@ -25,6 +25,12 @@ F = TypeVar("F", bound=Callable[..., Any])
 
 # Reassociation lets loops vectorise; "nnan" and "ninf" are left out: isnan checks still work.
 FAST_ARITHMETIC = {"nsz", "contract", "arcp", "reassoc"}
+# Division by zero gives infinity, as in NumPy: checking each division keeps loops from vectorising.
+_OPTIONS: dict[str, Any] = {
+    "nogil": True,
+    "fastmath": FAST_ARITHMETIC,
+    "error_model": "numpy",
+}
 
 
 def _cache_is_writable() -> bool:
@@ -45,12 +51,10 @@ _CACHE = _cache_is_writable()
 
 def kernel(function: F) -> F:
     """Compile a hot loop: bare arrays in and out, no objects, no files."""
-    compiled = numba.njit(cache=_CACHE, nogil=True, fastmath=FAST_ARITHMETIC)(function)
-    return cast(F, compiled)
+    return cast(F, numba.njit(cache=_CACHE, **_OPTIONS)(function))
 
 
 def inlined(function: F) -> F:
     """A piece of a kernel that runs once per symbol: entered into its caller, for handing arrays
     over would cost as much as its work."""
-    compiled = numba.njit(nogil=True, forceinline=True, fastmath=FAST_ARITHMETIC)(function)
-    return cast(F, compiled)
+    return cast(F, numba.njit(forceinline=True, **_OPTIONS)(function))

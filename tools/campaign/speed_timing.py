@@ -1,4 +1,4 @@
-"""What is timed: the transform pass, the measuring, the whole work of the command, and its stages."""
+"""What is timed: the transform pass, measuring, the whole work of the command, and its stages."""
 
 from __future__ import annotations
 

@@ -43,8 +43,8 @@ class FrameLayout:
             section power included; zero in payload and silence.
         kind: uint8, shape (K,); a `Period` for each symbol period.
         payload_index: int64, shape (Kp,); symbol period of each payload word, ascending.
-        payload_amplitude: float64, shape (Kp,); amplitude factor of each payload word (its section's
-            power).
+        payload_amplitude: float64, shape (Kp,); amplitude factor of each payload word, from its
+            section's power.
         sections: the sections in order, as spans.
     """
 

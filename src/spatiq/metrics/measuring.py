@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from spatiq.link.description import Link
 from spatiq.metrics.figures import channel_error_variance, fill_figures
 from spatiq.metrics.frame_table import MeasuredFrames, empty_columns
-from spatiq.metrics.measuring_kernels import compare_words, error_vectors
+from spatiq.metrics.measuring_kernels import compare_words, count_bits, error_vectors
 from spatiq.metrics.reference_following import Numbering, ReferenceFollower
 from spatiq.receiver.chain import Progress, Stage, receive
 from spatiq.receiver.frame_batch import FrameBatch, LostFrame
@@ -91,8 +91,9 @@ class Measuring:
         plain = self.link.payload.descramble(bits)
         crc = self.link.payload.crc_ok(plain)
         numbering = self._follower.number(plain, crc, position)
-        sent = self._sent_words(numbering)
-        self._count_bits(columns, batch, plain, numbering)
+        reference = self._reference(numbering)
+        sent = self._sent_words(numbering, reference)
+        self._count_bits(columns, batch, plain, numbering, reference)
         columns["frame_number"][:] = numbering.numbers
         if crc is not None:
             columns["crc_ok"][:] = crc
@@ -121,7 +122,13 @@ class Measuring:
         shift = [s.global_index - s.start for s in self.recording.segments]
         return np.asarray(shift, np.float64)[batch.segment]
 
-    def _sent_words(self, numbering: Numbering) -> NDArray[np.int64]:
+    def _reference(self, numbering: Numbering) -> NDArray[np.uint8]:
+        """Plain bits as sent, (F, n_bits), as far as they are known."""
+        if numbering.reference is not None:
+            return numbering.reference
+        return self.link.payload.reference(np.maximum(numbering.numbers, 0))
+
+    def _sent_words(self, numbering: Numbering, reference: NDArray[np.uint8]) -> NDArray[np.int64]:
         """Words as sent, (F, Kp); -1 where any bit of the word is unknown.
 
         Without reference bits all are: a few words of counter would pass for the whole payload.
@@ -131,7 +138,6 @@ class Measuring:
         words = np.full((count, self.link.layout.payload_index.size), -1, np.int64)
         if not payload.has_reference:
             return words
-        reference = payload.reference(np.maximum(numbering.numbers, 0))
         known = np.where(numbering.resolved[:, None], payload.reference_mask, self._static)
         scrambler = payload.scrambler
         if scrambler is not None:
@@ -148,21 +154,21 @@ class Measuring:
         batch: FrameBatch,
         plain: NDArray[np.uint8],
         numbering: Numbering,
+        reference: NDArray[np.uint8],
     ) -> None:
         payload = self.link.payload
-        reference = payload.reference(np.maximum(numbering.numbers, 0))
         counted = np.where(numbering.resolved[:, None], payload.known_mask, self._static)
-        wrong = (plain != reference) & counted
-        columns["bits_compared"][:] = counted.sum(axis=1)
-        columns["bit_errors"][:] = wrong.sum(axis=1)
-        columns["spatial_bits_compared"][:] = counted[:, self._spatial].sum(axis=1)
-        columns["spatial_bit_errors"][:] = wrong[:, self._spatial].sum(axis=1)
-        columns["signal_bits_compared"][:] = counted[:, ~self._spatial].sum(axis=1)
-        columns["signal_bit_errors"][:] = wrong[:, ~self._spatial].sum(axis=1)
+        counts = np.zeros((batch.count, 2, 2), np.int64)
+        count_bits(plain, reference, counted, self._spatial, counts)
+        for kind, name in enumerate(("signal", "spatial")):
+            columns[f"{name}_bits_compared"][:] = counts[:, kind, 0]
+            columns[f"{name}_bit_errors"][:] = counts[:, kind, 1]
+        columns["bits_compared"][:] = counts[:, :, 0].sum(axis=1)
+        columns["bit_errors"][:] = counts[:, :, 1].sum(axis=1)
         if batch.words_two_step is not None:
             bits = self.link.codebook.words_to_bits(batch.words_two_step)
-            wrong = (payload.descramble(bits) != reference) & counted
-            columns["two_step_bit_errors"][:] = wrong.sum(axis=1)
+            count_bits(payload.descramble(bits), reference, counted, self._spatial, counts)
+            columns["two_step_bit_errors"][:] = counts[:, :, 1].sum(axis=1)
 
     def _compare(
         self,

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
-from spatiq.kernels import C64, C128, F64, I64, kernel
+from spatiq.kernels import C64, C128, F64, I64, U8, kernel
 
 
 @kernel
@@ -30,6 +31,27 @@ def compare_words(
             counts[1] += 1
         elif symbol_index[sent[k]] != symbol_index[decided[k]]:
             counts[2] += 1
+
+
+@kernel
+def count_bits(
+    decided: U8, sent: U8, counted: NDArray[np.bool_], spatial: NDArray[np.bool_], counts: I64
+) -> None:
+    """Bits compared and wrong of each frame.
+
+    Args:
+        decided, sent: uint8 (F, n).
+        counted: bool (F, n); bits to compare.
+        spatial: bool (n,); bits that chose the antenna.
+        counts: int64 (F, 2, 2), filled: signal and spatial bits, each compared and wrong.
+    """
+    counts[:] = 0
+    for f in range(decided.shape[0]):
+        for i in range(decided.shape[1]):
+            kind = np.int64(spatial[i])
+            used = np.int64(counted[f, i])
+            counts[f, kind, 0] += used
+            counts[f, kind, 1] += used & np.int64(decided[f, i] != sent[f, i])
 
 
 @kernel

@@ -23,10 +23,14 @@ _CONFIRMATION = 1e-3
 
 @dataclass(frozen=True, eq=False)
 class Numbering:
-    """Frame numbers, int64 (F,), -1 where unknown, and whether each is known, bool (F,)."""
+    """Frame numbers, int64 (F,), -1 where unknown, and whether each is known, bool (F,).
+
+    `reference`: plain bits of the frames, (F, n_bits), when they were needed to find the numbers.
+    """
 
     numbers: NDArray[np.int64]
     resolved: NDArray[np.bool_]
+    reference: NDArray[np.uint8] | None = None
 
 
 @dataclass
@@ -46,6 +50,7 @@ class ReferenceFollower:
     _counter: FieldSpan | None = field(init=False)
     _search: PrbsSearch | None = field(init=False)
     _running: FieldSpan | None = field(init=False)
+    _reference: NDArray[np.uint8] | None = field(init=False, default=None)
 
     def __post_init__(self) -> None:
         """Note which bits depend on the frame number."""
@@ -77,6 +82,7 @@ class ReferenceFollower:
         numbers = np.full(count, -1, np.int64)
         if not self._dependent.size:
             return Numbering(numbers, np.ones(count, np.bool_))
+        self._reference = None
         i = 0
         while i < count:
             i = self._follow(plain, position, numbers, i)
@@ -85,7 +91,7 @@ class ReferenceFollower:
                 if numbers[i] >= 0:
                     self._last = (int(numbers[i]), float(position[i]))
                 i += 1
-        return Numbering(numbers, numbers >= 0)
+        return Numbering(numbers, numbers >= 0, self._reference)
 
     def _expected(self, position: NDArray[np.float64]) -> NDArray[np.int64]:
         """Numbers after the last known one: by the period, else one more each time."""
@@ -107,11 +113,14 @@ class ReferenceFollower:
         if self._last is None:
             return i
         expected = self._expected(position[i:])
-        reference = self.payload.reference(expected)[:, self._dependent]
-        wrong = np.count_nonzero(reference != plain[i:, self._dependent], axis=1)
+        reference = self.payload.reference(expected)
+        wrong = np.count_nonzero(
+            reference[:, self._dependent] != plain[i:, self._dependent], axis=1
+        )
         misfit = np.flatnonzero(wrong > self._most_wrong)
         fits = int(misfit[0]) if misfit.size else expected.size
         numbers[i : i + fits] = expected[:fits]
+        self._reference = reference if fits == plain.shape[0] else None
         if fits:
             self._last = (int(expected[fits - 1]), float(position[i + fits - 1]))
         return i + fits

@@ -214,7 +214,7 @@ def acquire_frame(
     y = np.empty((periods.size, 2, channels), np.float32)
     slope = np.empty((periods.size, 2, channels), np.float32)
     noise, carrier_info, timing_info = 0.0, 0.0, 0.0
-    for _ in range(3):
+    for _ in range(2):
         sample_periods(planes, t0, step, periods, taps, phases, y)
         sample_periods(planes, t0, step, periods, slopes, phases, slope)
         timing, turn, noise, carrier_info, timing_info = scoring_step(

@@ -19,6 +19,7 @@ from __future__ import annotations
 import importlib
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -57,6 +58,25 @@ def two_step(
     Raises:
         InputError: for codebooks in which a set has more than one active antenna.
     """
+    plan = _two_step_plan(codebook)
+    columns = np.ascontiguousarray(channel[:, plan.antennas].T).astype(np.complex64)
+    words = np.empty(y.shape[0], np.int64)
+    detect_two_step(y, columns, plan.members, plan.counts, plan.values, words)
+    return words
+
+
+@dataclass(frozen=True, eq=False)
+class _TwoStepPlan:
+    """Words of each antenna (A, C), how many (A,), the antennas (A,), symbol of each word (C,)."""
+
+    members: NDArray[np.int64]
+    counts: NDArray[np.int64]
+    antennas: NDArray[np.int64]
+    values: NDArray[np.complex64]
+
+
+@lru_cache(maxsize=8)
+def _two_step_plan(codebook: Codebook) -> _TwoStepPlan:
     if any(len(s) != 1 for s in codebook.antenna_sets):
         raise InputError(
             "receiver options", "detector", "two-step", "one active antenna per symbol period"
@@ -69,11 +89,8 @@ def two_step(
         members[s, counts[s]] = c
         counts[s] += 1
     antennas = np.array([s[0] for s in codebook.antenna_sets], np.int64)
-    columns = np.ascontiguousarray(channel[:, antennas].T).astype(np.complex64)
     values = codebook.vectors[np.arange(codebook.size), antennas[codebook.set_index]]
-    words = np.empty(y.shape[0], np.int64)
-    detect_two_step(y, columns, members, counts, values.astype(np.complex64), words)
-    return words
+    return _TwoStepPlan(members, counts, antennas, values.astype(np.complex64))
 
 
 DETECTORS: dict[str, Detector] = {

@@ -5,9 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from spatiq.kernels import C64, F32, I64, kernel
-from spatiq.receiver.soft_kernels import block_metrics
-
-BLOCK = 64  # received vectors handled at once
+from spatiq.receiver.soft_kernels import VECTORS, block_metrics
 
 
 @kernel
@@ -21,13 +19,13 @@ def detect_maximum_likelihood(y: C64, real: F32, imag: F32, power: F32, words: I
         words: int64 (K,); filled.
     """
     channels = y.shape[1]
-    metric = np.empty((power.size, BLOCK), np.float32)
-    best, second = np.empty(BLOCK, np.float32), np.empty(BLOCK, np.float32)
-    nearest = np.empty(BLOCK, np.int32)
-    z_real = np.empty((channels, BLOCK), np.float32)
-    z_imag = np.empty((channels, BLOCK), np.float32)
-    for first in range(0, y.shape[0], BLOCK):
-        count = min(BLOCK, y.shape[0] - first)
+    metric = np.empty((power.size, VECTORS), np.float32)
+    best, second = np.empty(VECTORS, np.float32), np.empty(VECTORS, np.float32)
+    nearest = np.empty(VECTORS, np.int32)
+    z_real = np.empty((channels, VECTORS), np.float32)
+    z_imag = np.empty((channels, VECTORS), np.float32)
+    for first in range(0, y.shape[0], VECTORS):
+        count = min(VECTORS, y.shape[0] - first)
         for k in range(count):
             for r in range(channels):
                 z_real[r, k] = y[first + k, r].real

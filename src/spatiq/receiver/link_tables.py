@@ -53,6 +53,7 @@ class LinkTables:
         active_word: int64 (Ka,); running index of the payload word sent there, -1 for known
             symbols.
         active_vectors: known vectors of the active periods (empty rows at payload).
+        known_vectors: complex64 (Ka, Nt); the known vectors of the active periods, zero at payload.
         known_gram: complex128 (Nt, Nt); sum of x x^H over all known vectors.
         active_amplitude: float32 (Ka,); amplitude factor of payload words, 1 elsewhere.
         in_header: uint8 (Ka,); 1 where the active period belongs to the header.
@@ -67,6 +68,7 @@ class LinkTables:
     active: NDArray[np.int64]
     active_word: NDArray[np.int64]
     active_vectors: SparseVectors
+    known_vectors: NDArray[np.complex64]
     known_gram: NDArray[np.complex128]
     active_amplitude: NDArray[np.float32]
     in_header: NDArray[np.uint8]
@@ -102,6 +104,7 @@ def link_tables(link: Link) -> LinkTables:
         active=active,
         active_word=word_of_period[active],
         active_vectors=sparse_vectors(layout.known[active]),
+        known_vectors=layout.known[active].astype(np.complex64),
         known_gram=layout.known.T @ layout.known.conj(),
         active_amplitude=amplitude[active],
         in_header=is_header[active].astype(np.uint8),

@@ -25,7 +25,7 @@ from spatiq.receiver.refit_kernels import (
     refit_phase,
     refit_timing,
     rotate_active,
-    solve_moments,
+    solve_diagonal,
 )
 from spatiq.receiver.soft_kernels import received_codebook
 from spatiq.receiver.tracking import floored_noise
@@ -77,15 +77,14 @@ class Refit:
             batch.planes[i], batch.t0[i], batch.step[i], tables.active, bank.taps, bank.phases, y
         )
         rotate_active(y, batch.phase[i])
-        mean = np.empty((tables.active.size, antennas), np.complex64)
+        mean = tables.known_vectors.copy()
         sxx = np.empty((antennas, antennas), np.complex128)
         syx = np.empty((channels, antennas), np.complex128)
-        vectors, words = tables.active_vectors, tables.words
+        words = tables.words
         energy = np.empty(tables.codebook.size)
         error = expectation(
             y,
             tables.active_word,
-            vectors.parts,
             tables.active_amplitude,
             words.parts,
             codebook,
@@ -104,7 +103,9 @@ class Refit:
             self._timing(batch, i, before, reference, noise)
         rotate_active(y, batch.phase[i] - before)
         cross_moments(y, mean, syx)
-        solve_moments(sxx, syx, batch.channel[i])
+        if not solve_diagonal(sxx, syx, batch.channel[i]):
+            # Antennas that the known symbols alone never tell apart keep the least-norm answer.
+            batch.channel[i] = syx @ np.linalg.pinv(sxx, hermitian=True)
         batch.antenna_energy[i] = sxx.diagonal().real
         used = int(np.count_nonzero(batch.antenna_energy[i] > 0))
         batch.noise[i] = error / max(channels * (tables.active.size - used) - 2, 1)

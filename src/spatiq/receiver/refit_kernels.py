@@ -4,8 +4,16 @@ from __future__ import annotations
 
 import numpy as np
 
-from spatiq.kernels import C64, C128, F32, F64, I64, inlined, kernel
-from spatiq.receiver.soft_kernels import block_metrics, posterior, predict, smooth, update
+from spatiq.kernels import C64, C128, F32, F64, I32, I64, kernel
+from spatiq.receiver.soft_kernels import (
+    VECTORS,
+    block_metrics,
+    block_posterior,
+    block_scratch,
+    predict,
+    smooth,
+    update,
+)
 from spatiq.receiver.tracking_kernels import BLOCK
 
 
@@ -18,31 +26,6 @@ def rotate_active(values: F32, phase: F32) -> None:
             re, im = values[i, 0, r], values[i, 1, r]
             values[i, 0, r] = re * c + im * s
             values[i, 1, r] = im * c - re * s
-
-
-@inlined
-def enter_known(vectors: tuple[I64, I64, C64], i: int, mean: C64) -> None:
-    """Enter known vector i into mean[i] (Nt,)."""
-    pointer, antenna, value = vectors
-    for j in range(pointer[i], pointer[i + 1]):
-        mean[i, antenna[j]] = value[j]
-
-
-@inlined
-def enter_expected(
-    index: I64,
-    weight: F32,
-    count: int,
-    words: tuple[I64, I64, C64],
-    amplitude: np.float32,
-    i: int,
-    mean: C64,
-) -> None:
-    """Enter E[x] under the posterior of the codewords into mean[i] (Nt,)."""
-    pointer, antenna, value = words
-    for n in range(count):
-        for j in range(pointer[index[n]], pointer[index[n] + 1]):
-            mean[i, antenna[j]] += weight[n] * amplitude * value[j]
 
 
 @kernel
@@ -62,7 +45,6 @@ def gram(words: tuple[I64, I64, C64], energy: F64, known: C128, sxx: C128) -> No
 def expectation(
     y: F32,
     active_word: I64,
-    vectors: tuple[I64, I64, C64],
     amplitude: F32,
     words: tuple[I64, I64, C64],
     codebook: tuple[F32, F32, F32],
@@ -75,11 +57,10 @@ def expectation(
     Args:
         y: float32 (Ka, 2, Nr); received vectors, carrier phase removed.
         active_word, amplitude: (Ka,); payload word index or -1; amplitude of payload words.
-        vectors: known vectors of the active periods: pointer, antenna, value.
         words: codeword vectors: pointer, antenna, value.
         codebook: received codebook: real, imag (Nr, C), power (C,).
         noise: N0.
-        mean: complex64 (Ka, Nt); filled with E[x], the known x where it is known.
+        mean: complex64 (Ka, Nt); E[x] is added at the payload periods, which hold zero.
         energy: float64 (C,); filled with each codeword's expected number of uses, times amplitude
             squared.
 
@@ -88,40 +69,59 @@ def expectation(
     """
     g_real, g_imag, g_power = codebook
     channels, size = g_real.shape
-    weight, index = np.empty(size, np.float32), np.empty(size, np.int64)
-    metric = np.empty((size, BLOCK), np.float32)
-    best, second = np.empty(BLOCK, np.float32), np.empty(BLOCK, np.float32)
-    nearest = np.empty(BLOCK, np.int32)
-    z_real = np.zeros((channels, BLOCK), np.float32)
-    z_imag = np.zeros((channels, BLOCK), np.float32)
+    scratch = block_scratch(size, VECTORS)
+    metric, best, second, nearest, inverse_noise, index, weight, used = scratch
+    z_real = np.zeros((channels, VECTORS), np.float32)
+    z_imag = np.zeros((channels, VECTORS), np.float32)
     energy[:] = 0.0
-    mean[:] = 0.0
     total = 0.0
-    for first in range(0, active_word.size, BLOCK):
-        block = min(BLOCK, active_word.size - first)
+    for first in range(0, active_word.size, VECTORS):
+        block = min(VECTORS, active_word.size - first)
         for k in range(block):
             scale = np.float32(1.0) / amplitude[first + k]
+            inverse_noise[k] = amplitude[first + k] * amplitude[first + k] / noise
             for r in range(channels):
                 z_real[r, k] = y[first + k, 0, r] * scale
                 z_imag[r, k] = y[first + k, 1, r] * scale
         block_metrics(g_real, g_imag, g_power, z_real, z_imag, block, metric, best, second, nearest)
-        for k in range(block):
-            i = first + k
-            if active_word[i] < 0:
-                enter_known(vectors, i, mean)
-                continue
-            power = np.float32(0.0)
-            for r in range(channels):
-                power += z_real[r, k] * z_real[r, k] + z_imag[r, k] * z_imag[r, k]
-            square = amplitude[i] * amplitude[i]
-            count = posterior(
-                metric, k, best, second, nearest, np.float32(square / noise), index, weight
-            )
-            for n in range(count):
-                distance = max(metric[index[n], k] + power, np.float32(0.0))
-                total += weight[n] * distance * square
-                energy[index[n]] += weight[n] * square
-            enter_expected(index, weight, count, words, amplitude[i], i, mean)
+        block_posterior(metric, best, second, nearest, inverse_noise, block, index, weight, used)
+        total += enter_block(
+            first, block, active_word, amplitude, words, (z_real, z_imag), scratch, mean, energy
+        )
+    return total
+
+
+@kernel
+def enter_block(
+    first: int,
+    count: int,
+    active_word: I64,
+    amplitude: F32,
+    words: tuple[I64, I64, C64],
+    z: tuple[F32, F32],
+    scratch: tuple[F32, F32, F32, I32, F32, I64, F32, I64],
+    mean: C64,
+    energy: F64,
+) -> float:
+    """Enter a block's posteriors into mean and energy; returns its share of E||y - H x||^2."""
+    pointer, antenna, value = words
+    metric, _, _, _, _, index, weight, used = scratch
+    z_real, z_imag = z
+    total = 0.0
+    for k in range(count):
+        i = first + k
+        if active_word[i] < 0:
+            continue
+        power = np.float32(0.0)
+        for r in range(z_real.shape[0]):
+            power += z_real[r, k] * z_real[r, k] + z_imag[r, k] * z_imag[r, k]
+        square = amplitude[i] * amplitude[i]
+        for n in range(used[k]):
+            c, w = index[k, n], weight[k, n]
+            total += w * max(metric[c, k] + power, np.float32(0.0)) * square
+            energy[c] += w * square
+            for j in range(pointer[c], pointer[c + 1]):
+                mean[i, antenna[j]] += w * amplitude[i] * value[j]
     return total
 
 
@@ -161,27 +161,17 @@ def cross_moments(y: F32, mean: C64, syx: C128) -> None:
 
 
 @kernel
-def solve_moments(sxx: C128, syx: C128, channel: C128) -> None:
-    """H = S_yx S_xx^-1, antennas without energy left at zero; diagonal S_xx in one division."""
+def solve_diagonal(sxx: C128, syx: C128, channel: C128) -> bool:
+    """H = S_yx S_xx^-1 when S_xx is diagonal, antennas without energy at zero; False when not."""
     antennas = sxx.shape[0]
-    diagonal = True
     for a in range(antennas):
         for b in range(antennas):
             if a != b and abs(sxx[a, b]) > 1e-9 * (abs(sxx[a, a]) + abs(sxx[b, b])):
-                diagonal = False
-    if diagonal:
-        for a in range(antennas):
-            for r in range(channel.shape[0]):
-                channel[r, a] = syx[r, a] / sxx[a, a].real if sxx[a, a].real > 0.0 else 0.0
-        return
-    loaded = sxx.copy()
-    for a in range(antennas):
-        if sxx[a, a].real <= 0.0:
-            loaded[a, a] = 1.0
-    solved = np.linalg.solve(loaded.T, syx.T.copy())
+                return False
     for a in range(antennas):
         for r in range(channel.shape[0]):
-            channel[r, a] = solved[a, r]
+            channel[r, a] = syx[r, a] / sxx[a, a].real if sxx[a, a].real > 0.0 else 0.0
+    return True
 
 
 @kernel

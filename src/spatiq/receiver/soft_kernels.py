@@ -12,6 +12,7 @@ from spatiq.kernels import C64, C128, F32, F64, I32, I64, inlined, kernel
 
 # Codewords below exp(-14) = 1e-6 of the best one's likelihood change no estimate noticeably.
 POSTERIOR_CUT = np.float32(14.0)
+VECTORS = 64  # received vectors handled at once where nothing has to be updated in between
 
 
 @kernel
@@ -59,17 +60,25 @@ def block_metrics(
     smallest = best[:count]
     runner_up = second[:count]
     where = nearest[:count]
+    channels = z_real.shape[0]
+    last = channels - 1
     for c in range(power.size):
         row = metric[c, :count]
+        # The first and last channel together: one pass over the block for two channels.
+        a, b = np.float32(2.0) * real[0, c], np.float32(2.0) * imag[0, c]
+        d, e = np.float32(2.0) * real[last, c], np.float32(2.0) * imag[last, c]
+        if last == 0:
+            d, e = np.float32(0.0), np.float32(0.0)
+        first_real, first_imag = z_real[0, :count], z_imag[0, :count]
+        last_real, last_imag = z_real[last, :count], z_imag[last, :count]
         for k in range(count):
-            row[k] = power[c]
-        for r in range(z_real.shape[0]):
-            a = np.float32(2.0) * real[r, c]
-            b = np.float32(2.0) * imag[r, c]
-            part_real = z_real[r, :count]
-            part_imag = z_imag[r, :count]
+            near = a * first_real[k] + b * first_imag[k]
+            row[k] = power[c] - near - (d * last_real[k] + e * last_imag[k])
+        for r in range(1, last):
+            a, b = np.float32(2.0) * real[r, c], np.float32(2.0) * imag[r, c]
+            first_real, first_imag = z_real[r, :count], z_imag[r, :count]
             for k in range(count):
-                row[k] -= a * part_real[k] + b * part_imag[k]
+                row[k] -= a * first_real[k] + b * first_imag[k]
         if c == 0:
             for k in range(count):
                 smallest[k] = row[k]
@@ -84,41 +93,69 @@ def block_metrics(
                 where[k] = c if nearer else where[k]
 
 
-@inlined
-def posterior(
+@kernel
+def block_posterior(
     metric: F32,
-    k: int,
     best: F32,
     second: F32,
     nearest: I32,
-    inverse_noise: np.float32,
+    inverse_noise: F32,
+    count: int,
     index: I64,
     weight: F32,
-) -> int:
-    """Codewords of noticeable posterior probability for vector k of a block: their number.
+    used: I64,
+) -> None:
+    """Codewords of noticeable posterior probability for each vector of a block.
 
-    metric float32 (C, B), best, second, nearest (B,) of `block_metrics`; index and weight (C,) are
-    filled.
+    One call for the block: called for each vector, handing the arrays over would cost more than
+    the work.
+
+    Args:
+        metric, best, second, nearest: of `block_metrics`.
+        inverse_noise: float32 (B,); 1/N0 at each vector.
+        count: vectors in the block.
+        index, weight: (B, C); codewords and probabilities, `used[k]` of them, filled.
+        used: (B,); filled.
     """
-    smallest = best[k]
-    limit = smallest + POSTERIOR_CUT / inverse_noise
-    if second[k] > limit:
-        index[0] = nearest[k]
-        weight[0] = np.float32(1.0)
-        return 1
-    count = 0
-    total = np.float32(0.0)
-    for c in range(metric.shape[0]):
-        if metric[c, k] <= limit:
-            w = np.exp((smallest - metric[c, k]) * inverse_noise)
-            index[count] = c
-            weight[count] = w
-            total += w
-            count += 1
-    scale = np.float32(1.0) / total
-    for i in range(count):
-        weight[i] *= scale
-    return count
+    for k in range(count):
+        smallest = best[k]
+        limit = smallest + POSTERIOR_CUT / inverse_noise[k]
+        if second[k] > limit:
+            index[k, 0] = nearest[k]
+            weight[k, 0] = np.float32(1.0)
+            used[k] = 1
+            continue
+        n = 0
+        total = np.float32(0.0)
+        for c in range(metric.shape[0]):
+            if metric[c, k] <= limit:
+                w = np.exp((smallest - metric[c, k]) * inverse_noise[k])
+                index[k, n] = c
+                weight[k, n] = w
+                total += w
+                n += 1
+        scale = np.float32(1.0) / total
+        for i in range(n):
+            weight[k, i] *= scale
+        used[k] = n
+
+
+@kernel
+def block_scratch(size: int, vectors: int) -> tuple[F32, F32, F32, I32, F32, I64, F32, I64]:
+    """Room for `block_metrics` and `block_posterior`: a codebook of `size`, blocks of `vectors`.
+
+    metric (C, B); best, second, nearest, inverse noise (B,); index, weight (B, C); used (B,).
+    """
+    return (
+        np.empty((size, vectors), np.float32),
+        np.empty(vectors, np.float32),
+        np.empty(vectors, np.float32),
+        np.empty(vectors, np.int32),
+        np.empty(vectors, np.float32),
+        np.empty((vectors, size), np.int64),
+        np.empty((vectors, size), np.float32),
+        np.empty(vectors, np.int64),
+    )
 
 
 @inlined

@@ -18,9 +18,13 @@ from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
 from spatiq.receiver.soft_kernels import received_codebook
 from spatiq.receiver.tracking_kernels import track_side
+from spatiq.signal.constellations import Constellation
 
-# Drift within a frame that decisions do not notice: 0.01 symbol is an EVM of -40 dB.
-_NEGLIGIBLE_DRIFT = 0.01
+# A timing error of a symbol period's share d displaces symbols by about 1.85 d (the root of
+# 4 pi^2 xi, xi = 0.087). A quarter of the way to the nearest decision boundary is left to the
+# refit.
+_DISPLACEMENT = 1.85
+_TOLERATED = 0.25
 
 
 @dataclass(frozen=True, eq=False)
@@ -45,7 +49,8 @@ class Tracking:
         later = np.flatnonzero(outside & (tables.active > tables.header_centroid))
         earlier = np.flatnonzero(outside & (tables.active < tables.header_centroid))[::-1]
         span = float(tables.active[-1] - tables.active[0])
-        with_timing = span * 2 * self.clock_std > _NEGLIGIBLE_DRIFT
+        drift = _DISPLACEMENT * span * 2 * self.clock_std
+        with_timing = drift > _TOLERATED * _boundary(tables.codebook.constellation)
         size, channels = tables.codebook.size, batch.planes.shape[1]
         real = np.empty((channels, size), np.float32)
         imag = np.empty((channels, size), np.float32)
@@ -105,3 +110,12 @@ class Tracking:
 def floored_noise(noise: float, power: NDArray[np.float32]) -> float:
     """N0 of a noiseless capture is single-precision rounding, never zero."""
     return max(float(noise), 1e-12 * float(np.mean(power)), 1e-30)
+
+
+def _boundary(constellation: Constellation) -> float:
+    """Half the smallest distance between points; the amplitude where there is only one."""
+    points = constellation.points
+    if points.size == 1:
+        return float(abs(points[0]))
+    distance = np.abs(points[:, None] - points)
+    return float(np.min(distance[distance > 0])) / 2

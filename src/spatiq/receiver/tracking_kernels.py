@@ -6,7 +6,14 @@ import numpy as np
 
 from spatiq.kernels import C64, C128, F32, F64, I32, I64, inlined, kernel
 from spatiq.receiver.matched_filter import filter_at
-from spatiq.receiver.soft_kernels import block_metrics, posterior, predict, smooth, update
+from spatiq.receiver.soft_kernels import (
+    block_metrics,
+    block_posterior,
+    block_scratch,
+    predict,
+    smooth,
+    update,
+)
 
 BLOCK = 16  # symbol periods between updates of the track
 
@@ -34,20 +41,6 @@ def derotated_block(
             imag[r, k] = y[0, 1, r] * c - y[0, 0, r] * s
 
 
-@inlined
-def known_reference(
-    channel: C128, vectors: tuple[I64, I64, C64], i: int, k: int, real: F32, imag: F32
-) -> None:
-    """H x of known vector i into column k of real, imag (Nr, B)."""
-    pointer, antenna, value = vectors
-    for r in range(real.shape[0]):
-        v = 0j
-        for j in range(pointer[i], pointer[i + 1]):
-            v += channel[r, antenna[j]] * value[j]
-        real[r, k] = v.real
-        imag[r, k] = v.imag
-
-
 @kernel
 def block_references(
     periods: I64,
@@ -58,7 +51,7 @@ def block_references(
     z: tuple[F32, F32],
     scales: F32,
     noise: float,
-    scratch: tuple[F32, F32, F32, I32, I64, F32],
+    scratch: tuple[F32, F32, F32, I32, F32, I64, F32, I64],
     means: tuple[F32, F32],
 ) -> None:
     """Posterior mean of H x for a block, the known one where it is known, into means (Nr, B).
@@ -67,26 +60,32 @@ def block_references(
         periods: (n,); indices of the active periods.
         z: received vectors (Nr, B), real and imaginary.
         scales: (n,); 1 / amplitude, with which z was scaled.
-        scratch: metric (C, B), best, second, nearest (B,), index (C,), weight (C,).
+        scratch: of `block_scratch`.
     """
     g_real, g_imag, g_power = codebook
-    metric, best, second, nearest, index, weight = scratch
-    block_metrics(g_real, g_imag, g_power, z[0], z[1], periods.size, metric, best, second, nearest)
-    for k in range(periods.size):
+    metric, best, second, nearest, inverse_noise, index, weight, used = scratch
+    pointer, antenna, value = vectors
+    mean_real, mean_imag = means
+    count = periods.size
+    for k in range(count):
+        inverse_noise[k] = 1.0 / (noise * scales[k] * scales[k])
+    block_metrics(g_real, g_imag, g_power, z[0], z[1], count, metric, best, second, nearest)
+    block_posterior(metric, best, second, nearest, inverse_noise, count, index, weight, used)
+    for k in range(count):
         i = periods[k]
-        if active_word[i] < 0:
-            known_reference(channel, vectors, i, k, means[0], means[1])
-            continue
-        inverse_noise = np.float32(1.0 / (noise * scales[k] * scales[k]))
-        count = posterior(metric, k, best, second, nearest, inverse_noise, index, weight)
         for r in range(g_real.shape[0]):
-            a = np.float32(0.0)
-            b = np.float32(0.0)
-            for j in range(count):
-                a += weight[j] * g_real[r, index[j]]
-                b += weight[j] * g_imag[r, index[j]]
-            means[0][r, k] = a
-            means[1][r, k] = b
+            a, b = 0.0, 0.0
+            if active_word[i] >= 0:
+                for n in range(used[k]):
+                    a += weight[k, n] * g_real[r, index[k, n]]
+                    b += weight[k, n] * g_imag[r, index[k, n]]
+            else:
+                for j in range(pointer[i], pointer[i + 1]):
+                    v = channel[r, antenna[j]] * value[j]
+                    a += v.real
+                    b += v.imag
+            mean_real[r, k] = a
+            mean_imag[r, k] = b
 
 
 @kernel
@@ -147,19 +146,6 @@ def block_vectors(channels: int) -> tuple[F32, F32]:
 
 
 @kernel
-def block_scratch(size: int) -> tuple[F32, F32, F32, I32, I64, F32]:
-    """Room for `block_references` with a codebook of `size` words."""
-    return (
-        np.empty((size, BLOCK), np.float32),
-        np.empty(BLOCK, np.float32),
-        np.empty(BLOCK, np.float32),
-        np.empty(BLOCK, np.int32),
-        np.empty(size, np.int64),
-        np.empty(size, np.float32),
-    )
-
-
-@kernel
 def write_phase(position: F64, smoothed: F64, order: I64, active: I64, phase: F32) -> None:
     """Phase of the periods travelled, from the smoothed (phase, carrier) of each block."""
     for b in range(position.size):
@@ -202,7 +188,7 @@ def track_side(
     active, active_word, vectors, amplitude = sent
     taps, slopes, phases, slope_energy = bank
     channels, size = codebook[0].shape
-    z, means, scratch = block_vectors(channels), block_vectors(channels), block_scratch(size)
+    z, means, scratch = block_vectors(channels), block_vectors(channels), block_scratch(size, BLOCK)
     blocks = (order.size + BLOCK - 1) // BLOCK
     position, sums = np.empty(blocks), np.empty(5)
     filtered, filtered_cov = np.empty((blocks, 2)), np.empty((blocks, 3))

@@ -14,7 +14,17 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from spatiq.kernels import kernel
 from spatiq.signal.constellations import Constellation
+
+
+@kernel
+def unpack_words(words: NDArray[np.int64], bits: NDArray[np.uint8]) -> None:
+    """Bits of each word (n,), first bit the most significant, into bits uint8 (n, b)."""
+    width = bits.shape[1]
+    for i in range(words.size):
+        for j in range(width):
+            bits[i, j] = (words[i] >> (width - 1 - j)) & 1
 
 
 @dataclass(frozen=True, eq=False)
@@ -57,9 +67,10 @@ class Codebook:
 
     def words_to_bits(self, words: NDArray[np.int64]) -> NDArray[np.uint8]:
         """Words, shape (..., n) -> bits, shape (..., n*b), first bit of a word first."""
-        shifts = np.arange(self.bits - 1, -1, -1)
-        bits = (np.asarray(words)[..., None] >> shifts) & 1
-        return bits.reshape(*bits.shape[:-2], bits.shape[-2] * self.bits).astype(np.uint8)
+        given = np.ascontiguousarray(words, np.int64)
+        bits = np.empty((*given.shape, self.bits), np.uint8)
+        unpack_words(given.ravel(), bits.reshape(given.size, self.bits))
+        return bits.reshape(*given.shape[:-1], given.shape[-1] * self.bits)
 
     def bits_to_words(self, bits: NDArray[np.uint8]) -> NDArray[np.int64]:
         """Bits, shape (..., n*b) -> words, shape (..., n).

@@ -42,10 +42,9 @@ def registers(
         register = init
         for k in range(bits.shape[1]):
             place = k ^ 7 if refin else k
-            top = ((register >> (width - 1)) & 1) ^ bits[row, place]
-            register <<= 1
-            if top:
-                register ^= poly
+            top = ((register >> (width - 1)) & 1) ^ np.int64(bits[row, place])
+            # No branch: its outcome would be as random as the bits.
+            register = (register << 1) ^ (poly & -top)
         for i in range(width):
             result[row, i] = (register >> (width - 1 - i)) & 1
     return result
