@@ -127,7 +127,7 @@ def yard() -> None:
 
 
 def twins() -> None:
-    """Antennas 2 and 3 are nearly the same to the receiver: they are confused, the others are not."""
+    """Antennas 2 and 3 look nearly the same to the receiver: these two are confused."""
     link = load_link(FOLDER / "hook_twins.link.toml")
     signature = np.array(
         [
@@ -154,7 +154,7 @@ def twins() -> None:
 
 
 def keys() -> None:
-    """No reference bits, a CRC in each frame, and samples lost half way, known from the metadata."""
+    """No reference bits, a CRC in each frame, samples lost half way (known from the metadata)."""
     link = load_link(FOLDER / "gantry_keys.link.toml")
     capture = simulate(
         link,

@@ -130,7 +130,7 @@ def long_files(root: Path) -> list[str]:
 
 
 def long_functions(root: Path) -> list[str]:
-    """Functions that do not fit a screen; their docstring is not counted."""
+    """Functions whose body does not fit a screen; docstring and parameters are not counted."""
     found = []
     for path in python_files(root):
         for node in ast.walk(_tree(path)):
@@ -142,11 +142,11 @@ def long_functions(root: Path) -> list[str]:
 
 
 def _lines(node: ast.FunctionDef | ast.AsyncFunctionDef) -> int:
-    whole = (node.end_lineno or node.lineno) - node.lineno + 1
-    first = node.body[0]
-    if ast.get_docstring(node) is None:
-        return whole
-    return whole - ((first.end_lineno or first.lineno) - first.lineno + 1)
+    """Lines of the body: a command's parameter list is its table of options, not code to read."""
+    body = node.body[1:] if ast.get_docstring(node) is not None else node.body
+    if not body:
+        return 0
+    return (node.end_lineno or node.lineno) - body[0].lineno + 1
 
 
 def imported(path: Path) -> Iterator[tuple[int, str]]:

@@ -235,7 +235,8 @@ def test_what_a_detector_must_not_return(plugged, name):
 
 @pytest.mark.nojit
 @pytest.mark.parametrize(
-    "name", ["nearest", "no_such_module_anywhere:f", "{own}:absent", "{own}:number", ":f", "math:"]
+    "name",
+    ["nearest", "no_such_module_anywhere:f", "{own}:absent", "{own}:number", ":f", "math:", ".a:f"],
 )
 def test_unknown_detectors_are_refused(plugged, name):
     with pytest.raises(InputError, match="detector"):

@@ -109,7 +109,7 @@ def find_detector(name: str) -> Detector:
         return DETECTORS[name]
     known = ", ".join(DETECTORS) + ', or "module:function"'
     module, _, function = name.partition(":")
-    if not function:
+    if not module or not function or module.startswith("."):
         raise InputError("receiver options", "detector", name, known)
     try:
         found = getattr(importlib.import_module(module), function)
