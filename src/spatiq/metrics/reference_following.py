@@ -8,6 +8,7 @@ CRC passes, or the place of its bits in the running reference.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from itertools import pairwise
 
 import numpy as np
 import scipy.stats
@@ -19,6 +20,7 @@ from spatiq.metrics.reference_search import SIGNIFICANCE, PrbsSearch, agreement
 
 # A number that neighbours or time suggest needs less evidence than one found by searching.
 _CONFIRMATION = 1e-3
+_TRIALS = 32  # frames missed in a row that are bridged without a search
 
 
 @dataclass(frozen=True, eq=False)
@@ -45,6 +47,7 @@ class ReferenceFollower:
     payload: PayloadFormat
     period: float | None
     _last: tuple[int, float] | None = None
+    _pending: int = 0  # frames found after the last known one
     _dependent: NDArray[np.int64] = field(init=False)
     _most_wrong: int = field(init=False)
     _counter: FieldSpan | None = field(init=False)
@@ -83,6 +86,7 @@ class ReferenceFollower:
         if not self._dependent.size:
             return Numbering(numbers, np.ones(count, np.bool_))
         self._reference = None
+        before = -1 if self._last is None else self._last[0]
         i = 0
         while i < count:
             i = self._follow(plain, position, numbers, i)
@@ -91,7 +95,17 @@ class ReferenceFollower:
                 if numbers[i] >= 0:
                     self._last = (int(numbers[i]), float(position[i]))
                 i += 1
+        numbers = self._filled(before, numbers)
         return Numbering(numbers, numbers >= 0, self._reference)
+
+    def _filled(self, before: int, numbers: NDArray[np.int64]) -> NDArray[np.int64]:
+        """Fill unknown numbers between known ones, the last of the batch before included."""
+        pending = np.full(self._pending, -1, np.int64)
+        whole = np.concatenate([np.array([before], np.int64), pending, numbers])
+        fill_between(whole)
+        known = np.flatnonzero(whole >= 0)
+        self._pending = whole.size - 1 - int(known[-1]) if known.size else whole.size - 1
+        return whole[whole.size - numbers.size :]
 
     def _expected(self, position: NDArray[np.float64]) -> NDArray[np.int64]:
         """Numbers after the last known one: by the period, else one more each time."""
@@ -141,9 +155,10 @@ class ReferenceFollower:
             following = i + 1 < plain.shape[0] and self._by_counter(plain, i + 1)
             if self._running is None and following == by_counter + 1:
                 return by_counter
-        found = self._by_search(plain[i])
-        if found is not None:
-            return found
+        for find in (self._by_trial, self._by_search):
+            found = find(plain[i])
+            if found is not None:
+                return found
         if self._last is not None and self.period is not None:
             return int(self._expected(position[i : i + 1])[0])
         return -1
@@ -172,6 +187,18 @@ class ReferenceFollower:
             number += -(-(self._last[0] + 1 - number) // modulus) * modulus
         return number
 
+    def _by_trial(self, bits: NDArray[np.uint8]) -> int | None:
+        """One of the next numbers, where a few frames were missed; survives more errors than a
+        search."""
+        if self._last is None or self._running is None:
+            return None
+        numbers = self._last[0] + 1 + np.arange(_TRIALS, dtype=np.int64)
+        span = slice(self._running.start, self._running.stop)
+        wrong = np.count_nonzero(self.payload.reference(numbers)[:, span] != bits[span], axis=1)
+        best = int(np.argmin(wrong))
+        chance = agreement(int(wrong[best]), self._running.width) * _TRIALS
+        return int(numbers[best]) if chance < SIGNIFICANCE else None
+
     def _by_search(self, bits: NDArray[np.uint8]) -> int | None:
         span = self._running
         if span is None or not isinstance(span.source, PrbsSource):
@@ -180,3 +207,15 @@ class ReferenceFollower:
             self._search = PrbsSearch(span.source.prbs, span.width)
         found = self._search.frame_number(bits[span.start : span.stop])
         return None if found is None else self._lift(found, self._search.modulus)
+
+
+def fill_between(numbers: NDArray[np.int64]) -> None:
+    """Number frames that have no evidence of their own, where their neighbours leave one choice.
+
+    numbers: int64 (F,), -1 where unknown; filled in place. A run of unknown frames between two
+    known ones has one numbering when exactly as many numbers are free as there are frames.
+    """
+    known = np.flatnonzero(numbers >= 0)
+    for before, after in pairwise(known):
+        if after > before + 1 and numbers[after] - numbers[before] == after - before:
+            numbers[before:after] = numbers[before] + np.arange(after - before)

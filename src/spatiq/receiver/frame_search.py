@@ -172,7 +172,13 @@ class FrameSearch:
             crossing = np.flatnonzero(best[offset:] >= self._pattern.threshold)
             if crossing.size:
                 first = lag + int(crossing[0])
-                return self._peak(first) if first <= self.last_lag else None
+                if first > self.last_lag:
+                    return None
+                found = self._peak(first)
+                if found.metric >= self._pattern.threshold:
+                    return found
+                lag = first + 1  # the transforms' rounding only
+                continue
             lag = (index + 1) * self._hop
         return None
 

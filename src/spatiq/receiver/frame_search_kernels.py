@@ -13,10 +13,12 @@ def window_energy(halves: C64, length: int, inverse: F32) -> None:
 
     Args:
         halves: complex64 (2, Nr, n); even and odd half-symbol instants.
-        inverse: float32 (2, n-length+1); filled. A window that has faded to rounding residue
-            carries no evidence and gets 0.
+        inverse: float32 (2, n-length+1); filled. A window 100 dB below the strongest is rounding
+            residue of its neighbours, carries no evidence, and gets 0.
     """
     channels = halves.shape[1]
+    windows = np.empty(inverse.shape, np.float64)
+    strongest = 0.0
     for h in range(2):
         energy = np.float64(0.0)
         for i in range(length - 1):
@@ -27,10 +29,15 @@ def window_energy(halves: C64, length: int, inverse: F32) -> None:
             for r in range(channels):
                 v = halves[h, r, lag + length - 1]
                 energy += np.float64(v.real) ** 2 + np.float64(v.imag) ** 2
-            inverse[h, lag] = 1.0 / energy if energy > 1e-30 else 0.0
+            windows[h, lag] = energy
+            strongest = max(strongest, energy)
             for r in range(channels):
                 v = halves[h, r, lag]
                 energy -= np.float64(v.real) ** 2 + np.float64(v.imag) ** 2
+    floor = max(1e-10 * strongest, 1e-30)
+    for h in range(2):
+        for lag in range(inverse.shape[1]):
+            inverse[h, lag] = 1.0 / windows[h, lag] if windows[h, lag] > floor else 0.0
 
 
 @kernel

@@ -61,9 +61,9 @@ class Tracking:
                 batch.channel[i], words.pointer, words.antenna, words.value, real, imag, power
             )
             noise = floored_noise(batch.noise[i], power)
-            self._track(batch, i, later, (real, imag, power), noise, with_timing)
-            if earlier.size:
-                self._track(batch, i, earlier, (real, imag, power), noise, with_timing)
+            for order in (later, earlier):
+                if order.size:
+                    self._track(batch, i, order, (real, imag, power), noise, with_timing)
         return batch
 
     def _track(
