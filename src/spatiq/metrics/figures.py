@@ -126,6 +126,8 @@ def _ratios(columns: Columns, confidence: float) -> None:
 def channel_error_variance(batch: FrameBatch) -> NDArray[np.float64]:
     """Variance of each channel coefficient's estimate, (F, Nt): N0 over the energy behind it.
 
+    Zero for antennas that the link never uses; those in use always have pilot energy.
+
     Source: M. Biguesh and A. B. Gershman, IEEE Trans. Signal Process. 54(3), 2006.
     """
     energy = batch.antenna_energy

@@ -229,7 +229,9 @@ class Summary:
             trials,
             self.confidence,
         )
-        return {"value": loss.value, "low": loss.low, "high": loss.high}
+        ends = {"value": loss.value, "low": loss.low, "high": loss.high}
+        # Off the predicted curve there is no finite figure: missing, not a large number.
+        return {name: float(x) if np.isfinite(x) else None for name, x in ends.items()}
 
     def _evm(self, kind: str) -> dict[str, Any] | None:
         error = self._energies[f"{kind}_error_energy"]
