@@ -28,11 +28,11 @@ from spatiq.receiver.refit_kernels import (
     rotate_active,
     solve_diagonal,
 )
+from spatiq.receiver.soft_kernels import block_scratch
 from spatiq.receiver.tracking_kernels import (
     BLOCK,
     block_references,
     block_score,
-    block_scratch,
     derotated_block,
     update_timing,
     write_phase,
@@ -79,13 +79,12 @@ def test_expectation_and_what_follows(noise):
     case = Case(noise)
     tables = case.tables
     n = tables.active.size
-    mean, energy = np.empty((n, 2), np.complex64), np.empty(8)
+    mean, energy = tables.known_vectors.copy(), np.empty(8)
     codebook = received(case.channel, tables.words)
     y = parts_of(case.y)
     total = expectation(
         y,
         tables.active_word,
-        tables.active_vectors.parts,
         tables.active_amplitude,
         tables.words.parts,
         codebook,
@@ -217,7 +216,7 @@ def test_derotated_block_and_its_references():
         parts,
         np.ones(7, np.float32),
         case.noise,
-        block_scratch(8),
+        block_scratch(8, BLOCK),
         means,
     )
     expected = (case.posterior_means()[0] @ case.channel.T)[periods]

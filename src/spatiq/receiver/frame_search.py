@@ -50,12 +50,15 @@ class SyncPattern:
         transform_size: length of the correlation transforms, symbol periods.
         carrier_bins: transform bins of the carrier offsets tested, ascending, symmetric.
         threshold: smallest metric that counts as a detection.
+        ambiguous: whether the section, shifted in time and carrier, resembles itself so much that a
+            place beside the true one may pass the threshold.
     """
 
     basis: NDArray[np.complex64]
     transform_size: int
     carrier_bins: NDArray[np.int64]
     threshold: float
+    ambiguous: bool = False
 
     @property
     def length(self) -> int:
@@ -86,12 +89,36 @@ def sync_pattern(link: Link, options: ReceiverOptions, channels: int) -> SyncPat
     size = max(1024, 1 << int(np.ceil(np.log2(8 * n))))
     step = max(1, size // (2 * n))
     reach = int(np.ceil(options.cfo_range * size / step))
+    basis = np.ascontiguousarray(left[:, :rank].T)
+    limit = threshold(options.false_alarm, n, rank, channels)
+    # Half the threshold: what surrounds the section may add to a side lobe.
+    shifts = np.arange(2 * reach + 1) * step / size
     return SyncPattern(
-        basis=np.ascontiguousarray(left[:, :rank].T).astype(np.complex64),
+        basis=basis.astype(np.complex64),
         transform_size=size,
         carrier_bins=np.arange(-reach, reach + 1, dtype=np.int64) * step,
-        threshold=threshold(options.false_alarm, n, rank, channels),
+        threshold=limit,
+        ambiguous=largest_side_lobe(basis, shifts) > limit / 2,
     )
+
+
+def largest_side_lobe(basis: NDArray[np.complex128], shifts: NDArray[np.float64]) -> float:
+    """Largest metric of the pattern against itself, two or more symbol periods off the true place.
+
+    Args:
+        basis: complex128 (P, N); orthonormal rows.
+        shifts: carrier offsets tried, cycles per symbol period; their negatives give the same.
+    """
+    n = basis.shape[1]
+    size = 1 << int(np.ceil(np.log2(2 * n)))
+    spectrum = np.conj(scipy.fft.fft(basis, size, axis=1))
+    beside = slice(2, size - 1)  # lags +-2 and beyond, modulo the transform's size
+    top = 0.0
+    for shift in shifts:
+        turned = scipy.fft.fft(basis * np.exp(2j * np.pi * shift * np.arange(n)), size, axis=1)
+        lobes = np.abs(scipy.fft.ifft(spectrum[:, None] * turned[None], axis=2)) ** 2
+        top = max(top, float(lobes.sum(axis=(0, 1))[beside].max(initial=0.0)))
+    return top
 
 
 class FrameSearch:

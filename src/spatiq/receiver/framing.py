@@ -194,8 +194,11 @@ class Framing:
         self.samples_done = segment.stop
 
     def _next(self, search: FrameSearch, lag: int, last: Detection | None) -> Detection | None:
-        """Where a frame is expected after the last one; failing that, wherever one is."""
-        if last is not None:
+        """Where a frame is expected after the last one; failing that, wherever one is.
+
+        A side lobe of the next frame may lie where it is expected: only a scan compares the two.
+        """
+        if last is not None and not self._pattern.ambiguous:
             period = self._link.period_symbols or float(self._geometry.length)
             drift = 1 + int(np.ceil(period * self._options.max_clock_ppm * 1e-6))
             expected = last.lag + round(LAGS_PER_SYMBOL * period)
