@@ -136,17 +136,26 @@ class FrameSearch:
         self._pattern = pattern
         self._spacing = bank.samples_per_symbol / LAGS_PER_SYMBOL
         self._hop = LAGS_PER_SYMBOL * (pattern.transform_size - pattern.length + 1)
-        self._spectra = self._pattern_spectra()
+        transform = scipy.fft.fft(pattern.basis, pattern.transform_size, axis=-1)
+        self._base = np.conj(transform).astype(np.complex64)
+        self._kept: NDArray[np.complex64] | None = None
         self._blocks: dict[int, tuple[NDArray[np.float32], NDArray[np.int32]]] = {}
         count = int((stream.stop - stream.start) / self._spacing) + 1
         self.last_lag = count - LAGS_PER_SYMBOL * (pattern.length - 1) - 1
 
-    def _pattern_spectra(self) -> NDArray[np.complex64]:
-        """Conjugate transforms of the basis at each carrier bin, complex64 (bins, P, size)."""
-        pattern = self._pattern
-        base = np.conj(scipy.fft.fft(pattern.basis, pattern.transform_size, axis=-1))
-        shifted = [np.roll(base, b, axis=-1) for b in pattern.carrier_bins]
-        return np.ascontiguousarray(np.stack(shifted)).astype(np.complex64)
+    def _spectra(self, first: int, count: int) -> NDArray[np.complex64]:
+        """Conjugate transforms of the basis at some carrier bins, complex64 (bins, 1, 1, P, size).
+
+        A carrier bin shifts the transform. All of them are kept where they are few; for a long
+        section over a wide range they would fill the memory, and are shifted anew.
+        """
+        bins = self._pattern.carrier_bins
+        if self._kept is None and bins.size * self._base.nbytes <= _TRANSFORM_BYTES:
+            self._kept = np.stack([np.roll(self._base, b, axis=-1) for b in bins])
+        if self._kept is not None:
+            return self._kept[first : first + count, None, None]
+        chosen = bins[first : first + count]
+        return np.stack([np.roll(self._base, b, axis=-1) for b in chosen])[:, None, None]
 
     def instants(self, first: int, count: int) -> NDArray[np.complex64]:
         """Matched-filter outputs of the fixed half-symbol grid, complex64 (Nr, count)."""
@@ -174,10 +183,10 @@ class FrameSearch:
             best = np.zeros((2, lags), np.float32)
             where = np.zeros((2, lags), np.int32)
             metric = np.empty(lags, np.float32)
-            each = spectrum.size * self._spectra.shape[1] * 8  # bytes of one bin's correlations
+            each = spectrum.size * self._base.shape[0] * 8  # bytes of one bin's correlations
             together = max(1, _TRANSFORM_BYTES // each)
-            for first in range(0, self._spectra.shape[0], together):
-                products = spectrum * self._spectra[first : first + together, None, None]
+            for first in range(0, self._pattern.carrier_bins.size, together):
+                products = spectrum * self._spectra(first, together)
                 correlations = scipy.fft.ifft(products, axis=-1, overwrite_x=True)
                 parts = correlations.reshape(correlations.shape[0], 2, -1, size, 1)
                 parts = parts.view(np.float32)
