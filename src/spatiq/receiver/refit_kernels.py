@@ -32,7 +32,9 @@ def rotate_active(values: F32, phase: F32) -> None:
 def gram(words: tuple[I64, I64, C64], energy: F64, known: C128, sxx: C128) -> None:
     """Sum of E[x x^H]: of the known vectors, and of each codeword times its expected energy."""
     pointer, antenna, value = words
-    sxx[:] = known
+    for a in range(known.shape[0]):
+        for b in range(known.shape[1]):
+            sxx[a, b] = known[a, b]
     for c in range(energy.size):
         if energy[c] == 0.0:
             continue
