@@ -379,8 +379,8 @@ def predict_frames(
         bound = wrong[f, 0] + wrong[f, 1]
         if bound > limits[0]:
             shrink = np.float32(1.0 / math.sqrt(effective_noise(pairs)))
-            multiply(gr, shrink)
-            multiply(gi, shrink)
+            multiply(gr, float(shrink))
+            multiply(gi, float(shrink))
             scale_bound = bound <= limits[1]
             table_r = noise_r[tables[f]]
             table_i = noise_i[tables[f]]

@@ -196,6 +196,7 @@ def track_side(
     state, cov = np.zeros(2), np.array([prior[0], 0.0, prior[1]])
     t_state, t_cov = np.zeros(2), np.array([prior[2], 0.0, prior[3]])
     at = centroid
+    quadrature = blocks >= 0  # a variable: numba compiles anew for each literal True and False
     for b in range(blocks):
         periods = order[b * BLOCK : min(order.size, (b + 1) * BLOCK)]
         here = float(active[periods[0]])
@@ -215,12 +216,12 @@ def track_side(
         block_references(
             periods, active_word, vectors, channel, codebook, z, scales, noise, scratch, means
         )
-        block_score(z, means, offsets, scales, True, sums)
+        block_score(z, means, offsets, scales, quadrature, sums)
         g = 2.0 / noise
         update(state, cov, g * sums[0], g * sums[1], g * sums[2], g * sums[3], g * sums[4])
         if with_timing and sums[2] > 0.0:
             derotated_block(planes, instants, angles, scales, slopes, phases, z[0], z[1])
-            block_score(z, means, offsets, scales, False, sums)
+            block_score(z, means, offsets, scales, not quadrature, sums)
             update_timing(t_state, t_cov, sums, periods.size, noise, slope_energy, step)
         position[b] = here
         for j in range(2):
