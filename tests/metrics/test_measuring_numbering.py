@@ -8,7 +8,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from measured_cases import measured, measured_link
 
-from spatiq.metrics.reference_following import ReferenceFollower
+from spatiq.metrics.reference_following import ReferenceFollower, fill_between
 from spatiq.metrics.reference_search import SIGNIFICANCE, PrbsSearch, agreement
 from spatiq.signal.prbs import prbs
 
@@ -46,9 +46,11 @@ def received(payload, numbers, error_ratio=0.0, seed=1):
 def numbered(payload, numbers, error_ratio=0.0, period=None, places=None, batches=1, seed=1):
     """Numbers that a follower gives to frames at places in units of the period."""
     plain, crc = received(payload, numbers, error_ratio, seed)
-    follower = ReferenceFollower(payload, period)
-    position = np.asarray(places if places is not None else np.arange(len(plain)), float)
-    position = 100.25 + position * (period or 1000.0)
+    frame = period or 1000.0
+    follower = ReferenceFollower(payload, period, frame - 2.0)
+    if places is None:  # back to back, with room for those that were lost; no time for a new start
+        places = np.concatenate([[0], np.cumsum(np.maximum(np.diff(numbers), 1))])
+    position = 100.25 + np.asarray(places, float) * frame
     out = []
     for part in np.array_split(np.arange(len(plain)), batches):
         some = follower.number(plain[part], None if crc is None else crc[part], position[part])
@@ -143,14 +145,54 @@ def test_a_period_carries_over_lost_frames(missing):
 
 
 def test_a_transmitter_that_starts_again_is_followed():
-    """After frame 60 comes frame 2 of a new run: numbers are lifted past the last one."""
+    """After frame 60 comes frame 2 of a new run: there was no time for a whole period between."""
     payload = measured_link(running("PRBS11")).payload
-    modulus = PrbsSearch(prbs("PRBS11"), payload.n_bits).modulus
     sent = np.concatenate([np.arange(50, 61), np.arange(2, 12)])
+    np.testing.assert_array_equal(numbered(payload, sent), sent)
+
+
+def test_numbers_are_lifted_past_the_last_one_where_time_leaves_room():
+    """A counter of 6 bits comes round after 64 frames, while some are lost."""
+    payload = measured_link(counter(6) + RESTART + CRC).payload
+    sent = np.concatenate([np.arange(50, 60), np.arange(66, 75)])
     got = numbered(payload, sent)
-    np.testing.assert_array_equal(got[:11], sent[:11])
-    np.testing.assert_array_equal((got - sent) % modulus, 0)
-    assert np.all(np.diff(got) > 0)
+    np.testing.assert_array_equal(got, sent)
+
+
+def test_a_wrong_number_does_not_stay():
+    """One frame with a foreign number far ahead; those after it are right again."""
+    payload = measured_link(running("PRBS23")).payload
+    sent = np.array([5, 6, 7, 700_000, 9, 10, 11])
+    got = numbered(payload, sent, places=np.arange(7))
+    np.testing.assert_array_equal(got, sent)
+
+
+@pytest.mark.nojit
+@pytest.mark.parametrize(
+    ("given_numbers", "filled"),
+    [
+        ([3, -1, -1, 6], [3, 4, 5, 6]),
+        ([3, -1, 6], [3, -1, 6]),  # two numbers for one frame
+        ([-1, 4, -1], [-1, 4, -1]),
+        ([8, -1, 10, -1, 5], [8, 9, 10, -1, 5]),
+    ],
+)
+def test_frames_without_evidence_take_the_only_numbers_left(given_numbers, filled):
+    numbers = np.array(given_numbers)
+    fill_between(numbers)
+    np.testing.assert_array_equal(numbers, filled)
+
+
+def test_a_hopeless_frame_is_numbered_by_its_neighbours_across_batches():
+    payload = measured_link(running("PRBS23")).payload
+    plain, _ = received(payload, np.arange(20, 26))
+    plain[3] = np.random.default_rng(2).integers(0, 2, plain.shape[1])
+    follower = ReferenceFollower(payload, None, 999.0)
+    place = np.arange(6) * 1000.0
+    np.testing.assert_array_equal(follower.number(plain[:4], None, place[:4]).numbers[3], -1)
+    np.testing.assert_array_equal(follower.number(plain[4:], None, place[4:]).numbers, [24, 25])
+    whole = ReferenceFollower(payload, None, 999.0).number(plain, None, place)
+    np.testing.assert_array_equal(whole.numbers, np.arange(20, 26))
 
 
 @pytest.mark.parametrize("name", ["PRBS15", "PRBS23", "PRBS31"])
@@ -177,7 +219,7 @@ def test_foreign_bits_get_no_number():
     payload = measured_link(running("PRBS23")).payload
     rng = np.random.default_rng(5)
     bits = rng.integers(0, 2, (20, payload.n_bits)).astype(np.uint8)
-    got = ReferenceFollower(payload, None).number(bits, None, np.arange(20) * 1000.0)
+    got = ReferenceFollower(payload, None, 999.0).number(bits, None, np.arange(20) * 1000.0)
     assert np.all(got.numbers == -1) and not got.resolved.any()
 
 
@@ -185,7 +227,7 @@ def test_foreign_bits_get_no_number():
 def test_nothing_to_number_by_is_resolved_without_numbers():
     payload = measured_link(RESTART).payload
     plain, _ = received(payload, np.arange(4))
-    got = ReferenceFollower(payload, None).number(plain, None, np.arange(4) * 1000.0)
+    got = ReferenceFollower(payload, None, 999.0).number(plain, None, np.arange(4) * 1000.0)
     assert np.all(got.numbers == -1) and got.resolved.all()
 
 
