@@ -26,7 +26,7 @@ from spatiq.receiver.refit_kernels import (
     refit_phase,
     refit_timing,
     rotate_active,
-    solve_diagonal,
+    solve_moments,
     timing_density,
 )
 from spatiq.receiver.soft_kernels import block_scratch
@@ -118,25 +118,33 @@ def test_expectation_and_what_follows(noise):
 
 
 @pytest.mark.nojit
-@pytest.mark.parametrize("unused", [False, True])
-def test_diagonal_moments_are_solved_by_division(unused):
+@pytest.mark.parametrize("sent", ["in turn", "in turn, one silent", "together"])
+def test_moments_are_solved_as_least_squares(sent):
     rng = np.random.default_rng(2)
-    x = complex_noise(rng, (40, 3), 1.0) * np.eye(3)[rng.integers(0, 3, 40)]
-    if unused:
+    x = complex_noise(rng, (40, 3), 1.0)
+    if sent != "together":
+        x *= np.eye(3)[rng.integers(0, 3, 40)]
+    if sent == "in turn, one silent":
         x[:, 1] = 0
     y = complex_noise(rng, (40, 2), 1.0)
     channel = np.empty((2, 3), np.complex128)
-    assert solve_diagonal(x.T @ x.conj(), np.ascontiguousarray(y.T @ x.conj()), channel)
+    solve_moments(x.T @ x.conj(), np.ascontiguousarray(y.T @ x.conj()), channel)
     fitted = np.linalg.lstsq(x, y, rcond=None)[0].T  # least norm: zero where nothing was sent
     np.testing.assert_allclose(channel, fitted, atol=1e-10)
 
 
 @pytest.mark.nojit
-def test_other_moments_are_left_to_the_general_solution():
-    x = complex_noise(np.random.default_rng(3), (40, 3), 1.0)
-    channel = np.full((2, 3), 5.0, np.complex128)
-    assert not solve_diagonal(x.T @ x.conj(), np.ones((2, 3), complex), channel)
-    assert np.all(channel == 5.0)
+def test_antennas_that_nothing_tells_apart_still_fit_what_was_received():
+    """Two antennas always send alike: one takes both their parts; the fit is as good as any."""
+    rng = np.random.default_rng(3)
+    x = complex_noise(rng, (40, 3), 1.0)
+    x[:, 2] = x[:, 0]
+    y = complex_noise(rng, (40, 2), 1.0)
+    channel = np.empty((2, 3), np.complex128)
+    solve_moments(x.T @ x.conj(), np.ascontiguousarray(y.T @ x.conj()), channel)
+    fitted = x @ np.linalg.lstsq(x, y, rcond=None)[0]
+    np.testing.assert_allclose(x @ channel.T, fitted, atol=1e-9)
+    assert np.any(np.all(channel == 0, axis=0))
 
 
 @pytest.mark.nojit
@@ -157,7 +165,7 @@ def test_refit_phase_is_weighted_least_squares():
     y = case.y * np.exp(1j * (0.02 + 1e-4 * k))[:, None]
     phase = np.full(k.size, 0.5, np.float32)
     variance = refit_phase(
-        parts_of(y), parts_of(reference), k, 0.05, np.array([10.0, 1.0]), 0.0, phase
+        parts_of(y), parts_of(reference), k, 0.05, np.array([10.0, 1.0, 0.0, 0.0]), phase
     )
     weight = 2 / 0.05 * np.sum(np.abs(reference) ** 2, axis=1)
     z = np.sum((reference.conj() * y).imag, axis=1) / np.sum(np.abs(reference) ** 2, axis=1)
@@ -175,15 +183,16 @@ def test_refit_timing_is_weighted_least_squares(step_var):
     k = case.tables.active
     reference = case.vectors @ case.channel.T
     slope = complex_noise(np.random.default_rng(6), reference.shape, 1.0)
-    out = np.empty(4)
+    timing = np.array([7.0, 4.0, 0.0, 0.0])
     density = 0.3 * np.sum(np.abs(reference) ** 2, axis=1)
-    refit_timing(parts_of(slope), parts_of(reference), density, k, 0.05, step_var, out)
+    refit_timing(parts_of(slope), parts_of(reference), density, k, 0.05, step_var, timing)
     score = 2 / 0.05 * np.sum((reference.conj() * slope).real, axis=1)
     design = np.stack([np.ones(k.size), k], axis=1)
     prior = np.diag([0.0, 1 / step_var if step_var > 0 else 1e30])
     covariance = np.linalg.inv(design.T @ (2 / 0.05 * density[:, None] * design) + prior)
-    np.testing.assert_allclose(out[:2], covariance @ (design.T @ score), rtol=1e-4, atol=1e-9)
-    np.testing.assert_allclose(out[2:], np.diag(covariance), rtol=1e-5, atol=1e-30)
+    moved = timing[:2] - [7.0, 4.0]
+    np.testing.assert_allclose(moved, covariance @ (design.T @ score), rtol=1e-4, atol=1e-9)
+    np.testing.assert_allclose(timing[2:], np.diag(covariance), rtol=1e-5, atol=1e-30)
 
 
 @pytest.mark.nojit

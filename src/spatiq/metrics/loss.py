@@ -132,6 +132,7 @@ def pooled_loss(
     errors: int,
     bits: int,
     level: float = 0.95,
+    predicted: float | None = None,
 ) -> Loss:
     """Loss over many frames of equal weight, with its interval.
 
@@ -140,6 +141,8 @@ def pooled_loss(
             Frames that cannot be predicted are left out.
         errors, bits: wrong bits and bits compared, measured over all frames.
         level: of the interval, see `loss_from_curve`.
+        predicted: BER predicted over all frames, where h holds only some of them: their curve is
+            scaled to it, so that it is only their slope that stands for the others'.
 
     Raises:
         InputError: as for `predict_ber` and `clopper_pearson`.
@@ -150,6 +153,9 @@ def pooled_loss(
     share = bits / max(int(used.sum()), 1)
     weight = np.full(int(used.sum()), share)
     curve = predicted_curve(channels[used], noise[used], variance[used], codebook, weight)
+    at_rest = curve[OFFSETS_DB.index(0.0)]
+    if predicted is not None and at_rest > 0.0:
+        curve *= predicted * bits / at_rest
     return loss_from_curve(curve, errors, bits, level=level)
 
 

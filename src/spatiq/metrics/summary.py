@@ -228,6 +228,7 @@ class Summary:
             errors,
             trials,
             self.confidence,
+            self._prediction(0),
         )
         ends = {"value": loss.value, "low": loss.low, "high": loss.high}
         # Off the predicted curve there is no finite figure: missing, not a large number.

@@ -5,12 +5,15 @@ from __future__ import annotations
 import numpy as np
 
 from spatiq.kernels import C64, C128, F32, F64, I32, I64, kernel
+from spatiq.receiver.matched_filter import sample_periods
 from spatiq.receiver.soft_kernels import (
     VECTORS,
     block_metrics,
     block_posterior,
     block_scratch,
+    floored_noise,
     predict,
+    received_codebook,
     smooth,
     update,
 )
@@ -163,22 +166,42 @@ def cross_moments(y: F32, mean: C64, syx: C128) -> None:
 
 
 @kernel
-def solve_diagonal(sxx: C128, syx: C128, channel: C128) -> bool:
-    """H = S_yx S_xx^-1 when S_xx is diagonal, antennas without energy at zero; False when not."""
-    antennas = sxx.shape[0]
+def solve_moments(sxx: C128, syx: C128, channel: C128) -> None:
+    """H = S_yx S_xx^-1 into channel (Nr, Nt), by elimination with pivots from the diagonal.
+
+    S_xx is Hermitian and not negative, so that its largest remaining diagonal entry is a fair
+    pivot. Antennas that nothing tells from those before them stay at zero. Overwrites sxx and syx.
+    """
+    antennas, channels = sxx.shape[0], syx.shape[0]
+    done = np.zeros(antennas, np.bool_)
+    channel[:] = 0.0
+    least = 0.0
     for a in range(antennas):
-        for b in range(antennas):
-            if a != b and abs(sxx[a, b]) > 1e-9 * (abs(sxx[a, a]) + abs(sxx[b, b])):
-                return False
+        least = max(least, 1e-10 * sxx[a, a].real)
+    for _ in range(antennas):
+        p = -1
+        for a in range(antennas):
+            if not done[a] and (p < 0 or sxx[a, a].real > sxx[p, p].real):
+                p = a
+        if sxx[p, p].real <= least:
+            break
+        done[p] = True
+        for a in range(antennas):
+            if a != p and sxx[p, a] != 0.0:
+                factor = sxx[p, a] / sxx[p, p]
+                for b in range(antennas):
+                    sxx[b, a] -= sxx[b, p] * factor
+                for r in range(channels):
+                    syx[r, a] -= syx[r, p] * factor
     for a in range(antennas):
-        for r in range(channel.shape[0]):
-            channel[r, a] = syx[r, a] / sxx[a, a].real if sxx[a, a].real > 0.0 else 0.0
-    return True
+        if done[a]:
+            for r in range(channels):
+                channel[r, a] = syx[r, a] / sxx[a, a]
 
 
 @kernel
 def refit_phase(
-    y: F32, reference: F32, active: I64, noise: float, prior: F64, walk: float, phase: F32
+    y: F32, reference: F32, active: I64, noise: float, priors: F64, phase: F32
 ) -> float:
     """Smooth the phase left between y and reference; added to `phase` (Ka,).
 
@@ -189,7 +212,8 @@ def refit_phase(
     blocks = (n + BLOCK - 1) // BLOCK
     position = np.empty(blocks)
     filtered, filtered_cov = np.empty((blocks, 2)), np.empty((blocks, 3))
-    state, cov = np.zeros(2), np.array([prior[0], 0.0, prior[1]])
+    state, cov = np.zeros(2), np.array([priors[0], 0.0, priors[1]])
+    walk = priors[2]
     at = float(active[0])
     gain = 2.0 / noise
     for b in range(blocks):
@@ -259,12 +283,13 @@ def refit_timing(
     active: I64,
     noise: float,
     step_var: float,
-    out: F64,
+    timing: F64,
 ) -> None:
     """Newton step for t0 and step, with a prior on step.
 
-    out (4,): corrections of t0 and step, their variances. All pulses are known to lie between known
-    neighbours, so that the score holds no intersymbol term (it is antisymmetric and cancels).
+    timing (4,): t0 and step, corrected in place, and their variances, filled. All pulses are known
+    to lie between known neighbours, so that the score holds no intersymbol term (it is
+    antisymmetric and cancels).
     """
     score, score_k, w, wk, wkk = 0.0, 0.0, 0.0, 0.0, 0.0
     for i in range(active.size):
@@ -281,9 +306,86 @@ def refit_timing(
     j11, j12 = gain * w, gain * wk
     j22 = gain * wkk + (1.0 / step_var if step_var > 0.0 else 1e30)
     det = j11 * j22 - j12 * j12
-    out[:] = 0.0
     if j11 > 0.0 and det > 0.0:
-        out[0] = gain * (j22 * score - j12 * score_k) / det
-        out[1] = gain * (j11 * score_k - j12 * score) / det
-        out[2] = j22 / det
-        out[3] = j11 / det
+        timing[0] += gain * (j22 * score - j12 * score_k) / det
+        timing[1] += gain * (j11 * score_k - j12 * score) / det
+        timing[2] = j22 / det
+        timing[3] = j11 / det
+
+
+@kernel
+def refit_round(
+    planes: F32,
+    timing: F64,
+    phase: F32,
+    channel: C128,
+    noise: float,
+    sent: tuple[I64, I64, F32, C64, C128],
+    words: tuple[I64, I64, C64],
+    bank: tuple[F32, F32, int, F64],
+    priors: F64,
+    with_timing: bool,
+    room: tuple[F32, F32, F32, F32, C64, F64, F64],
+    antenna_energy: F64,
+) -> tuple[float, float]:
+    """One round: expectation, then carrier phase, timing and channel in turn, given the others.
+
+    Args:
+        planes: float32 (Nr, 2, W); samples.
+        timing: (4,); t0, step and their variances, in and out.
+        phase: float32 (Ka,); in and out.
+        channel: complex128 (Nr, Nt); in and out.
+        noise: N0 so far.
+        sent: active periods, payload words, amplitudes, known vectors, their Gram matrix.
+        words: codeword vectors: pointer, antenna, value.
+        bank: taps, slopes, phases, curvature.
+        priors: (4,); variances of phase and carrier left, of the phase's walk per period, of step.
+        with_timing: whether timing is refitted.
+        room: y, reference, slope (Ka, 2, Nr), shift (Ka,), mean (Ka, Nt), energy (C,), density
+            (Ka,).
+        antenna_energy: (Nt,); filled with the energy behind each channel column.
+
+    Returns:
+        N0 and the variance of the carrier. y is left with the new phase removed.
+    """
+    active, active_word, amplitude, known, known_gram = sent
+    taps, slopes, phases, curvature = bank
+    y, reference, slope, shift, mean, energy, density = room
+    channels, antennas = channel.shape
+    size = energy.size
+    codebook = (
+        np.empty((channels, size), np.float32),
+        np.empty((channels, size), np.float32),
+        np.empty(size, np.float32),
+    )
+    received_codebook(channel, words[0], words[1], words[2], codebook[0], codebook[1], codebook[2])
+    noise = floored_noise(noise, codebook[2])
+    sample_periods(planes, timing[0], timing[1], active, taps, phases, y)
+    rotate_active(y, phase)
+    for i in range(active.size):
+        shift[i] = phase[i]
+        for a in range(antennas):
+            mean[i, a] = known[i, a]
+    error = expectation(y, active_word, amplitude, words, codebook, noise, mean, energy)
+    references(channel, mean, reference)
+    error += known_error(y, reference, active_word)
+    frequency_var = refit_phase(y, reference, active, noise, priors, phase)
+    if with_timing:
+        sample_periods(planes, timing[0], timing[1], active, slopes, phases, slope)
+        rotate_active(slope, shift)
+        timing_density(reference, active, curvature, density)
+        refit_timing(slope, reference, density, active, noise, priors[3], timing)
+    for i in range(active.size):
+        shift[i] = phase[i] - shift[i]
+    rotate_active(y, shift)
+    sxx = np.empty((antennas, antennas), np.complex128)
+    syx = np.empty((channels, antennas), np.complex128)
+    gram(words, energy, known_gram, sxx)
+    used = 0
+    for a in range(antennas):
+        antenna_energy[a] = sxx[a, a].real
+        used += sxx[a, a].real > 0.0
+    cross_moments(y, mean, syx)
+    solve_moments(sxx, syx, channel)
+    freedom = max(channels * (active.size - used) - 2, 1)
+    return error / freedom, frequency_var

@@ -33,6 +33,15 @@ def received_codebook(
 
 
 @kernel
+def floored_noise(noise: float, power: F32) -> float:
+    """N0 of a noiseless capture is single-precision rounding of ||H x[c]||^2 (C,), never zero."""
+    total = 0.0
+    for c in range(power.size):
+        total += float(power[c])
+    return max(noise, 1e-12 * total / power.size, 1e-30)
+
+
+@kernel
 def block_metrics(
     real: F32,
     imag: F32,

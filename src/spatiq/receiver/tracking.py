@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
-from spatiq.receiver.soft_kernels import received_codebook
+from spatiq.receiver.soft_kernels import floored_noise, received_codebook
 from spatiq.receiver.tracking_kernels import track_side
 from spatiq.signal.constellations import Constellation
 
@@ -105,11 +105,6 @@ class Tracking:
         inside = tables.in_header == 1
         distance = tables.active[inside] - tables.header_centroid
         batch.phase[i, inside] = track[2] + track[3] * distance
-
-
-def floored_noise(noise: float, power: NDArray[np.float32]) -> float:
-    """N0 of a noiseless capture is single-precision rounding, never zero."""
-    return max(float(noise), 1e-12 * float(np.mean(power)), 1e-30)
 
 
 def _boundary(constellation: Constellation) -> float:
