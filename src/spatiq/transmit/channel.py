@@ -154,12 +154,12 @@ class Fading:
         at_receiver = correlation_matrix(self.receive_correlation, receive, "receive")
         at_transmitter = correlation_matrix(self.transmit_correlation, transmit, "transmit")
         direct = None
+        share = self.k_factor / (self.k_factor + 1)
         if self.k_factor > 0:
-            share = self.k_factor / (self.k_factor + 1)
             direct = np.sqrt(share) * self._direct(receive, transmit)
         return Mixing(
             direct=direct,
-            scale=float(np.sqrt(1 / (self.k_factor + 1))),
+            scale=float(np.sqrt(1 - share)),
             at_receiver=None if at_receiver is None else hermitian_root(at_receiver),
             at_transmitter=None if at_transmitter is None else hermitian_root(at_transmitter).T,
         )
