@@ -73,7 +73,7 @@ def kept(samples: Samples, first: int, gaps: NDArray[np.int64]) -> Samples:
     wanted = np.ones(samples.shape[1], np.bool_)
     for k in range(low, high):
         wanted[max(0, int(gaps[k, 0]) - first) : max(0, int(ends[k]) - first)] = False
-    return np.asarray(samples[:, wanted], np.complex64)
+    return np.ascontiguousarray(samples[:, wanted])
 
 
 def spread(samples: Samples, gaps: NDArray[np.int64], n_clock: int) -> Samples:
