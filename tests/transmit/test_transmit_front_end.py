@@ -73,6 +73,15 @@ def test_image_rejection(gain_db, phase_deg, rejection_db):
     assert 10 * np.log10(lines[100] / lines[-100]) == pytest.approx(rejection_db, abs=1e-3)
 
 
+def test_imbalance_acts_on_q():
+    """K1 x + K2 conj(x) written out: I stays; Q becomes g (Q cos phi - I sin phi)."""
+    samples = gaussian(1, 100)
+    made = IqImbalance(2.0, 10.0).begin(context(1))(samples.copy(), 0)
+    g, phi = 10**0.1, np.radians(10.0)
+    expected = samples.real + 1j * g * (samples.imag * np.cos(phi) - samples.real * np.sin(phi))
+    np.testing.assert_allclose(made, expected, atol=1e-6)
+
+
 def test_imbalance_is_each_channels_own():
     samples = gaussian(2, 100)
     made = IqImbalance([0.0, 1.0], [0.0, 3.0]).begin(context())(samples.copy(), 0)
@@ -197,6 +206,14 @@ def test_gain_steps_between_and_within_frames():
         np.testing.assert_allclose(ratio[begin + 1 : end - 1], 10 ** (level / 20), rtol=1e-4)
     steps = stepped.truth.gain_steps
     np.testing.assert_allclose(steps.at(np.array([0, places[1] + 1])), [1, 10**0.3])
+
+
+def test_gain_steps_do_not_see_chunks():
+    steps = GainSteps(np.array([10, 60]), np.array([2.0, 0.5]))
+    stage = steps.begin(context(1))
+    ones = np.ones((1, 100), np.complex64)
+    made = np.concatenate([stage(ones[:, :40].copy(), 0), stage(ones[:, 40:].copy(), 40)], axis=1)
+    assert np.array_equal(made[0], np.repeat([1, 2, 0.5], [10, 50, 40]))
 
 
 def test_each_frame_draws_its_gain():

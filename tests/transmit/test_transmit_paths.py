@@ -73,7 +73,7 @@ def test_genie_at_each_antennas_instant():
         antenna_delays=delays,
         receive_delays=[0.0, 1.3],
         channels=[[0.0, 1.0], [0.0, 1j]],
-        cfo_hz=2e3,
+        cfo_hz=1e5,
     )
     sent = made.truth.received_symbols()
     late = genie_symbols(made.truth, made.samples(), delay=0.4) - sent

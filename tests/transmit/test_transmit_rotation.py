@@ -47,6 +47,24 @@ def test_offset_of_a_quarter_of_the_symbol_rate(share):
     assert np.mean(np.abs(error) ** 2) < 10**-4.5 * np.mean(np.abs(sent) ** 2)
 
 
+@pytest.mark.parametrize("ppm", [100.0, -100.0])
+@pytest.mark.parametrize("common", [True, False])
+def test_clock_offset_of_100_ppm(ppm, common):
+    """Alone, or from one reference with the carrier: 100 ppm of 2.4 GHz are 240 kHz.
+
+    By the end of 2031 symbols the instants have moved by a fifth of a symbol.
+    """
+    offsets = {"reference_ppm": -ppm} if common else {"clock_ppm": ppm, "cfo_hz": 1e4}
+    choices = {"samples_per_symbol": 2.0, "frames": 2, "snr_db": np.inf, "seed": 2}
+    made = simulate(make_link(payload=2000), **offsets, **choices)
+    truth = made.truth
+    assert truth.cfo_hz[0] == pytest.approx(-ppm * 2400 if common else 1e4)
+    assert truth.spacing == pytest.approx(2 * (1 + ppm * 1e-6), abs=1e-7)
+    sent = truth.received_symbols()
+    error = genie_symbols(truth, made.samples()) - sent
+    assert np.mean(np.abs(error) ** 2) < 10**-4.5 * np.mean(np.abs(sent) ** 2)
+
+
 @pytest.mark.parametrize("lag", [1, 1000])
 def test_wiener_increments(lag):
     """Variance 2 pi linewidth t (Demir et al. 2000), with chunk borders in between."""
