@@ -82,8 +82,9 @@ class GainSteps:
     factors: NDArray[np.float64]
 
     def at(self, samples: NDArray[np.int64]) -> NDArray[np.float64]:
-        """Amplitude factor at sample numbers."""
-        return np.concatenate([[1.0], self.factors])[np.searchsorted(self.places, samples, "right")]
+        """Amplitude factor at sample numbers, int64 of any shape."""
+        passed = np.searchsorted(self.places, samples, "right")
+        return np.where(passed > 0, self.factors[np.maximum(passed - 1, 0)], 1.0)
 
     def begin(self, context: Context) -> Stage:
         """The stage."""
