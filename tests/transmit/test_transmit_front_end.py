@@ -214,6 +214,8 @@ def test_gain_steps_do_not_see_chunks():
     ones = np.ones((1, 100), np.complex64)
     made = np.concatenate([stage(ones[:, :40].copy(), 0), stage(ones[:, 40:].copy(), 40)], axis=1)
     assert np.array_equal(made[0], np.repeat([1, 2, 0.5], [10, 50, 40]))
+    none = GainPlan().placed(np.array([5.0]), 10.0, 2.0, np.random.default_rng(0))
+    assert np.array_equal(none.at(np.arange(4)), np.ones(4))
 
 
 def test_each_frame_draws_its_gain():

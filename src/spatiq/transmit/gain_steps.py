@@ -83,6 +83,8 @@ class GainSteps:
 
     def at(self, samples: NDArray[np.int64]) -> NDArray[np.float64]:
         """Amplitude factor at sample numbers, int64 of any shape."""
+        if not len(self.places):
+            return np.ones(np.shape(samples))
         passed = np.searchsorted(self.places, samples, "right")
         return np.where(passed > 0, self.factors[np.maximum(passed - 1, 0)], 1.0)
 
