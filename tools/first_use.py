@@ -20,12 +20,16 @@ from campaign.environment import enter_environment, spatiq_program
 _BAR_S = 15.0
 
 
-def timed(command: list[str], kernels: Path) -> float:
-    """Seconds that a command takes with its compiled kernels kept in a folder of one's own."""
-    began = time.monotonic()
+def timed(command: list[str], kernels: Path) -> tuple[float, float]:
+    """Seconds that a command takes with its compiled kernels kept in a folder of one's own: by the
+    clock, and of a processor."""
+    began, before = time.monotonic(), os.times()
     environment = os.environ | {"NUMBA_CACHE_DIR": str(kernels)}
     subprocess.run(command, env=environment, check=True, stdout=subprocess.DEVNULL)
-    return time.monotonic() - began
+    after = os.times()
+    worked = after.children_user + after.children_system
+    worked -= before.children_user + before.children_system
+    return time.monotonic() - began, worked
 
 
 def main() -> int:
@@ -41,12 +45,12 @@ def main() -> int:
         files = [str(folder / "long.sigmf-meta"), str(folder / "long.link.toml")]
         out = ["--out", str(folder / "first.h5"), "--overwrite"]
         command = [spatiq_program(), "measure", *files, *out]
-        times = [timed(command, kernels) for _ in range(2)]
-    print(f"first use   {times[0]:.1f} s")
-    print(f"second use  {times[1]:.1f} s")
-    print(f"bar         {_BAR_S:.0f} s")
-    print(f"difference  {times[0] - times[1]:.1f} s")
-    return 1 if times[0] - times[1] > _BAR_S else 0
+        (first, first_work), (second, second_work) = (timed(command, kernels) for _ in range(2))
+    print(f"first use   {first:.1f} s, of a processor {first_work:.1f} s")
+    print(f"second use  {second:.1f} s, of a processor {second_work:.1f} s")
+    print(f"bar         {_BAR_S:.0f} s by the clock")
+    print(f"difference  {first - second:.1f} s")
+    return 1 if first - second > _BAR_S else 0
 
 
 if __name__ == "__main__":

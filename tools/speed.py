@@ -1,7 +1,7 @@
 """How fast is it? Measuring against a fast Fourier transform, there and back, of the same samples.
 
     python3 tools/speed.py            medians of eleven turns
-    python3 tools/speed.py --quick    of three, within 50 seconds
+    python3 tools/speed.py --quick    of three, two kinds of recording, within 50 seconds
 
 The last line is the ratio: of the slowest recording, for measuring and keeping the results. Ends
 with 1 when it is above 10. One process on one core; recordings are simulated into a temporary

@@ -46,12 +46,12 @@ def _cache_is_writable() -> bool:
     return False
 
 
-_CACHE = _cache_is_writable()
+CACHED = _cache_is_writable()
 
 
 def kernel(function: F) -> F:
     """Compile a hot loop: bare arrays in and out, no objects, no files."""
-    return cast(F, numba.njit(cache=_CACHE, **_OPTIONS)(function))
+    return cast(F, numba.njit(cache=CACHED, **_OPTIONS)(function))
 
 
 def inlined(function: F) -> F:

@@ -18,6 +18,7 @@ from receiver_cases import (
 from spatiq.receiver.chain import chain_parts
 from spatiq.receiver.frame_search import (
     FrameSearch,
+    largest_side_lobe,
     noise_metrics,
     sync_pattern,
     threshold,
@@ -248,3 +249,24 @@ def test_carrier_bins_cover_the_stated_range():
         carriers = pattern.carrier_bins / pattern.transform_size
         assert carriers[-1] >= reach and carriers[0] <= -reach
         assert np.all(np.diff(carriers) <= 1 / (2 * pattern.length) + 1e-12)
+
+
+@pytest.mark.nojit
+def test_side_lobes_of_a_pattern_against_itself():
+    """Direct sums over all lags and offsets; a shifted copy on a second antenna is ambiguous."""
+    rng = np.random.default_rng(15)
+    basis = np.linalg.qr(complex_noise(rng, (13, 2), 1.0))[0].T
+    shifts = np.array([0.0, 0.01, 0.05])
+    top = 0.0
+    for shift in (*shifts, *-shifts):
+        turned = basis * np.exp(2j * np.pi * shift * np.arange(13))
+        for lag in range(2, 13):
+            for one, other in (
+                (basis[:, lag:], turned[:, :-lag]),
+                (basis[:, :-lag], turned[:, lag:]),
+            ):
+                top = max(top, np.linalg.norm(one.conj() @ other.T) ** 2)
+    assert largest_side_lobe(basis, shifts) == pytest.approx(top)
+    plain = sync_pattern(make_link(), ReceiverOptions(), 2)
+    shifted = make_link(sections=RANK_TWO + IN_TURN + payload_section(64))
+    assert not plain.ambiguous and sync_pattern(shifted, ReceiverOptions(), 2).ambiguous

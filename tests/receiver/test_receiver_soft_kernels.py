@@ -9,7 +9,8 @@ from receiver_cases import complex_noise, make_link, rayleigh
 from spatiq.receiver.link_tables import link_tables, sparse_vectors
 from spatiq.receiver.soft_kernels import (
     block_metrics,
-    posterior,
+    block_posterior,
+    block_scratch,
     predict,
     received_codebook,
     smooth,
@@ -86,25 +87,27 @@ def test_the_lowest_word_wins_a_tie():
 @pytest.mark.nojit
 @pytest.mark.parametrize("noise", [1e-6, 0.05, 1.0, 30.0])
 def test_posterior_is_bayes(noise):
-    """softmax(-||z - g||^2 / N0); words below exp(-30) of the best are left out."""
+    """softmax(-||z - g||^2 / N0); words below exp(-14) of the best are left out, 1e-6 each."""
     rng = np.random.default_rng(3)
     link = make_link(antennas=4, constellation="16QAM")
     channel = rayleigh(rng, 2, 4)
     g = channel @ link.codebook.vectors.T
-    z = g[:, [5, 17]] + complex_noise(rng, (2, 2), noise)
+    z = g[:, [5, 17, 40]] + complex_noise(rng, (2, 3), noise)
     metric, best, second, nearest = metrics(received(channel, link_tables(link).words), z)
-    index, weight = np.empty(64, np.int64), np.empty(64, np.float32)
-    for k in range(2):
-        count = posterior(metric, k, best, second, nearest, np.float32(1 / noise), index, weight)
-        exact = np.exp(-(metric[:, k].astype(float) - best[k]) / noise)
+    *_, inverse, index, weight, used = block_scratch(64, 3)
+    inverse[:] = 1 / noise
+    inverse[2] *= 3.0  # each vector has its own
+    block_posterior(metric, best, second, nearest, inverse, 3, index, weight, used)
+    for k in range(3):
+        exact = np.exp(-(metric[:, k].astype(float) - best[k]) * inverse[k])
         exact /= exact.sum()
         got = np.zeros(64)
-        got[index[:count]] = weight[:count]
+        got[index[k, : used[k]]] = weight[k, : used[k]]
         np.testing.assert_allclose(got, exact, atol=1e-5)
         assert got.sum() == pytest.approx(1.0, abs=1e-5)
 
 
-def dense_posterior(position, observations, prior, walk, noise_free=False):
+def dense_posterior(position, observations, prior, walk):
     """Posterior means of (value, rate) at each position by one joint Gaussian solve.
 
     observations[b]: score, score_k, w, wk, wkk at zero state (linear: information form).

@@ -26,18 +26,20 @@ class Kind:
         name: for the table.
         silence: symbol periods after each frame, drawn between two bounds; None: none at all.
         period: whether the link description declares the frame period.
+        quick: whether it is among the few of the quick campaign.
     """
 
     name: str
     silence: tuple[float, float] | None
     period: bool
+    quick: bool
 
 
 KINDS = (
-    Kind("dense, period declared", None, True),
-    Kind("dense, no period", None, False),
+    Kind("dense, period declared", None, True, False),
+    Kind("dense, no period", None, False, True),
     # Nine frames' length of silence on average.
-    Kind("sparse, no period", (5.0 * _FRAME, 13.0 * _FRAME), False),
+    Kind("sparse, no period", (5.0 * _FRAME, 13.0 * _FRAME), False, True),
 )
 
 

@@ -152,6 +152,8 @@ class _Comparison:
                 if not far and f not in taken:
                     taken.add(f)
                     rows.append({"genie_errors": genie[f], **self._row(batch, i, f)})
+        if not rows:
+            raise RuntimeError(f"none of {truth.frames} frames was found")
         names = [f.name for f in fields(Outcome)]
         columns = {name: np.array([row[name] for row in rows]) for name in names if name in rows[0]}
         return Outcome(

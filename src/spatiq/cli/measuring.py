@@ -7,6 +7,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
+from spatiq.cli.compiling import compiling_ahead
 from spatiq.cli.measure import MeasureRequest
 from spatiq.cli.printing import print_results
 from spatiq.cli.progress import ProgressBar
@@ -102,6 +103,7 @@ def _measure(recording: Recording, link: Link, request: MeasureRequest, path: Pa
     summary = Summary(link, request.options.confidence)
     with (
         ProgressBar() as bar,
+        compiling_ahead(request.link),
         ResultsWriter(
             path, link, recording, request.options, overwrite=request.overwrite
         ) as writer,

@@ -65,8 +65,12 @@ class Measuring:
         link = self.link
         samples_per_symbol = self.recording.sample_rate / link.symbol_rate_hz
         period = link.period_symbols
+        # Half a symbol less: the starts are estimates.
+        self._shortest = (link.frame_symbols - 0.5) * samples_per_symbol
         self._follower = ReferenceFollower(
-            link.payload, period * samples_per_symbol if period is not None else None
+            link.payload,
+            period * samples_per_symbol if period is not None else None,
+            self._shortest,
         )
         self._words = sparse_vectors(link.codebook.vectors)
         self._spatial = np.tile(link.codebook.spatial_bits, link.layout.payload_index.size)
@@ -219,7 +223,10 @@ class Measuring:
                 continue
             if self._previous is not None and self.link.period_symbols is None:
                 before, at = self._previous
-                for n in range(before + 1, min(number, before + 1 + _MOST_SKIPPED)):
+                room = int((position[i] - at) / self._shortest) + 1
+                # A jump that time has no room for is no loss: the numbers have begun anew.
+                skipped = range(before + 1, number) if number - before <= room else range(0)
+                for n in skipped:
                     share = (n - before) / (number - before)
                     between = at + share * (position[i] - at)
                     shift = position[i] - columns["start_sample"][i]
@@ -231,4 +238,3 @@ class Measuring:
 
 
 _COUNT_COLUMNS = ("periods_compared", "antenna_errors", "symbol_errors")
-_MOST_SKIPPED = 100_000  # a restarted counter must not fill the memory

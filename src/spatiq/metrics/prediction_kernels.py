@@ -306,21 +306,29 @@ def refine(
         shares: (A, A) sums over `rows` by set sent, set decided, in and out; may be (0, 0).
     """
     sums = np.empty(4, np.float64)
+    entered = np.empty((0, 0), np.float64) if scale_bound else shares
+    monte_carlo(gr, gi, rows, noise_r, noise_i, weights, sets, scale_bound, sums, entered)
     if scale_bound:
-        unwanted = np.empty((0, 0), np.float64)
-        monte_carlo(gr, gi, rows, noise_r, noise_i, weights, sets, True, sums, unwanted)
         counted = sums[2] + sums[3]
         if counted > 0.0:
             common = (sums[0] + sums[1]) / counted
             spatial = (sums[0] + common * OWN_RATIO_FROM) / (sums[2] + OWN_RATIO_FROM)
             wrong[0] *= spatial
-            shares *= spatial
+            multiply(shares, spatial)
             wrong[1] *= (sums[1] + common * OWN_RATIO_FROM) / (sums[3] + OWN_RATIO_FROM)
         return
-    monte_carlo(gr, gi, rows, noise_r, noise_i, weights, sets, False, sums, shares)
     draws = noise_r.shape[1]
-    wrong[:] = sums[:2] / (rows.size * draws)
-    shares /= draws
+    wrong[0] = sums[0] / (rows.size * draws)
+    wrong[1] = sums[1] / (rows.size * draws)
+    multiply(shares, 1.0 / draws)
+
+
+@kernel
+def multiply(values: NDArray[np.floating], factor: float) -> None:
+    """Multiply (n, m) in place. A loop: array expressions take numba seconds to compile."""
+    for i in range(values.shape[0]):
+        for j in range(values.shape[1]):
+            values[i, j] *= factor
 
 
 @kernel
@@ -366,14 +374,17 @@ def predict_frames(
         if scale.shape[1] > 0:
             scaled_words(x, scale[f], wr, wi)
         union_bound_pairs(gr, gi, wr, wi, rows, weights, sets, pairs, shares)
-        wrong[f] = pairs[:2] / rows.size
+        wrong[f, 0] = pairs[0] / rows.size
+        wrong[f, 1] = pairs[1] / rows.size
         bound = wrong[f, 0] + wrong[f, 1]
         if bound > limits[0]:
             shrink = np.float32(1.0 / math.sqrt(effective_noise(pairs)))
-            gr *= shrink
-            gi *= shrink
+            multiply(gr, float(shrink))
+            multiply(gi, float(shrink))
             scale_bound = bound <= limits[1]
             table_r = noise_r[tables[f]]
             table_i = noise_i[tables[f]]
             refine(gr, gi, rows, table_r, table_i, weights, sets, scale_bound, wrong[f], shares)
-        confusion += shares / rows.size
+        for i in range(confusion.shape[0]):
+            for j in range(confusion.shape[1]):
+                confusion[i, j] += shares[i, j] / rows.size

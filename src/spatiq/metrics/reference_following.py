@@ -42,10 +42,12 @@ class ReferenceFollower:
     Attributes:
         payload: what the payload's bits are.
         period: frame period in samples; None when frames may come at any time.
+        shortest: least distance of two frames' starts in samples.
     """
 
     payload: PayloadFormat
     period: float | None
+    shortest: float
     _last: tuple[int, float] | None = None
     _pending: int = 0  # frames found after the last known one
     _dependent: NDArray[np.int64] = field(init=False)
@@ -147,16 +149,17 @@ class ReferenceFollower:
         i: int,
     ) -> int:
         """Number of one frame by its own evidence, else by time; -1 when there is none."""
-        by_counter = self._by_counter(plain, i)
+        room = self._room(float(position[i]))
+        by_counter = self._by_counter(plain, i, room)
         if by_counter is not None:
             trusted = crc_ok is not None and bool(crc_ok[i])
             if self._agrees(by_counter, plain[i]) and (trusted or self._running is not None):
                 return by_counter
-            following = i + 1 < plain.shape[0] and self._by_counter(plain, i + 1)
+            following = i + 1 < plain.shape[0] and self._by_counter(plain, i + 1, room + 1)
             if self._running is None and following == by_counter + 1:
                 return by_counter
         for find in (self._by_trial, self._by_search):
-            found = find(plain[i])
+            found = find(plain[i], room)
             if found is not None:
                 return found
         if self._last is not None and self.period is not None:
@@ -171,7 +174,7 @@ class ReferenceFollower:
         wrong = int(np.count_nonzero(reference != bits[dependent]))
         return self._running is None or agreement(wrong, dependent.size) < SIGNIFICANCE
 
-    def _by_counter(self, plain: NDArray[np.uint8], i: int) -> int | None:
+    def _by_counter(self, plain: NDArray[np.uint8], i: int, room: int) -> int | None:
         """Frame number that the counter shows, lifted past the last known one."""
         if self._counter is None or not isinstance(self._counter.source, CounterSource):
             return None
@@ -179,34 +182,45 @@ class ReferenceFollower:
         if values is None:
             return None
         modulus = 1 << self._counter.width
-        return self._lift((int(values[0]) - self._counter.source.start) % modulus, modulus)
+        shown = (int(values[0]) - self._counter.source.start) % modulus
+        return self._lift(shown, modulus, room)
 
-    def _lift(self, number: int, modulus: int) -> int:
-        """Smallest number of that residue after the last known one."""
-        if self._last is not None and number <= self._last[0]:
-            number += -(-(self._last[0] + 1 - number) // modulus) * modulus
-        return number
+    def _room(self, position: float) -> int:
+        """Most frames that can have begun after the last known one, up to this place."""
+        if self._last is None:
+            return 0
+        return int((position - self._last[1]) / self.shortest) + 1
 
-    def _by_trial(self, bits: NDArray[np.uint8]) -> int | None:
+    def _lift(self, number: int, modulus: int, room: int) -> int:
+        """Smallest number of that residue after the last known one, if time leaves room for it.
+
+        Otherwise the number as it is: the transmitter has begun anew, or the last one was wrong.
+        """
+        if self._last is None or number > self._last[0]:
+            return number
+        lifted = number + -(-(self._last[0] + 1 - number) // modulus) * modulus
+        return lifted if lifted - self._last[0] <= room else number
+
+    def _by_trial(self, bits: NDArray[np.uint8], room: int) -> int | None:
         """One of the next numbers, where a few frames were missed; survives more errors than a
         search."""
         if self._last is None or self._running is None:
             return None
-        numbers = self._last[0] + 1 + np.arange(_TRIALS, dtype=np.int64)
+        numbers = self._last[0] + 1 + np.arange(min(room, _TRIALS), dtype=np.int64)
         span = slice(self._running.start, self._running.stop)
         wrong = np.count_nonzero(self.payload.reference(numbers)[:, span] != bits[span], axis=1)
         best = int(np.argmin(wrong))
         chance = agreement(int(wrong[best]), self._running.width) * _TRIALS
         return int(numbers[best]) if chance < SIGNIFICANCE else None
 
-    def _by_search(self, bits: NDArray[np.uint8]) -> int | None:
+    def _by_search(self, bits: NDArray[np.uint8], room: int) -> int | None:
         span = self._running
         if span is None or not isinstance(span.source, PrbsSource):
             return None
         if self._search is None:
             self._search = PrbsSearch(span.source.prbs, span.width)
         found = self._search.frame_number(bits[span.start : span.stop])
-        return None if found is None else self._lift(found, self._search.modulus)
+        return None if found is None else self._lift(found, self._search.modulus, room)
 
 
 def fill_between(numbers: NDArray[np.int64]) -> None:

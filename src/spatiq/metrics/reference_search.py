@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from spatiq.signal.prbs import Prbs
 
 _WINDOWS = 64  # tried per frame: one without error is among them at bit error ratios up to 10 %
+_LIKELY_WINDOWS = 0.5  # error-free windows to be expected at the error ratio that was found
 _BABY_STEPS = 1 << 17
 SIGNIFICANCE = 1e-9  # probability that unrelated bits agree as well
 
@@ -56,17 +57,45 @@ class PrbsSearch:
         if last < 0 or not self.prbs.supports_state:
             return None
         windows = min(_WINDOWS, last + 1)
-        for offset in np.unique(np.linspace(0, last, windows).astype(np.int64)):
-            state = self.prbs.state_from_bits(bits[offset : offset + order])
-            if state == 0:
-                continue
-            start = self.prbs.advance(state, -int(offset))
-            expected = self.prbs.bits_from_state(start, bits.size)
-            # The window agrees by construction: only the other bits are evidence.
-            wrong = int(np.count_nonzero(expected != bits))
-            if agreement(wrong, bits.size - order) * windows < SIGNIFICANCE:
-                return self._number(self.position(start))
-        return None
+        best, fewest = bits[:order], bits.size
+        where = 0
+        for offset in np.unique(np.linspace(0, last, windows).astype(np.int64)).tolist():
+            wrong = self._mismatches(bits, bits[offset : offset + order], offset)
+            if wrong < fewest:
+                best, fewest, where = bits[offset : offset + order], wrong, offset
+            if fewest * order * 4 < bits.size:
+                break
+        else:
+            best, fewest = self._corrected(bits, best, fewest, where)
+        # The window agrees by construction: only the other bits are evidence.
+        significant = agreement(fewest, bits.size - order) * windows < SIGNIFICANCE
+        # A register of two taps with one wrong bit spoils few of the next: a state nearly right
+        # agrees better than chance. The right one must have had a window without error.
+        free_of_error = windows * (1.0 - fewest / bits.size) ** order
+        if not significant or free_of_error < _LIKELY_WINDOWS:
+            return None
+        start = self.prbs.advance(self.prbs.state_from_bits(best), -where)
+        return self._number(self.position(start))
+
+    def _mismatches(self, bits: NDArray[np.uint8], window: NDArray[np.uint8], offset: int) -> int:
+        """Bits that differ from the sequence with `window` at `offset`; all when there is none."""
+        state = self.prbs.state_from_bits(window)
+        if state == 0:
+            return int(bits.size)
+        expected = self.prbs.bits_from_state(self.prbs.advance(state, -offset), bits.size)
+        return int(np.count_nonzero(expected != bits))
+
+    def _corrected(
+        self, bits: NDArray[np.uint8], window: NDArray[np.uint8], fewest: int, offset: int
+    ) -> tuple[NDArray[np.uint8], int]:
+        """Correct the window bit by bit as long as mismatches become fewer."""
+        while True:
+            flipped = window ^ np.eye(window.size, dtype=np.uint8)
+            wrong = [self._mismatches(bits, f, offset) for f in flipped]
+            i = int(np.argmin(wrong))
+            if wrong[i] >= fewest:
+                return window, fewest
+            window, fewest = flipped[i], wrong[i]
 
     def position(self, state: int) -> int:
         """Position in the sequence at which the register holds a state."""

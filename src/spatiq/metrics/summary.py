@@ -14,7 +14,7 @@ from spatiq.metrics.frame_table import Mark, MeasuredFrames
 from spatiq.metrics.intervals import clopper_pearson
 from spatiq.metrics.loss import pooled_loss
 
-_KEPT_FRAMES = 256  # channels kept for the implementation loss, spread over the recording
+_KEPT_FRAMES = 64  # channels kept for the implementation loss, spread over the recording
 _SPREAD = ("cfo_hz", "cfo_ppm", "clock_ppm", "snr_db")
 _COUNTS = (
     "bits_compared",

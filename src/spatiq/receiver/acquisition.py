@@ -42,8 +42,11 @@ class Acquisition:
         """Fill t0, carrier, channel, noise and the variances; derotate the samples."""
         header = self.tables.header
         span = int(header[-1] - header[0]) + 1
-        # A quarter of the main lobe's half width: no maximum can hide between grid points.
-        points = max(3, 2 * int(np.ceil(self.carrier_reach * 4 * span)) + 1)
+        # A quarter of the main lobe's half width: no maximum can hide between grid points. With
+        # payload between known symbols the likelihood has fringes, of which the highest is sought:
+        # a sixteenth, or the grid would decide by where it happens to meet them.
+        per_lobe = 4 if span == header.size else 16
+        points = max(3, 2 * int(np.ceil(self.carrier_reach * per_lobe * span)) + 1)
         grid = np.linspace(-self.carrier_reach, self.carrier_reach, points)
         for i in range(batch.count):
             self._acquire(batch, i, grid)

@@ -11,6 +11,8 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 
+import numpy as np
+
 from spatiq.errors import InputError
 from spatiq.link.description import Link
 from spatiq.receiver.acquisition import Acquisition
@@ -37,6 +39,33 @@ class Progress:
     samples_total: int
     frames_found: int
     text: str = ""
+
+
+@dataclass
+class _Report:
+    """Keeps what `Progress` needs between calls."""
+
+    progress: Callable[[Progress], None] | None
+    total: int
+    done: int = 0
+    frames: int = 0
+    text: str = "preparing (the first run compiles)"
+
+    def read(self, position: int) -> None:
+        """Samples up to `position` have been read."""
+        self.done = position
+        self.tell()
+
+    def received(self, frames: int) -> None:
+        """A batch has come through all stages."""
+        self.frames += frames
+        self.text = ""
+        self.tell()
+
+    def tell(self) -> None:
+        """Hand the state on."""
+        if self.progress is not None:
+            self.progress(Progress(self.done, self.total, self.frames, self.text))
 
 
 @dataclass(frozen=True, eq=False)
@@ -80,7 +109,7 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     if link.clock == "locked" and link.carrier_hz is not None:
         locked = link.carrier_hz
         clock_std = 1e-9
-    walk = 2 * 3.141592653589793 * options.phase_noise_hz / link.symbol_rate_hz
+    walk = 2 * np.pi * options.phase_noise_hz / link.symbol_rate_hz
     steps = parts.pattern.carrier_bins
     spacing = float(steps[1] - steps[0]) if steps.size > 1 else 1.0
     reach = spacing / parts.pattern.transform_size
@@ -107,7 +136,7 @@ def receive(
         link: link description.
         options: how to receive.
         stages: stages after framing; `standard_stages` when None.
-        progress: called after each batch.
+        progress: called as samples are read and after each batch.
 
     Raises:
         InputError: when the link cannot be received from this recording.
@@ -115,10 +144,11 @@ def receive(
     options = options or ReceiverOptions()
     parts = chain_parts(recording, link, options)
     chosen = list(stages) if stages is not None else standard_stages(link, options, parts)
-    framing = Framing(recording, link, options, parts.bank, parts.tables, parts.pattern)
-    frames = 0
-    if progress is not None:
-        progress(Progress(0, recording.n_samples, 0, "preparing (the first run compiles)"))
+    report = _Report(progress, recording.n_samples)
+    framing = Framing(
+        recording, link, options, parts.bank, parts.tables, parts.pattern, report.read
+    )
+    report.tell()
     edges = _edge_frames(recording, link, parts)
     last: FrameBatch | None = None
     for batch in framing:
@@ -130,9 +160,7 @@ def receive(
             last = batch
         if edges is not None and batch.final and last is not None:
             batch.lost = _merged(edges.after(last), batch.lost, edges.period)
-        frames += batch.count
-        if progress is not None:
-            progress(Progress(framing.samples_done, recording.n_samples, frames))
+        report.received(batch.count)
         yield batch
 
 

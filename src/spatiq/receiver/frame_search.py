@@ -50,12 +50,15 @@ class SyncPattern:
         transform_size: length of the correlation transforms, symbol periods.
         carrier_bins: transform bins of the carrier offsets tested, ascending, symmetric.
         threshold: smallest metric that counts as a detection.
+        ambiguous: whether the section, shifted in time and carrier, resembles itself so much that a
+            place beside the true one may pass the threshold.
     """
 
     basis: NDArray[np.complex64]
     transform_size: int
     carrier_bins: NDArray[np.int64]
     threshold: float
+    ambiguous: bool = False
 
     @property
     def length(self) -> int:
@@ -86,12 +89,36 @@ def sync_pattern(link: Link, options: ReceiverOptions, channels: int) -> SyncPat
     size = max(1024, 1 << int(np.ceil(np.log2(8 * n))))
     step = max(1, size // (2 * n))
     reach = int(np.ceil(options.cfo_range * size / step))
+    basis = np.ascontiguousarray(left[:, :rank].T)
+    limit = threshold(options.false_alarm, n, rank, channels)
+    # Half the threshold: what surrounds the section may add to a side lobe.
+    shifts = np.arange(2 * reach + 1) * step / size
     return SyncPattern(
-        basis=np.ascontiguousarray(left[:, :rank].T).astype(np.complex64),
+        basis=basis.astype(np.complex64),
         transform_size=size,
         carrier_bins=np.arange(-reach, reach + 1, dtype=np.int64) * step,
-        threshold=threshold(options.false_alarm, n, rank, channels),
+        threshold=limit,
+        ambiguous=largest_side_lobe(basis, shifts) > limit / 2,
     )
+
+
+def largest_side_lobe(basis: NDArray[np.complex128], shifts: NDArray[np.float64]) -> float:
+    """Largest metric of the pattern against itself, two or more symbol periods off the true place.
+
+    Args:
+        basis: complex128 (P, N); orthonormal rows.
+        shifts: carrier offsets tried, cycles per symbol period; their negatives give the same.
+    """
+    n = basis.shape[1]
+    size = 1 << int(np.ceil(np.log2(2 * n)))
+    spectrum = np.conj(scipy.fft.fft(basis, size, axis=1))
+    beside = slice(2, size - 1)  # lags +-2 and beyond, modulo the transform's size
+    top = 0.0
+    for shift in shifts:
+        turned = scipy.fft.fft(basis * np.exp(2j * np.pi * shift * np.arange(n)), size, axis=1)
+        lobes = np.abs(scipy.fft.ifft(spectrum[:, None] * turned[None], axis=2)) ** 2
+        top = max(top, float(lobes.sum(axis=(0, 1))[beside].max(initial=0.0)))
+    return top
 
 
 class FrameSearch:
@@ -109,17 +136,26 @@ class FrameSearch:
         self._pattern = pattern
         self._spacing = bank.samples_per_symbol / LAGS_PER_SYMBOL
         self._hop = LAGS_PER_SYMBOL * (pattern.transform_size - pattern.length + 1)
-        self._spectra = self._pattern_spectra()
+        transform = scipy.fft.fft(pattern.basis, pattern.transform_size, axis=-1)
+        self._base = np.conj(transform).astype(np.complex64)
+        self._kept: NDArray[np.complex64] | None = None
         self._blocks: dict[int, tuple[NDArray[np.float32], NDArray[np.int32]]] = {}
         count = int((stream.stop - stream.start) / self._spacing) + 1
         self.last_lag = count - LAGS_PER_SYMBOL * (pattern.length - 1) - 1
 
-    def _pattern_spectra(self) -> NDArray[np.complex64]:
-        """Conjugate transforms of the basis at each carrier bin, complex64 (bins, P, size)."""
-        pattern = self._pattern
-        base = np.conj(scipy.fft.fft(pattern.basis, pattern.transform_size, axis=-1))
-        shifted = [np.roll(base, b, axis=-1) for b in pattern.carrier_bins]
-        return np.ascontiguousarray(np.stack(shifted)).astype(np.complex64)
+    def _spectra(self, first: int, count: int) -> NDArray[np.complex64]:
+        """Conjugate transforms of the basis at some carrier bins, complex64 (bins, 1, 1, P, size).
+
+        A carrier bin shifts the transform. All of them are kept where they are few; for a long
+        section over a wide range they would fill the memory, and are shifted anew.
+        """
+        bins = self._pattern.carrier_bins
+        if self._kept is None and bins.size * self._base.nbytes <= _TRANSFORM_BYTES:
+            self._kept = np.stack([np.roll(self._base, b, axis=-1) for b in bins])
+        if self._kept is not None:
+            return self._kept[first : first + count, None, None]
+        chosen = bins[first : first + count]
+        return np.stack([np.roll(self._base, b, axis=-1) for b in chosen])[:, None, None]
 
     def instants(self, first: int, count: int) -> NDArray[np.complex64]:
         """Matched-filter outputs of the fixed half-symbol grid, complex64 (Nr, count)."""
@@ -147,10 +183,10 @@ class FrameSearch:
             best = np.zeros((2, lags), np.float32)
             where = np.zeros((2, lags), np.int32)
             metric = np.empty(lags, np.float32)
-            each = spectrum.size * self._spectra.shape[1] * 8  # bytes of one bin's correlations
+            each = spectrum.size * self._base.shape[0] * 8  # bytes of one bin's correlations
             together = max(1, _TRANSFORM_BYTES // each)
-            for first in range(0, self._spectra.shape[0], together):
-                products = spectrum * self._spectra[first : first + together, None, None]
+            for first in range(0, self._pattern.carrier_bins.size, together):
+                products = spectrum * self._spectra(first, together)
                 correlations = scipy.fft.ifft(products, axis=-1, overwrite_x=True)
                 parts = correlations.reshape(correlations.shape[0], 2, -1, size, 1)
                 parts = parts.view(np.float32)

@@ -7,7 +7,7 @@ there is listed with its reason.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -89,8 +89,10 @@ class Framing:
         bank: FilterBank,
         tables: LinkTables,
         pattern: SyncPattern,
+        on_read: Callable[[int], None] | None = None,
     ) -> None:
         self._recording = recording
+        self._on_read = on_read
         self._link = link
         self._options = options
         self._bank = bank
@@ -104,7 +106,6 @@ class Framing:
         # One array for all batches: fresh memory would cost as much as the filter.
         shape = (self._batch_size, recording.channels, 2, self._geometry.window)
         self._planes = np.empty(shape, np.float32)
-        self.samples_done = 0
 
     def __iter__(self) -> Iterator[FrameBatch]:
         """Batches of at most a few hundred frames; the last may hold lost frames only."""
@@ -166,7 +167,9 @@ class Framing:
         """Frames of one segment: what was found, and the start of a frame in file samples."""
         blocks = self._recording.blocks(self._options.block_size, segment.start, segment.stop)
         channels = self._recording.channels
-        stream = SampleStream(blocks, segment.start, segment.stop, channels, self._spoiled)
+        stream = SampleStream(
+            blocks, segment.start, segment.stop, channels, self._spoiled, self._on_read
+        )
         sync = self._link.layout.sync.start
         lead = sync + 2 * self._geometry.guard
         search = FrameSearch(stream, self._bank, self._pattern, lead)
@@ -189,13 +192,14 @@ class Framing:
             last = found
             drift = 1 + int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
             lag = found.lag + LAGS_PER_SYMBOL * max(self._geometry.length - drift, 1)
-            self.samples_done = min(int(segment.start + lag * spacing), segment.stop)
             search.release(lag)
-        self.samples_done = segment.stop
 
     def _next(self, search: FrameSearch, lag: int, last: Detection | None) -> Detection | None:
-        """Where a frame is expected after the last one; failing that, wherever one is."""
-        if last is not None:
+        """Where a frame is expected after the last one; failing that, wherever one is.
+
+        A side lobe of the next frame may lie where it is expected: only a scan compares the two.
+        """
+        if last is not None and not self._pattern.ambiguous:
             period = self._link.period_symbols or float(self._geometry.length)
             drift = 1 + int(np.ceil(period * self._options.max_clock_ppm * 1e-6))
             expected = last.lag + round(LAGS_PER_SYMBOL * period)

@@ -19,6 +19,7 @@ from spatiq.signal.pulses import Pulse
 # Table steps per symbol. The nearest row is read; its instant is off by a uniform error of at most
 # half a step, an EVM of (1/4096) sqrt(4 pi^2 xi / 12), -78 dB.
 _STEPS_PER_SYMBOL = 4096
+_CURVATURE_LAGS = 8  # beyond, the derivatives of usual pulses hardly overlap
 _SLOPE_STEP = 1e-4  # samples; central difference in double precision, error below 1e-7
 
 
@@ -34,6 +35,8 @@ class FilterBank:
         slopes: float32, same shape; derivative with respect to t, per sample.
         slope_energy: mean energy of a row of `slopes`, per sample squared; equals
             4 pi^2 xi / samples_per_symbol^2 with xi of the modified Cramer-Rao bound for timing.
+        curvature: float64, shape (M+1,); correlation of the pulse's derivative with itself m symbol
+            periods on, per sample squared; curvature[0] is slope_energy.
     """
 
     samples_per_symbol: float
@@ -42,6 +45,7 @@ class FilterBank:
     taps: NDArray[np.float32]
     slopes: NDArray[np.float32]
     slope_energy: float
+    curvature: NDArray[np.float64]
 
     @property
     def parts(self) -> tuple[NDArray[np.float32], NDArray[np.float32], int, float]:
@@ -71,14 +75,26 @@ def filter_bank(pulse: Pulse, samples_per_symbol: float) -> FilterBank:
     t = (tap - instants) / samples_per_symbol
     taps = pulse.samples(t, samples_per_symbol) / np.sqrt(samples_per_symbol)
     slopes = _slopes(pulse, t, samples_per_symbol)
+    slope_energy = float(np.mean(np.sum(slopes[:-1] ** 2, axis=1)))
     return FilterBank(
         samples_per_symbol=samples_per_symbol,
         phases=phases,
         half=half,
         taps=taps.astype(np.float32),
         slopes=slopes.astype(np.float32),
-        slope_energy=float(np.mean(np.sum(slopes[:-1] ** 2, axis=1))),
+        slope_energy=slope_energy,
+        curvature=_curvature(pulse, samples_per_symbol) * slope_energy,
     )
+
+
+def _curvature(pulse: Pulse, samples_per_symbol: float) -> NDArray[np.float64]:
+    """Correlation of the derivative at lags of whole symbol periods, 1 at lag 0."""
+    fine = 64
+    reach = int(np.ceil(pulse.half_span * fine))
+    slope = _slopes(pulse, np.arange(-reach, reach + 1) / fine, samples_per_symbol)
+    lags = range(min(_CURVATURE_LAGS, 2 * reach // fine) + 1)
+    each = [float(slope[m * fine :] @ slope[: slope.size - m * fine]) for m in lags]
+    return np.array(each) / each[0]
 
 
 def _slopes(pulse: Pulse, t: NDArray[np.float64], samples_per_symbol: float) -> NDArray[np.float64]:

@@ -26,6 +26,7 @@ from spatiq.receiver.refit_kernels import (
     refit_timing,
     rotate_active,
     solve_diagonal,
+    timing_density,
 )
 from spatiq.receiver.soft_kernels import received_codebook
 from spatiq.receiver.tracking import floored_noise
@@ -142,7 +143,9 @@ class Refit:
         rotate_active(slope, phase)
         out = np.zeros(4)
         step_var = (self.clock_std * bank.samples_per_symbol) ** 2
-        refit_timing(slope, reference, tables.active, noise, bank.slope_energy, step_var, out)
+        density = np.empty(tables.active.size)
+        timing_density(reference, tables.active, bank.curvature, density)
+        refit_timing(slope, reference, density, tables.active, noise, step_var, out)
         batch.t0[i] += out[0]
         batch.step[i] += out[1]
         batch.timing_var[i], batch.step_var[i] = out[2], out[3]

@@ -32,7 +32,9 @@ def rotate_active(values: F32, phase: F32) -> None:
 def gram(words: tuple[I64, I64, C64], energy: F64, known: C128, sxx: C128) -> None:
     """Sum of E[x x^H]: of the known vectors, and of each codeword times its expected energy."""
     pointer, antenna, value = words
-    sxx[:] = known
+    for a in range(known.shape[0]):
+        for b in range(known.shape[1]):
+            sxx[a, b] = known[a, b]
     for c in range(energy.size):
         if energy[c] == 0.0:
             continue
@@ -222,16 +224,44 @@ def refit_phase(
 
 
 @kernel
+def timing_density(reference: F32, active: I64, curvature: F64, density: F64) -> None:
+    """Information about timing that each period brings, times N0/2, per sample squared.
+
+    The curvature of the likelihood of a waveform whose symbols are all known. Where neighbouring
+    symbols are alike (one antenna sending the same symbol twice) there is little slope to tell
+    timing by; symbols of random phase average to the modified bound's slope energy.
+
+    Args:
+        reference: float32 (Ka, 2, Nr); H E[x].
+        active: (Ka,); periods, ascending.
+        curvature: (M+1,); of the filter bank.
+        density: (Ka,); filled; single values may be negative, their sum is not.
+    """
+    for i in range(active.size):
+        total = 0.0
+        for m in range(-(curvature.size - 1), curvature.size):
+            j = i + m
+            if j < 0 or j >= active.size or active[j] - active[i] != m:
+                continue
+            product = np.float32(0.0)
+            for r in range(reference.shape[2]):
+                product += reference[i, 0, r] * reference[j, 0, r]
+                product += reference[i, 1, r] * reference[j, 1, r]
+            total += curvature[abs(m)] * product
+        density[i] = total
+
+
+@kernel
 def refit_timing(
     slope: F32,
     reference: F32,
+    density: F64,
     active: I64,
     noise: float,
-    slope_energy: float,
     step_var: float,
     out: F64,
 ) -> None:
-    """Least-squares correction of t0 and step, with a prior on step.
+    """Newton step for t0 and step, with a prior on step.
 
     out (4,): corrections of t0 and step, their variances. All pulses are known to lie between known
     neighbours, so that the score holds no intersymbol term (it is antisymmetric and cancels).
@@ -239,22 +269,20 @@ def refit_timing(
     score, score_k, w, wk, wkk = 0.0, 0.0, 0.0, 0.0, 0.0
     for i in range(active.size):
         k = float(active[i])
-        error, energy = np.float32(0.0), np.float32(0.0)
+        error = np.float32(0.0)
         for r in range(slope.shape[2]):
             error += reference[i, 0, r] * slope[i, 0, r] + reference[i, 1, r] * slope[i, 1, r]
-            energy += reference[i, 0, r] ** 2 + reference[i, 1, r] ** 2
         score += float(error)
         score_k += float(error * k)
-        w += float(energy)
-        wk += float(energy * k)
-        wkk += float(energy * k * k)
+        w += density[i]
+        wk += density[i] * k
+        wkk += density[i] * k * k
     gain = 2.0 / noise
-    info = gain * slope_energy
-    j11, j12 = info * w, info * wk
-    j22 = info * wkk + (1.0 / step_var if step_var > 0.0 else 1e30)
+    j11, j12 = gain * w, gain * wk
+    j22 = gain * wkk + (1.0 / step_var if step_var > 0.0 else 1e30)
     det = j11 * j22 - j12 * j12
     out[:] = 0.0
-    if det > 0.0:
+    if j11 > 0.0 and det > 0.0:
         out[0] = gain * (j22 * score - j12 * score_k) / det
         out[1] = gain * (j11 * score_k - j12 * score) / det
         out[2] = j22 / det

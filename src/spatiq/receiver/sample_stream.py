@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from typing import Protocol
 
 import numpy as np
@@ -46,7 +46,8 @@ class SampleStream:
     Real and imaginary parts are held in planes of their own, because the matched filter's inner
     loops then vectorise. Positions are per-channel file indices. Samples outside the segment read
     as zero, and so do samples that are not finite in any channel, which are entered in `spoiled`.
-    Memory: what lies between `release` and the furthest position asked for, plus a block.
+    Memory: what lies between `release` and the furthest position asked for, plus a block. `on_read`
+    is told after each block how far it has been read.
     """
 
     def __init__(
@@ -56,8 +57,10 @@ class SampleStream:
         stop: int,
         channels: int,
         spoiled: SpoiledSamples | None = None,
+        on_read: Callable[[int], None] | None = None,
     ) -> None:
         self._spoiled = spoiled
+        self._on_read = on_read
         self.start = start
         self.stop = stop
         self.channels = channels
@@ -110,3 +113,5 @@ class SampleStream:
             where = np.flatnonzero(~np.isfinite(samples).all(axis=0))
             self._spoiled.add(self._read_to + where)
         self._read_to += samples.shape[1]
+        if self._on_read is not None:
+            self._on_read(self._read_to)

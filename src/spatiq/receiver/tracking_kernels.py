@@ -191,34 +191,43 @@ def track_side(
     z, means, scratch = block_vectors(channels), block_vectors(channels), block_scratch(size, BLOCK)
     blocks = (order.size + BLOCK - 1) // BLOCK
     position, sums = np.empty(blocks), np.empty(5)
+    room, single = np.empty((2, BLOCK)), np.empty((2, BLOCK), np.float32)
     filtered, filtered_cov = np.empty((blocks, 2)), np.empty((blocks, 3))
     state, cov = np.zeros(2), np.array([prior[0], 0.0, prior[1]])
     t_state, t_cov = np.zeros(2), np.array([prior[2], 0.0, prior[3]])
     at = centroid
+    quadrature = blocks >= 0  # a variable: numba compiles anew for each literal True and False
     for b in range(blocks):
         periods = order[b * BLOCK : min(order.size, (b + 1) * BLOCK)]
         here = float(active[periods[0]])
         predict(state, cov, here - at, walk)
         predict(t_state, t_cov, here - at, 0.0)
         at = here
-        offsets = active[periods].astype(np.float64) - here
-        instants = t0 + t_state[0] + active[periods] * step + t_state[1] * offsets
-        angles = (state[0] + state[1] * offsets).astype(np.float32)
-        scales = np.float32(1.0) / amplitude[periods]
+        offsets, instants = room[0, : periods.size], room[1, : periods.size]
+        angles, scales = single[0, : periods.size], single[1, : periods.size]
+        # Element by element: array expressions take numba seconds to compile.
+        for k in range(periods.size):
+            offsets[k] = active[periods[k]] - here
+            ideal = t0 + active[periods[k]] * step
+            instants[k] = ideal + t_state[0] + t_state[1] * offsets[k]
+            angles[k] = state[0] + state[1] * offsets[k]
+            scales[k] = np.float32(1.0) / amplitude[periods[k]]
         derotated_block(planes, instants, angles, scales, taps, phases, z[0], z[1])
         block_references(
             periods, active_word, vectors, channel, codebook, z, scales, noise, scratch, means
         )
-        block_score(z, means, offsets, scales, True, sums)
+        block_score(z, means, offsets, scales, quadrature, sums)
         g = 2.0 / noise
         update(state, cov, g * sums[0], g * sums[1], g * sums[2], g * sums[3], g * sums[4])
         if with_timing and sums[2] > 0.0:
             derotated_block(planes, instants, angles, scales, slopes, phases, z[0], z[1])
-            block_score(z, means, offsets, scales, False, sums)
+            block_score(z, means, offsets, scales, not quadrature, sums)
             update_timing(t_state, t_cov, sums, periods.size, noise, slope_energy, step)
         position[b] = here
-        filtered[b] = state
-        filtered_cov[b] = cov
+        for j in range(2):
+            filtered[b, j] = state[j]
+        for j in range(3):
+            filtered_cov[b, j] = cov[j]
     smoothed = np.empty((blocks, 2))
     smooth(blocks, position, filtered, filtered_cov, walk, smoothed)
     write_phase(position, smoothed, order, active, phase)

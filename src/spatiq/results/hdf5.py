@@ -104,7 +104,8 @@ class ResultsWriter:
         """Create the temporary file with all its datasets, empty."""
         with ExitStack() as stack:
             partial = stack.enter_context(whole_file(self.path, overwrite=self._overwrite))
-            self._file = stack.enter_context(h5py.File(partial, "w"))
+            # No chunk cache: whole chunks are written once, and 70 caches would fill 100 MB.
+            self._file = stack.enter_context(h5py.File(partial, "w", rdcc_nbytes=0))
             self._growing = self._create()
             self._stack = stack.pop_all()
         return self
