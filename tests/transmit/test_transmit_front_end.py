@@ -153,6 +153,17 @@ def test_clipping_of_a_gaussian(level_db):
     assert abs(counter[0] / n - share) < SIGMAS * spread
 
 
+def test_clipping_is_counted_in_a_recording():
+    """Samples with a component at the level, counted anew in each pass."""
+    made = simulate(make_link(), samples_per_symbol=4, frames=9, impairments=[Clipping(3.0)])
+    parts = np.abs(made.samples().view(np.float32).reshape(2, -1, 2))
+    expected = (parts == parts.max()).any(axis=2).sum(axis=1)
+    made.samples()
+    assert np.all(expected > 0)
+    assert np.array_equal(made.limited, expected)
+    assert not made.clipped.any()
+
+
 def test_interferer_is_a_tone_with_a_signature():
     """Frequency, power and signature read off by correlation: exact but for single precision."""
     n = 10_000

@@ -250,6 +250,7 @@ def _summary(capture: SimulatedCapture, files: tuple[str, ...]) -> dict[str, Any
         "clock_ppm": truth.clock_ppm,
         "lost_samples": capture.n_clock - capture.n_samples,
         "clipped_samples": [int(n) for n in capture.clipped],
+        "clipped_ahead_of_converter": [int(n) for n in capture.limited],
         "seed": truth.seed,
     }
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import partial
 from typing import Any
 
@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from spatiq.errors import InputError
 from spatiq.link.description import Link
+from spatiq.transmit.clipping import Clipping
 from spatiq.transmit.drawing import Terms, draw_other, draw_truth, with_receiver
 from spatiq.transmit.emission import emission
 from spatiq.transmit.frames import mean_payload_power
@@ -43,6 +44,7 @@ class SimulatedCapture:
         receive_channels: Nr.
         datatype: SigMF sample format that holds the samples exactly.
         clipped: int64 (Nr,); samples clipped by the converter so far in the latest pass.
+        limited: int64 (Nr,); the same by `Clipping` ahead of the converter.
     """
 
     truth: Truth
@@ -53,6 +55,7 @@ class SimulatedCapture:
     receive_channels: int
     datatype: str
     clipped: NDArray[np.int64]
+    limited: NDArray[np.int64]
     _tables: Sequence[PulseTable] = field(repr=False)
     _front_end: Sequence[Impairment] = field(repr=False)
     _arriving: Sequence[Impairment] = field(repr=False)
@@ -141,7 +144,7 @@ def capture(link: Link, scenario: Scenario) -> SimulatedCapture:
     _check_drift(truth, n_clock)
     truth = with_receiver(truth, scenario, table, n_clock)
     first = float(truth.starts[0])
-    clipped = np.zeros(scenario.receive_channels, np.int64)
+    clipped, limited = np.zeros((2, scenario.receive_channels), np.int64)
     return SimulatedCapture(
         truth=truth,
         others=tuple(draw_other(link, scenario, terms, o, first) for o in scenario.others),
@@ -151,11 +154,12 @@ def capture(link: Link, scenario: Scenario) -> SimulatedCapture:
         receive_channels=scenario.receive_channels,
         datatype=scenario.datatype,
         clipped=clipped,
+        limited=limited,
         _tables=[
             table,
             *(pulse_table(link.pulse, samples_per_symbol, o.clock_ppm) for o in scenario.others),
         ],
-        _front_end=_front_end(scenario, truth, level.bits, clipped),
+        _front_end=_front_end(scenario, truth, level.bits, clipped, limited),
         _arriving=scenario.arriving,
         _signal_power=mean_payload_power(link) * level.gain**2 / samples_per_symbol,
         _marked=scenario.losses is not None and scenario.losses.marked,
@@ -163,7 +167,11 @@ def capture(link: Link, scenario: Scenario) -> SimulatedCapture:
 
 
 def _front_end(
-    scenario: Scenario, truth: Truth, bits: int | None, clipped: NDArray[np.int64]
+    scenario: Scenario,
+    truth: Truth,
+    bits: int | None,
+    clipped: NDArray[np.int64],
+    limited: NDArray[np.int64],
 ) -> list[Impairment]:
     """Noise, gain steps, the scenario's own impairments, converter."""
     noise: Impairment = Noise(truth.N0)
@@ -172,7 +180,13 @@ def _front_end(
         if covariance is None:
             covariance = truth.N0 * np.eye(scenario.receive_channels, dtype=np.complex128)
         noise = ShapedNoise(covariance, scenario.noise_shape)
-    front_end: list[Impairment] = [noise, *scenario.impairments]
+    counted = [
+        replace(item, clipped=limited)
+        if isinstance(item, Clipping) and item.clipped is None
+        else item
+        for item in scenario.impairments
+    ]
+    front_end: list[Impairment] = [noise, *counted]
     if bits is not None:
         front_end.append(Converter(bits, clipped))
     if truth.gain_steps is not None:
