@@ -9,7 +9,8 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 
 from spatiq.cli.sample_progress import with_progress
-from spatiq.cli.simulate import parse_spacing, print_summary
+from spatiq.cli.simulate import print_summary
+from spatiq.cli.simulate_choices import parse_spacing
 
 if TYPE_CHECKING:
     from spatiq.transmit.playback import Playback

@@ -67,7 +67,7 @@ def correlation_matrix(given: complex | ArrayLike | None, size: int, end: str) -
     return matrix
 
 
-def _root(matrix: Matrix) -> Matrix:
+def hermitian_root(matrix: Matrix) -> Matrix:
     """Hermitian square root of a positive semidefinite matrix."""
     values, vectors = np.linalg.eigh(matrix)
     roots = np.sqrt(np.maximum(values, 0.0))
@@ -84,6 +84,33 @@ def steering_line_of_sight(
     at_receiver = np.exp(1j * np.pi * np.arange(receive) * np.sin(np.radians(arrival_deg)))
     at_transmitter = np.exp(1j * np.pi * np.arange(transmit) * np.sin(np.radians(departure_deg)))
     return np.asarray(np.outer(at_receiver, at_transmitter), np.complex128)
+
+
+@dataclass(frozen=True, eq=False)
+class Mixing:
+    """H = direct + scale * at_receiver @ G @ at_transmitter, G independent coefficients.
+
+    Attributes:
+        direct: complex128 (Nr, Nt), or None for nothing.
+        scale: amplitude of the scattered part.
+        at_receiver: complex128 (Nr, Nr), or None for the identity.
+        at_transmitter: complex128 (Nt, Nt), or None for the identity.
+    """
+
+    direct: Matrix | None
+    scale: float
+    at_receiver: Matrix | None
+    at_transmitter: Matrix | None
+
+    def mixed(self, scattered: Matrix) -> Matrix:
+        """H from G, both complex128 (..., Nr, Nt)."""
+        if self.at_receiver is not None:
+            scattered = self.at_receiver @ scattered
+        if self.at_transmitter is not None:
+            scattered = scattered @ self.at_transmitter
+        if self.scale != 1.0:
+            scattered = self.scale * scattered
+        return scattered if self.direct is None else self.direct + scattered
 
 
 @dataclass(frozen=True, eq=False)
@@ -110,23 +137,32 @@ class Fading:
 
     def draw(self, rng: np.random.Generator, frames: int, receive: int, transmit: int) -> Matrix:
         """Channels, complex128 (F, Nr, Nt); one repeated matrix when constant."""
+        mixing = self.mixing(receive, transmit)
+        drawn = 1 if self.constant else frames
+        parts = rng.standard_normal((drawn, receive, transmit, 2)) * np.sqrt(0.5)
+        channels = mixing.mixed(parts[..., 0] + 1j * parts[..., 1])
+        return np.asarray(np.broadcast_to(channels, (frames, receive, transmit)))
+
+    def mixing(self, receive: int, transmit: int) -> Mixing:
+        """How independent scattered coefficients become the channel.
+
+        Raises:
+            InputError: K negative, or a correlation or line of sight that does not fit.
+        """
         if not 0.0 <= self.k_factor < np.inf:
             raise InputError("channel", "Rician K", self.k_factor, "a finite ratio, 0 or more")
         at_receiver = correlation_matrix(self.receive_correlation, receive, "receive")
         at_transmitter = correlation_matrix(self.transmit_correlation, transmit, "transmit")
-        drawn = 1 if self.constant else frames
-        parts = rng.standard_normal((drawn, receive, transmit, 2)) * np.sqrt(0.5)
-        scattered = parts[..., 0] + 1j * parts[..., 1]
-        if at_receiver is not None:
-            scattered = _root(at_receiver) @ scattered
-        if at_transmitter is not None:
-            scattered = scattered @ _root(at_transmitter).T
-        channels = scattered
+        direct = None
+        share = self.k_factor / (self.k_factor + 1)
         if self.k_factor > 0:
-            direct = self._direct(receive, transmit)
-            share = self.k_factor / (self.k_factor + 1)
-            channels = np.sqrt(share) * direct + np.sqrt(1 - share) * scattered
-        return np.asarray(np.broadcast_to(channels, (frames, receive, transmit)))
+            direct = np.sqrt(share) * self._direct(receive, transmit)
+        return Mixing(
+            direct=direct,
+            scale=float(np.sqrt(1 - share)),
+            at_receiver=None if at_receiver is None else hermitian_root(at_receiver),
+            at_transmitter=None if at_transmitter is None else hermitian_root(at_transmitter).T,
+        )
 
     def _direct(self, receive: int, transmit: int) -> Matrix:
         if self.line_of_sight is None:

@@ -7,8 +7,9 @@ keep state. Random numbers come from `context.generator(first)`, never from anyw
 samples depend on the seed alone. A stage may write into the chunk that it is given. Samples are in
 the converter's scale throughout: full scale of I and of Q is 1.0.
 
-Carrier and clock offsets are no stages: they belong to each frame's placement (carrier.py,
-pulse_table.py).
+What is no stage: carrier and clock offsets and delays belong to each frame's placement (carrier.py,
+pulse_table.py, emission.py), common phase to the samples before noise (rotation.py), lost samples
+to what is recorded (losses.py).
 """
 
 from __future__ import annotations
@@ -18,8 +19,9 @@ from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
+from spatiq.errors import InputError
 from spatiq.transmit.randomness import Purpose, generator
 
 Samples = NDArray[np.complex64]
@@ -35,12 +37,16 @@ class Context:
         receive_channels: Nr.
         seed: seed of the simulation.
         place: position of the impairment in the list.
+        signal_power: expected |sample|^2 of payload at E|h|^2 = 1, in the samples' scale.
+        noise_power: expected |sample|^2 of noise, mean over the receive channels.
     """
 
     sample_rate: float
     receive_channels: int
     seed: int
     place: int
+    signal_power: float = 1.0
+    noise_power: float = 0.0
 
     def generator(self, first: int) -> np.random.Generator:
         """Random numbers of this impairment for the chunk that begins with sample `first`."""
@@ -55,11 +61,55 @@ class Impairment(Protocol):
         ...
 
 
+@dataclass(frozen=True, eq=False)
+class InTurn:
+    """Several impairments in one place, one after the other; they share its random numbers."""
+
+    parts: Sequence[Impairment]
+
+    def begin(self, context: Context) -> Stage:
+        """The stage."""
+        stages = [part.begin(context) for part in self.parts]
+
+        def stage(samples: Samples, first: int) -> Samples:
+            for each in stages:
+                samples = each(samples, first)
+            return samples
+
+        return stage
+
+
 def begin_all(
-    impairments: Sequence[Impairment], sample_rate: float, receive_channels: int, seed: int
+    impairments: Sequence[Impairment],
+    sample_rate: float,
+    receive_channels: int,
+    seed: int,
+    *,
+    first_place: int = 0,
+    signal_power: float = 1.0,
+    noise_power: float = 0.0,
 ) -> list[Stage]:
-    """Fresh stages of a whole front end, in order."""
+    """Fresh stages of a whole front end, in order; places count from `first_place`."""
     return [
-        impairment.begin(Context(sample_rate, receive_channels, seed, place))
-        for place, impairment in enumerate(impairments)
+        impairment.begin(
+            Context(sample_rate, receive_channels, seed, place, signal_power, noise_power)
+        )
+        for place, impairment in enumerate(impairments, first_place)
     ]
+
+
+def per_channel(
+    values: ArrayLike, receive_channels: int, source: str, field: str
+) -> NDArray[np.complex128]:
+    """One finite value for all receive channels, or one for each -> complex128 (Nr,).
+
+    Raises:
+        InputError: another number of values, or one that is not finite.
+    """
+    given = np.atleast_1d(np.asarray(values, np.complex128))
+    if given.shape not in ((1,), (receive_channels,)):
+        expected = f"one, or one for each of {receive_channels} receive channels"
+        raise InputError(source, field, f"{given.size} values", expected)
+    if not np.isfinite(given).all():
+        raise InputError(source, field, "a value that is not finite", "finite numbers")
+    return np.asarray(np.broadcast_to(given, (receive_channels,)))

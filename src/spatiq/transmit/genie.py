@@ -52,15 +52,25 @@ def matched_symbols(
 
 
 def genie_symbols(
-    truth: Truth, samples: NDArray[np.complex64], first: int = 0, stop: int | None = None
+    truth: Truth,
+    samples: NDArray[np.complex64],
+    first: int = 0,
+    stop: int | None = None,
+    delay: float = 0.0,
 ) -> NDArray[np.complex128]:
     """Noisy received symbols at perfect timing, carrier and clock.
 
+    Receive delays, drift and phase noise are taken out, too; gain steps and impairments of the
+    front end are not. With antennas of different delays there is no one right instant: ask for each
+    antenna's.
+
     Args:
         truth: the truth of the recording.
-        samples: complex64 (Nr, n), the whole recording from sample 0.
+        samples: complex64 (Nr, n), the whole recording from sample 0; lost samples as zeros
+            (`spatiq.transmit.losses.spread`).
         first: first frame.
         stop: frame after the last one; None: all.
+        delay: symbols are sampled so many nominal symbol periods late.
 
     Returns:
         complex128, shape (F, K, Nr): H x + noise of variance N0 (+ intersymbol interference of the
@@ -75,17 +85,28 @@ def genie_symbols(
     stop = truth.frames if stop is None else min(stop, truth.frames)
     table = pulse_table(truth.link.pulse, truth.samples_per_symbol, truth.clock_ppm)
     samples = np.ascontiguousarray(samples, np.complex64)
+    if truth.rotations:
+        phases = np.concatenate(list(truth.common_phase(samples.shape[1])))
+        samples = samples * np.exp(-1j * phases).astype(np.complex64)
     symbols = np.zeros((max(0, stop - first), truth.link.layout.length, channels), np.complex128)
-    for i, f in enumerate(range(first, stop)):
-        matched_symbols(
-            samples,
-            symbols[i],
-            float(truth.starts[f]),
-            table.spacing,
-            table.rows,
-            table.before,
-            table.reach,
-            float(2 * np.pi * truth.cfo_hz[f] / truth.sample_rate),
-            float(truth.phase[f]),
-        )
+    delays = np.zeros(channels) if truth.receive_delays is None else truth.receive_delays
+    moved = delay * truth.samples_per_symbol
+    for receive_delay in np.unique(delays):
+        rows = np.flatnonzero(delays == receive_delay)
+        heard = samples if len(rows) == channels else samples[rows]
+        part = np.zeros((symbols.shape[1], len(rows)), np.complex128)
+        for i, f in enumerate(range(first, stop)):
+            step = float(2 * np.pi * truth.cfo_hz[f] / truth.sample_rate)
+            matched_symbols(
+                heard,
+                part,
+                float(truth.starts[f]) + receive_delay + moved,
+                table.spacing,
+                table.rows,
+                table.before,
+                table.reach,
+                step,
+                float(truth.phase[f]) + step * moved,
+            )
+            symbols[i][:, rows] = part
     return symbols

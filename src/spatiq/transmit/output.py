@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import os
 import tempfile
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from queue import Full, Queue
+from typing import Any
 
 import numpy as np
 
@@ -35,6 +36,7 @@ class RecordingSet:
         carrier_hz: carrier frequency, or None.
         description: for core:description.
         overwrite: replace files of these names.
+        captures: objects of the captures array, which then state the carrier; None: one, whole.
     """
 
     base: Path
@@ -44,6 +46,7 @@ class RecordingSet:
     carrier_hz: float | None
     description: str
     overwrite: bool
+    captures: Sequence[Mapping[str, Any]] | None = None
 
     @property
     def collected(self) -> bool:
@@ -116,7 +119,8 @@ def write_set(
                 _taken(feed),
                 sample_rate=recordings.sample_rate,
                 datatype=recordings.datatype,
-                carrier_hz=recordings.carrier_hz,
+                captures=recordings.captures,
+                carrier_hz=None if recordings.captures is not None else recordings.carrier_hz,
                 description=recordings.description,
                 collection=collection,
             )

@@ -15,6 +15,8 @@ class Purpose(IntEnum):
     CARRIER = 3
     DATA = 4
     FRONT_END = 5
+    GAIN = 6
+    LOSSES = 7
 
 
 def generator(seed: int, purpose: Purpose, *key: int) -> np.random.Generator:

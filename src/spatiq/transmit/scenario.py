@@ -13,10 +13,16 @@ from spatiq.link.description import Link
 from spatiq.transmit.carrier import Offset, reference_offsets
 from spatiq.transmit.channel import ChannelModel, Fading, Given
 from spatiq.transmit.frames import mean_payload_power, received_payload_power
-from spatiq.transmit.front_end import Impairment
+from spatiq.transmit.front_end import Impairment, per_channel
+from spatiq.transmit.gain_steps import GainPlan
+from spatiq.transmit.losses import Losses
+from spatiq.transmit.moving_channel import Doppler
 from spatiq.transmit.noise import noise_variance
+from spatiq.transmit.noise_shape import NoiseShape
 from spatiq.transmit.quantisation import converter_gain
 from spatiq.transmit.randomness import Purpose, generator
+from spatiq.transmit.rotation import CarrierDrift, Rotation
+from spatiq.transmit.second_transmitter import OtherTransmitter
 from spatiq.transmit.spacing import Spacing
 
 # Bits per component that the simulator puts into each SigMF sample format; None: floating point,
@@ -58,7 +64,7 @@ class Scenario:
     Attributes:
         receive_channels: Nr, 1 to 64.
         channels: a model of `spatiq.transmit.channel`, or an array (Nr, Nt) or (F, Nr, Nt); None:
-            Rayleigh, independent for each frame.
+            Rayleigh, independent for each frame. Or a `Doppler`: a channel that moves.
         snr_db: SNR in dB; infinity for no noise.
         snr_reference: "average": N0 follows from channels of E|h|^2 = 1, whatever the frame's own
             channel is (a given H counts as it is); "frame": each frame's H is scaled so that its
@@ -83,10 +89,23 @@ class Scenario:
         backoff_db: with a converter: full scale of I and of Q over their expected rms (payload at
             E|h|^2 = 1, plus noise).
         impairments: further front-end impairments, in order, after noise and before the converter.
+        pause: (every, silence): further silence, symbol periods, after so many frames.
+        others: further transmitters, each with a truth of its own.
+        antenna_delays: one for each transmit antenna, symbol periods, within half of one.
+        receive_delays: one for each receive channel, or one, samples, any fraction.
+        receive_gains: complex amplitude gain of each receive channel, signal and noise alike.
+        drift_hz_per_s: growth of the carrier offset.
+        phase_noise: see `spatiq.transmit.rotation`; with drift it turns all transmitters alike.
+        arriving: what is added to the frames before noise: interference.
+        noise_db: noise power of each receive channel over N0, dB; SNR refers to N0.
+        noise_correlation: coefficient of the exponential model, or matrix (Nr, Nr).
+        noise_shape: colour of the noise; N0 stays the variance of a sample.
+        gains: gain steps, straight after noise.
+        losses: samples that are not recorded.
     """
 
     receive_channels: int = 2
-    channels: ChannelModel | ArrayLike | None = None
+    channels: ChannelModel | Doppler | ArrayLike | None = None
     snr_db: float = 20.0
     snr_reference: str = "average"
     sample_rate: float | None = None
@@ -105,6 +124,19 @@ class Scenario:
     bits: int | None = None
     backoff_db: float = 18.0
     impairments: Sequence[Impairment] = ()
+    pause: tuple[int, float] | None = None
+    others: Sequence[OtherTransmitter] = ()
+    antenna_delays: Sequence[float] | None = None
+    receive_delays: Sequence[float] | None = None
+    receive_gains: ArrayLike | None = None
+    drift_hz_per_s: float = 0.0
+    phase_noise: Sequence[Rotation] = ()
+    arriving: Sequence[Impairment] = ()
+    noise_db: ArrayLike | None = None
+    noise_correlation: complex | ArrayLike | None = None
+    noise_shape: NoiseShape | None = None
+    gains: GainPlan | None = None
+    losses: Losses | None = None
 
     def check(self, link: Link) -> None:
         """Refuse counts and durations out of range; the rest is refused where it is used."""
@@ -169,6 +201,10 @@ class Scenario:
             expected = " or ".join(SNR_REFERENCES)
             raise InputError("SNR", "reference", repr(self.snr_reference), expected)
         rng = generator(self.seed, Purpose.CHANNEL)
+        if isinstance(self.channels, Doppler):
+            raise InputError(
+                "channel", "matrices", "a moving channel", "one that is drawn by frame"
+            )
         drawn = _model(self.channels).draw(rng, self.frames, self.receive_channels, link.antennas)
         if self.snr_reference == "average":
             return drawn
@@ -178,6 +214,16 @@ class Scenario:
             raise InputError("channel", "matrices", found, "signal in each frame")
         scale = np.sqrt(mean_payload_power(link) / power)
         return np.asarray(drawn * scale[:, None, None], np.complex128)
+
+    def gain_column(self) -> NDArray[np.complex128]:
+        """Receive gains, complex128 (Nr, 1)."""
+        given = 1.0 if self.receive_gains is None else self.receive_gains
+        return per_channel(given, self.receive_channels, "receive gains", "")[:, None]
+
+    def rotations(self) -> tuple[Rotation, ...]:
+        """Everything that turns the carrier's phase: phase noise first, then drift."""
+        drift = (CarrierDrift(self.drift_hz_per_s),) if self.drift_hz_per_s else ()
+        return (*self.phase_noise, *drift)
 
 
 def _model(channels: ChannelModel | ArrayLike | None) -> ChannelModel:

@@ -18,6 +18,7 @@ def frame_starts(
     first: float,
     symbol_spacing: float,
     rng: np.random.Generator,
+    pause: tuple[int, float] | None = None,
 ) -> NDArray[np.float64]:
     """Sample instants of the frames' first symbols, float64 (F,), ascending.
 
@@ -30,9 +31,11 @@ def frame_starts(
         first: start of the first frame, samples.
         symbol_spacing: samples per symbol period as transmitted, clock offset included.
         rng: for random silences.
+        pause: (every, silence): after so many frames, further silence of so many symbol periods.
 
     Raises:
-        InputError: unknown word, negative silence, or a range that runs backwards.
+        InputError: unknown word, negative silence, a range that runs backwards, or a pause after no
+            frame.
     """
     length = float(link.layout.length)
     if isinstance(spacing, str):
@@ -54,4 +57,10 @@ def frame_starts(
             periods = np.concatenate([[0.0], np.cumsum(length + silences)[:-1]])
         else:
             periods = (length + low) * np.arange(frames)
+    if pause is not None:
+        every, silence = pause
+        if every < 1 or not 0.0 <= silence < 1e12:
+            expected = "1 or more frames, then 0 to 1e12 symbol periods"
+            raise InputError("pause", "", pause, expected)
+        periods = periods + (np.arange(frames) // every) * silence
     return np.asarray(first + periods * symbol_spacing, np.float64)

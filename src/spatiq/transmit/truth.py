@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Iterator
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,15 +11,26 @@ from numpy.typing import NDArray
 from spatiq.link.description import Link
 from spatiq.transmit.data_bits import random_data_bits
 from spatiq.transmit.frames import frame_words, vectors_of_words
+from spatiq.transmit.gain_steps import GainSteps
+from spatiq.transmit.losses import recorded_index
+from spatiq.transmit.moving_channel import Field
+from spatiq.transmit.rotation import CarrierDrift, Rotation, phase_chunks
+
+
+def _no_gaps() -> NDArray[np.int64]:
+    return np.zeros((0, 2), np.int64)
 
 
 @dataclass(frozen=True, eq=False)
 class Truth:
     """Truth of a simulated recording of F frames, in the scale of its samples.
 
-    Sample n of frame f, noise aside, is
-        exp(j (phase + 2 pi cfo_hz (n - start) / sample_rate))
-        * sum_k H x_k p((n - start - k spacing) / spacing) / sqrt(samples_per_symbol).
+    Sample n of frame f on receive channel r, noise aside, is, with m = n - receive_delays[r],
+        exp(j (phase + 2 pi cfo_hz (m - start) / sample_rate + common phase of sample n))
+        * sum_k sum_a H[r, a] x[k, a] p((m - t[k, a]) / spacing) / sqrt(samples_per_symbol),
+        t[k, a] = start + k spacing + antenna_delays[a] samples_per_symbol.
+    Instants are on the sampling clock: samples that were lost count (see `recorded_starts`). What
+    the front end does after noise is not in it, but for the gain steps.
 
     Attributes:
         link: the link description.
@@ -27,14 +39,24 @@ class Truth:
         samples_per_symbol: nominal.
         clock_ppm: how much longer than nominal the symbol period is; spacing = nominal * (1 + ppm).
         sample_rate: Hz.
-        cfo_hz: float64 (F,).
-        phase: float64 (F,); carrier phase at the frame's start, radians.
-        H: complex128 (F, Nr, Nt); converter gain included.
-        N0: noise variance per complex sample and per received symbol, converter gain included;
-            rounding noise of the converter is not in it.
+        cfo_hz: float64 (F,); without drift (see `cfo_at_start_hz`).
+        phase: float64 (F,); carrier phase at the frame's start, radians; without common phase.
+        H: complex128 (F, Nr, Nt); converter gain and receive gains included. Of a channel that
+            moves: in the middle of the payload (see `channels`).
+        N0: noise variance per complex sample and, of white noise, per received symbol; converter
+            gain and receive gains included; mean over the receive channels. Rounding noise of the
+            converter is not in it.
         gain: converter gain, factor from E|h|^2 = 1 to the samples.
-        snr_db: float64 (F,); mean over payload of ||H x||^2 / (Nr N0) for equiprobable words.
+        snr_db: float64 (F,); mean over payload of ||H x||^2 / (Nr N0) for equiprobable words. Of a
+            channel that moves: over 16 instants of the payload.
         seed: seed of the simulation.
+        antenna_delays: float64 (Nt,), nominal symbol periods; None: none.
+        receive_delays: float64 (Nr,), samples; None: none.
+        noise_covariance: complex128 (Nr, Nr) of the noise of a sample; None: N0 times the identity.
+        rotations: what makes up the common phase.
+        moving: the channel as a function of time; None when it stands still in each frame.
+        gain_steps: gain after noise; None: 1 throughout.
+        gaps: int64 (G, 2); first lost sample and count of each run of samples that was lost.
     """
 
     link: Link
@@ -50,6 +72,13 @@ class Truth:
     gain: float
     snr_db: NDArray[np.float64]
     seed: int
+    antenna_delays: NDArray[np.float64] | None = None
+    receive_delays: NDArray[np.float64] | None = None
+    noise_covariance: NDArray[np.complex128] | None = None
+    rotations: tuple[Rotation, ...] = ()
+    moving: Field | None = None
+    gain_steps: GainSteps | None = None
+    gaps: NDArray[np.int64] = field(default_factory=_no_gaps)
 
     @property
     def frames(self) -> int:
@@ -79,6 +108,56 @@ class Truth:
         """Transmit vectors of frames first..stop-1, complex128 (F, K, Nt)."""
         return vectors_of_words(self.link, self.words(first, stop))
 
-    def received_symbols(self, first: int = 0, stop: int | None = None) -> NDArray[np.complex128]:
-        """Noise-free received symbols H x, complex128 (F, K, Nr); carrier and clock taken out."""
-        return self.vectors(first, stop) @ self.H[first:stop].transpose(0, 2, 1)
+    @property
+    def drift_hz_per_s(self) -> float:
+        """Carrier drift, Hz per second."""
+        drifts = (r.rate_hz_per_s for r in self.rotations if isinstance(r, CarrierDrift))
+        return float(sum(drifts))
+
+    @property
+    def cfo_at_start_hz(self) -> NDArray[np.float64]:
+        """Carrier offset at each frame's start, drift included, float64 (F,)."""
+        return self.cfo_hz + self.drift_hz_per_s * (self.starts / self.sample_rate)
+
+    @property
+    def recorded_starts(self) -> NDArray[np.float64]:
+        """Frame starts as sample numbers of the file, float64 (F,); NaN where that was lost."""
+        return recorded_index(self.starts, self.gaps)
+
+    def common_phase(self, n_samples: int) -> Iterator[NDArray[np.float64]]:
+        """Phase of drift and phase noise at samples 0..n_samples-1, radians, in chunks."""
+        return phase_chunks(self.rotations, self.sample_rate, self.seed, n_samples)
+
+    def channels(self, frame: int) -> NDArray[np.complex128]:
+        """Channel at each symbol period of a frame, complex128 (K, Nr, Nt)."""
+        periods = self.link.layout.length
+        if self.moving is None:
+            return np.broadcast_to(self.H[frame], (periods, *self.H.shape[1:]))
+        return self.moving.along(*self._channel_times(frame), periods)
+
+    def received_symbols(
+        self, first: int = 0, stop: int | None = None, antennas: NDArray[np.bool_] | None = None
+    ) -> NDArray[np.complex128]:
+        """Noise-free received symbols H x, complex128 (F, K, Nr); carrier and clock taken out.
+
+        Args:
+            first: first frame.
+            stop: frame after the last one; None: all.
+            antennas: bool (Nt,); what only these antennas contribute; None: all.
+        """
+        vectors = self.vectors(first, stop)
+        if antennas is not None:
+            vectors *= antennas
+        if self.moving is None:
+            return vectors @ self.H[first:stop].transpose(0, 2, 1)
+        moved = [
+            self.moving.received(*self._channel_times(f), frame)
+            for f, frame in enumerate(vectors, first)
+        ]
+        shape = (len(vectors), self.link.layout.length, self.H.shape[1])
+        return np.array(moved, np.complex128).reshape(shape)
+
+    def _channel_times(self, frame: int) -> tuple[float, float]:
+        """Instant of a frame's first symbol, and from symbol to symbol, nominal symbol periods."""
+        start = float(self.starts[frame]) / self.samples_per_symbol
+        return start, self.spacing / self.samples_per_symbol

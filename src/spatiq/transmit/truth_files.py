@@ -24,7 +24,12 @@ def write_truth(truth: Truth, folder: Path, base: str) -> None:
 
     The npz holds, a row per frame: frame_numbers, starts (samples), cfo_hz, phase (radians at the
     start), snr_db, H (complex, Nr x Nt, in the scale of the samples), and words (uint32, Kp) unless
-    there are more than `MOST_WORDS`. The JSON holds what is the same for all frames.
+    there are more than `MOST_WORDS`. The JSON holds what is the same for all frames. Beside the
+    rows there are, where they apply, the attributes of `Truth` of the same names: antenna_delays,
+    receive_delays, noise_covariance, gaps; recorded_starts (sample numbers in the file, NaN for
+    lost ones); gain_places and gain_factors of its gain steps; and a moving channel, see
+    `spatiq.transmit.moving_channel.Field`: field_doppler, field_phases, field_gain, field_scale,
+    field_direct, field_at_receiver, field_at_transmitter.
     """
     as_json, as_npz = truth_names(base)
     words = truth.frames * len(truth.link.layout.payload_index)
@@ -35,6 +40,7 @@ def write_truth(truth: Truth, folder: Path, base: str) -> None:
         "phase": truth.phase,
         "snr_db": truth.snr_db,
         "H": truth.H,
+        **_further_arrays(truth),
     }
     if words <= MOST_WORDS:
         arrays["words"] = truth.words().astype(np.uint32)
@@ -46,6 +52,9 @@ def write_truth(truth: Truth, folder: Path, base: str) -> None:
         "samples_per_symbol": truth.samples_per_symbol,
         "sample_rate_hz": truth.sample_rate,
         "clock_ppm": truth.clock_ppm,
+        "cfo_drift_hz_per_s": truth.drift_hz_per_s,
+        "common_phase": [repr(rotation) for rotation in truth.rotations],
+        "lost_samples": int(truth.gaps[:, 1].sum()),
         "N0": truth.N0,
         "gain": truth.gain,
         "seed": truth.seed,
@@ -55,6 +64,32 @@ def write_truth(truth: Truth, folder: Path, base: str) -> None:
     with (folder / as_json).open("x", encoding="utf-8") as text:
         json.dump(summary, text, indent=2, allow_nan=False)
         text.write("\n")
+
+
+def _further_arrays(truth: Truth) -> dict[str, Any]:
+    """What only some recordings have."""
+    found: dict[str, Any] = {
+        "antenna_delays": truth.antenna_delays,
+        "receive_delays": truth.receive_delays,
+        "noise_covariance": truth.noise_covariance,
+    }
+    if len(truth.gaps):
+        found |= {"gaps": truth.gaps, "recorded_starts": truth.recorded_starts}
+    if truth.gain_steps is not None:
+        found["gain_places"] = truth.gain_steps.places
+        found["gain_factors"] = truth.gain_steps.factors
+    if truth.moving is not None:
+        mixing = truth.moving.mixing
+        found |= {
+            "field_doppler": truth.moving.doppler,
+            "field_phases": truth.moving.phases,
+            "field_gain": truth.moving.gain,
+            "field_scale": np.float64(mixing.scale),
+            "field_direct": mixing.direct,
+            "field_at_receiver": mixing.at_receiver,
+            "field_at_transmitter": mixing.at_transmitter,
+        }
+    return {name: value for name, value in found.items() if value is not None}
 
 
 def _mean_db(truth: Truth) -> float:
