@@ -24,12 +24,12 @@ from spatiq.receiver.refit_kernels import (
     known_error,
     references,
     refit_phase,
-    refit_timing,
     rotate_active,
     solve_moments,
-    timing_density,
+    take_symbols,
 )
 from spatiq.receiver.soft_kernels import block_scratch
+from spatiq.receiver.timing_kernels import refit_timing, timing_density
 from spatiq.receiver.tracking_kernels import (
     BLOCK,
     block_references,
@@ -315,3 +315,12 @@ def test_phase_is_read_off_the_blocks_lines():
         b = n // BLOCK
         line = smoothed[b, 0] + smoothed[b, 1] * (active[i] - position[b])
         assert phase[i] == pytest.approx(line, abs=1e-6)
+
+
+@pytest.mark.nojit
+def test_symbols_are_taken_from_the_payload_and_scaled():
+    y = complex_noise(np.random.default_rng(4), (6, 2), 1.0)
+    payload, amplitude = np.array([1, 2, 5]), np.array([1, 0.5, 2, 1, 1, 4], np.float32)
+    symbols = np.empty((3, 2), np.complex64)
+    take_symbols(parts_of(y), payload, amplitude, symbols)
+    np.testing.assert_allclose(symbols, (y / amplitude[:, None])[payload], rtol=1e-6)

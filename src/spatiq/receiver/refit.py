@@ -17,7 +17,7 @@ from spatiq.kernels import C64, F32, F64
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
-from spatiq.receiver.refit_kernels import refit_round
+from spatiq.receiver.refit_kernels import refit_round, take_symbols
 
 _WIDE = (10.0, 1.0)  # prior variances of phase and carrier left: nothing is assumed
 
@@ -38,7 +38,6 @@ class Refit:
         channels, antennas = batch.channel.shape[1:]
         room = _room(tables, channels, antennas)
         payload = np.flatnonzero(tables.active_word >= 0)
-        inverse = (1.0 / tables.active_amplitude[payload])[:, None]
         sent = (
             tables.active,
             tables.active_word,
@@ -67,8 +66,7 @@ class Refit:
                     batch.antenna_energy[i],
                 )
             batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = timing
-            y = room[0]
-            batch.symbols[i] = (y[payload, 0] + 1j * y[payload, 1]) * inverse
+            take_symbols(room[0], payload, tables.active_amplitude, batch.symbols[i])
             slope = _mean_slope(tables.active, batch.phase[i])  # radians per symbol period
             batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
         return batch
