@@ -249,3 +249,32 @@ def test_two_step_is_run_beside_for_comparison(tmp_path):
     assert bit_errors(link, frames.two_step, sent) > 1.5 * bit_errors(link, frames.words, sent)
     plugged = collect(recording, link, ReceiverOptions(detector="two-step"))
     np.testing.assert_array_equal(plugged.words, frames.two_step)
+
+
+@pytest.mark.parametrize("cfo_range", [0.05, 0.25])
+def test_carriers_over_a_wide_range_are_found_when_asked_for(tmp_path, cfo_range):
+    """Up to a quarter of the symbol rate: the search centres its filter on several carriers.
+
+    20 dB, no fading: a frame missed or on another carrier would be a defect, not chance.
+    """
+    link = make_link(antennas=2)
+    offset = cfo_range * link.symbol_rate_hz
+    recording, capture = record(
+        tmp_path,
+        link,
+        receive_channels=2,
+        channels=np.array([[1.0, 0.5j], [0.4, -1.0]]),
+        snr_db=20.0,
+        samples_per_symbol=4.0690104,
+        frames=40,
+        spacing=(20.0, 200.0),
+        cfo_hz=(-offset, offset),
+        seed=6,
+    )
+    frames = collect(recording, link, ReceiverOptions(cfo_range=cfo_range))
+    f = partner(frames, capture)
+    assert f.size == 40
+    carrier = frames.carrier_estimate * capture.sample_rate
+    np.testing.assert_allclose(carrier, capture.truth.cfo_hz[f], atol=2e-4 * link.symbol_rate_hz)
+    assert np.ptp(carrier) > 1.5 * offset
+    np.testing.assert_array_equal(frames.words, capture.truth.words()[f])

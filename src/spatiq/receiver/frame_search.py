@@ -24,11 +24,14 @@ from numpy.typing import NDArray
 
 from spatiq.link.description import Link
 from spatiq.receiver.frame_search_kernels import metric_at, raise_peak, window_energy
-from spatiq.receiver.matched_filter import FilterBank, sample_instants
+from spatiq.receiver.matched_filter import FilterBank, derotate, sample_instants
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
 
 LAGS_PER_SYMBOL = 2
+# A carrier off the matched filter's centre by this share of the symbol rate costs below 0.2 dB at
+# any usual roll-off, and brings intersymbol interference some 20 dB down.
+FILTER_REACH = 0.05
 _TRANSFORM_BYTES = 1 << 20  # correlations computed at once: they stay in the cache
 
 
@@ -50,6 +53,8 @@ class SyncPattern:
         transform_size: length of the correlation transforms, symbol periods.
         carrier_bins: transform bins of the carrier offsets tested, ascending, symmetric.
         threshold: smallest metric that counts as a detection.
+        filter_bins: transform bins at which the matched filter is centred; each serves the carrier
+            bins within `FILTER_REACH` of it.
         ambiguous: whether the section, shifted in time and carrier, resembles itself so much that a
             place beside the true one may pass the threshold.
     """
@@ -58,12 +63,24 @@ class SyncPattern:
     transform_size: int
     carrier_bins: NDArray[np.int64]
     threshold: float
+    filter_bins: NDArray[np.int64]
     ambiguous: bool = False
 
     @property
     def length(self) -> int:
         """Symbol periods in the sync section, N."""
         return int(self.basis.shape[1])
+
+    def served(self, group: int) -> slice:
+        """Carrier bins served by a filter, as a slice; filters share them out evenly."""
+        bins = self.carrier_bins.size
+        each = -(-bins // self.filter_bins.size)
+        return slice(group * each, min((group + 1) * each, bins))
+
+    def filter_of(self, carrier_bin: int) -> int:
+        """Transform bin of the filter that serves a carrier bin."""
+        each = -(-self.carrier_bins.size // self.filter_bins.size)
+        return int(self.filter_bins[carrier_bin // each])
 
     def carrier(self, carrier_bin: int) -> float:
         """Carrier offset of a bin, cycles per symbol period."""
@@ -93,11 +110,17 @@ def sync_pattern(link: Link, options: ReceiverOptions, channels: int) -> SyncPat
     limit = threshold(options.false_alarm, n, rank, channels)
     # Half the threshold: what surrounds the section may add to a side lobe.
     shifts = np.arange(2 * reach + 1) * step / size
+    carrier_bins = np.arange(-reach, reach + 1, dtype=np.int64) * step
+    each = 2 * max(1, int(FILTER_REACH * size / step)) + 1
+    groups = -(-carrier_bins.size // each)
+    each = -(-carrier_bins.size // groups)
+    parts = [carrier_bins[g * each : (g + 1) * each] for g in range(groups)]
     return SyncPattern(
         basis=basis.astype(np.complex64),
         transform_size=size,
-        carrier_bins=np.arange(-reach, reach + 1, dtype=np.int64) * step,
+        carrier_bins=carrier_bins,
         threshold=limit,
+        filter_bins=np.array([part[part.size // 2] for part in parts if part.size], np.int64),
         ambiguous=largest_side_lobe(basis, shifts) > limit / 2,
     )
 
@@ -138,32 +161,39 @@ class FrameSearch:
         self._hop = LAGS_PER_SYMBOL * (pattern.transform_size - pattern.length + 1)
         transform = scipy.fft.fft(pattern.basis, pattern.transform_size, axis=-1)
         self._base = np.conj(transform).astype(np.complex64)
-        self._kept: NDArray[np.complex64] | None = None
+        self._kept: dict[bytes, NDArray[np.complex64]] = {}
         self._blocks: dict[int, tuple[NDArray[np.float32], NDArray[np.int32]]] = {}
         count = int((stream.stop - stream.start) / self._spacing) + 1
         self.last_lag = count - LAGS_PER_SYMBOL * (pattern.length - 1) - 1
 
-    def _spectra(self, first: int, count: int) -> NDArray[np.complex64]:
-        """Conjugate transforms of the basis at some carrier bins, complex64 (bins, 1, 1, P, size).
+    def _spectra(self, offsets: NDArray[np.int64]) -> NDArray[np.complex64]:
+        """Conjugate transforms of the basis at carrier offsets, complex64 (bins, 1, 1, P, size).
 
-        A carrier bin shifts the transform. All of them are kept where they are few; for a long
-        section over a wide range they would fill the memory, and are shifted anew.
+        `offsets` are transform bins from the filter's centre; each shifts the transform.
         """
-        bins = self._pattern.carrier_bins
-        if self._kept is None and bins.size * self._base.nbytes <= _TRANSFORM_BYTES:
-            self._kept = np.stack([np.roll(self._base, b, axis=-1) for b in bins])
-        if self._kept is not None:
-            return self._kept[first : first + count, None, None]
-        chosen = bins[first : first + count]
-        return np.stack([np.roll(self._base, b, axis=-1) for b in chosen])[:, None, None]
+        key = offsets.tobytes()
+        if key in self._kept:
+            return self._kept[key]
+        shifted = np.stack([np.roll(self._base, b, axis=-1) for b in offsets])[:, None, None]
+        # For a long section over a wide range all of them would fill the memory.
+        if sum(k.nbytes for k in self._kept.values()) + shifted.nbytes <= 4 * _TRANSFORM_BYTES:
+            self._kept[key] = shifted
+        return shifted
 
-    def instants(self, first: int, count: int) -> NDArray[np.complex64]:
-        """Matched-filter outputs of the fixed half-symbol grid, complex64 (Nr, count)."""
+    def instants(self, first: int, count: int, filter_bin: int = 0) -> NDArray[np.complex64]:
+        """Matched-filter outputs of the fixed half-symbol grid, complex64 (Nr, count).
+
+        The filter is centred on a transform bin, by turning the samples back by its carrier.
+        """
         half = self._bank.half
         origin = int(np.floor(first * self._spacing)) - half
         reach = int(np.ceil(count * self._spacing)) + 2 * half + 3
         begin = self._stream.start + origin
         planes = np.ascontiguousarray(self._stream.planes(begin, begin + reach))
+        if filter_bin:
+            planes = planes.copy()
+            cycles = filter_bin / self._pattern.transform_size / self._bank.samples_per_symbol
+            derotate(planes, cycles, float(-origin))
         out = np.empty((planes.shape[0], count), np.complex64)
         taps, phases = self._bank.taps, self._bank.phases
         sample_instants(planes, origin, first, self._spacing, taps, phases, out)
@@ -173,27 +203,38 @@ class FrameSearch:
         """Best metric over carrier bins, and its bin, for the lags of one block of the grid."""
         if index not in self._blocks:
             self._blocks = {i: b for i, b in self._blocks.items() if i >= index - 1}
-            size = self._pattern.transform_size
-            y = self.instants(index * self._hop, LAGS_PER_SYMBOL * size)
-            halves = np.stack([y[:, 0::2], y[:, 1::2]])  # (2, Nr, size)
-            lags = size - self._pattern.length + 1
-            inverse = np.empty((2, lags), np.float32)
-            window_energy(halves, self._pattern.length, inverse)
-            spectrum = scipy.fft.fft(halves, axis=-1)[:, :, None, :]
+            lags = self._pattern.transform_size - self._pattern.length + 1
             best = np.zeros((2, lags), np.float32)
             where = np.zeros((2, lags), np.int32)
-            metric = np.empty(lags, np.float32)
-            each = spectrum.size * self._base.shape[0] * 8  # bytes of one bin's correlations
-            together = max(1, _TRANSFORM_BYTES // each)
-            for first in range(0, self._pattern.carrier_bins.size, together):
-                products = spectrum * self._spectra(first, together)
-                correlations = scipy.fft.ifft(products, axis=-1, overwrite_x=True)
-                parts = correlations.reshape(correlations.shape[0], 2, -1, size, 1)
-                parts = parts.view(np.float32)
-                for b in range(parts.shape[0]):
-                    raise_peak(parts[b], inverse, first + b, metric, best, where)
+            for group in range(self._pattern.filter_bins.size):
+                self._raise_block(index, group, best, where)
             self._blocks[index] = (best.T.ravel(), where.T.ravel())  # lags in order
         return self._blocks[index]
+
+    def _raise_block(
+        self, index: int, group: int, best: NDArray[np.float32], where: NDArray[np.int32]
+    ) -> None:
+        """Raise a block's best metrics to those of the carrier bins that one filter serves."""
+        pattern = self._pattern
+        size, lags = pattern.transform_size, best.shape[1]
+        centre = int(pattern.filter_bins[group])
+        served = pattern.served(group)
+        y = self.instants(index * self._hop, LAGS_PER_SYMBOL * size, centre)
+        halves = np.stack([y[:, 0::2], y[:, 1::2]])  # (2, Nr, size)
+        inverse = np.empty((2, lags), np.float32)
+        window_energy(halves, pattern.length, inverse)
+        spectrum = scipy.fft.fft(halves, axis=-1)[:, :, None, :]
+        metric = np.empty(lags, np.float32)
+        each = spectrum.size * self._base.shape[0] * 8  # bytes of one bin's correlations
+        together = max(1, _TRANSFORM_BYTES // each)
+        for first in range(served.start, served.stop, together):
+            bins = pattern.carrier_bins[first : min(first + together, served.stop)]
+            products = spectrum * self._spectra(bins - centre)
+            correlations = scipy.fft.ifft(products, axis=-1, overwrite_x=True)
+            parts = correlations.reshape(correlations.shape[0], 2, -1, size, 1)
+            parts = parts.view(np.float32)
+            for b in range(parts.shape[0]):
+                raise_peak(parts[b], inverse, first + b, metric, best, where)
 
     def scan(self, from_lag: int) -> Detection | None:
         """First sync section at or after a lag.
@@ -245,10 +286,12 @@ class FrameSearch:
         pattern = self._pattern
         first = max(lag - lags, 0)
         last = min(lag + lags, self.last_lag)
-        y = self.instants(first, last - first + LAGS_PER_SYMBOL * (pattern.length - 1) + 1)
+        centre = pattern.filter_of(carrier_bin)
+        count = last - first + LAGS_PER_SYMBOL * (pattern.length - 1) + 1
+        y = self.instants(first, count, centre)
         low = max(carrier_bin - bins, 0)
         high = min(carrier_bin + bins, pattern.carrier_bins.size - 1)
-        carriers = pattern.carrier_bins[low : high + 1] / pattern.transform_size
+        carriers = (pattern.carrier_bins[low : high + 1] - centre) / pattern.transform_size
         metric = metric_at(y, pattern.basis, carriers, last - first + 1)
         i, b = np.unravel_index(int(np.argmax(metric)), metric.shape)
         return Detection(first + int(i), low + int(b), float(metric[i, b]))
