@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -23,9 +24,29 @@ Columns = dict[str, NDArray[Any]]
 _LOST_TRACK = 1e-6
 
 
+def as_received(batch: FrameBatch) -> FrameBatch:
+    """The batch as it was before whitening: symbols, channel and mean noise at the antennas."""
+    coloured = np.flatnonzero(batch.coloured)
+    if not coloured.size:
+        return batch
+    seen = replace(
+        batch,
+        symbols=batch.symbols.copy(),
+        channel=batch.channel.copy(),
+        noise=batch.noise.copy(),
+    )
+    for i in coloured:
+        back = np.linalg.pinv(batch.whitener[i])
+        seen.symbols[i] = batch.symbols[i] @ back.T
+        seen.channel[i] = back @ batch.channel[i]
+        seen.noise[i] *= np.mean(np.sum(np.abs(back) ** 2, axis=1))
+    return seen
+
+
 def fill_figures(
     columns: Columns,
     batch: FrameBatch,
+    white: FrameBatch,
     sums: NDArray[np.float64],
     numbering: Numbering,
     link: Link,
@@ -36,7 +57,8 @@ def fill_figures(
 
     Args:
         columns: counts are in already.
-        batch: received frames.
+        batch: received frames, figures at the receive antennas.
+        white: the same after whitening, as detected.
         sums: (F, 6, Nt) of `error_vectors`.
         numbering: which frames' numbers are known.
         link, recording, options: as measured with.
@@ -46,7 +68,7 @@ def fill_figures(
         _power(columns, batch, sums, link)
         _error_vector(columns, sums, link)
         _ratios(columns, options.confidence)
-        _prediction(columns, batch, link)
+        _prediction(columns, white, link)
     _marks(columns, batch, numbering, link)
 
 
@@ -159,6 +181,7 @@ def _marks(columns: Columns, batch: FrameBatch, numbering: Numbering, link: Link
     marks = np.zeros(batch.count, np.uint32)
     marks[batch.clipped > 0] |= np.uint32(Mark.CLIPPED)
     marks[~numbering.resolved] |= np.uint32(Mark.REFERENCE_UNKNOWN)
+    marks[batch.coloured] |= np.uint32(Mark.COLOURED_NOISE)
     marks[columns["crc_ok"] == 0] |= np.uint32(Mark.CRC_FAILED)
     channels = batch.channel.shape[1]
     header = max(batch.header_freedom, 1)

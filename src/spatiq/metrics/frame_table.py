@@ -24,6 +24,7 @@ class Mark(IntFlag):
     REFERENCE_UNKNOWN = 2  # the position in the reference sequence could not be told
     CRC_FAILED = 4
     TRACKING_LOST = 8  # the carrier-phase or timing track left its expected error
+    COLOURED_NOISE = 16  # noise differs between receive channels or is correlated: whitened
 
 
 @dataclass(frozen=True)
@@ -116,6 +117,8 @@ class MeasuredFrames:
         antenna_power: float64, shape (F, Nt); ||h_a||^2 / Nr.
         lost: frames found to be lost before or between these.
         symbols: complex64, shape (F, Kp, Nr); received payload vectors, carrier removed; or None.
+        white_channel, white_noise: channel (F, Nr, Nt) and N0 (F,) after whitening, as detected
+            with; the same as channel and noise_power where the noise is white.
         channel_error_variance: float64, shape (F, Nt); variance of each coefficient of `channel`.
         antenna_error_energy, antenna_reference_energy: float64, shape (F, Nt); the sums behind
             antenna_evm_percent, to be added over frames.
@@ -132,6 +135,8 @@ class MeasuredFrames:
     words_sent: NDArray[np.int64]
     symbols: NDArray[np.complex64] | None = None
     channel_error_variance: NDArray[np.float64] | None = None
+    white_channel: NDArray[np.complex128] | None = None
+    white_noise: NDArray[np.float64] | None = None
     antenna_error_energy: NDArray[np.float64] | None = None
     antenna_reference_energy: NDArray[np.float64] | None = None
     lost: list[LostFrame] = field(default_factory=list)

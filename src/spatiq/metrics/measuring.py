@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.link.description import Link
-from spatiq.metrics.figures import channel_error_variance, fill_figures
+from spatiq.metrics.figures import as_received, channel_error_variance, fill_figures
 from spatiq.metrics.frame_table import MeasuredFrames, empty_columns
 from spatiq.metrics.measuring_kernels import compare_words, count_bits, error_vectors
 from spatiq.metrics.reference_following import Numbering, ReferenceFollower
@@ -101,20 +101,23 @@ class Measuring:
         columns["frame_number"][:] = numbering.numbers
         if crc is not None:
             columns["crc_ok"][:] = crc
-        confusion, sums = self._compare(columns, batch, sent)
-        fill_figures(columns, batch, sums, numbering, self.link, self.recording, self.options)
+        seen = as_received(batch)
+        confusion, sums = self._compare(columns, seen, sent)
+        fill_figures(columns, seen, batch, sums, numbering, self.link, self.recording, self.options)
         lost = batch.lost + self._skipped(batch, columns, position)
         with np.errstate(invalid="ignore", divide="ignore"):
             antenna_evm = 100.0 * np.sqrt(sums[:, 0] / sums[:, 1])
         return MeasuredFrames(
             columns=columns,
             confusion=confusion,
-            channel=batch.channel,
+            channel=seen.channel,
             antenna_evm_percent=antenna_evm,
-            antenna_power=np.mean(np.abs(batch.channel) ** 2, axis=1),
+            antenna_power=np.mean(np.abs(seen.channel) ** 2, axis=1),
             lost=lost,
-            symbols=batch.symbols if self.options.keep_symbols else None,
+            symbols=seen.symbols if self.options.keep_symbols else None,
             channel_error_variance=channel_error_variance(batch),
+            white_channel=batch.channel,
+            white_noise=batch.noise,
             antenna_error_energy=sums[:, 0],
             antenna_reference_energy=sums[:, 1],
             words_decided=batch.words,

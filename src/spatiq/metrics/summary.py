@@ -155,7 +155,11 @@ class Summary:
                 continue
             variance = measured.channel_error_variance
             spread = np.zeros(self.link.antennas) if variance is None else variance[i]
-            self._kept.append((index, (measured.channel[i], columns["noise_power"][i], spread)))
+            channel = measured.white_channel
+            noise = measured.white_noise
+            if channel is None or noise is None:
+                channel, noise = measured.channel, columns["noise_power"]
+            self._kept.append((index, (channel[i], noise[i], spread)))
             if len(self._kept) > _KEPT_FRAMES:
                 self._stride *= 2
                 self._kept = [k for k in self._kept if k[0] % self._stride == 0]

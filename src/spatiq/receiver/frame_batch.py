@@ -43,6 +43,10 @@ class FrameBatch:
         carrier_estimate: float64 (F,); carrier offset including what the phase track shows.
         channel: complex128 (F, Nr, Nt); phase at the energy-weighted centre of the known symbols.
         noise: float64 (F,); N0.
+        residual: complex128 (F, Nr, Nr); covariance of y - H E[x] over the channels, trace Nr N0.
+        whitener: complex128 (F, Nr, Nr); W of frames whose noise is not white over the channels:
+            planes, channel, symbols and noise then refer to W y. Identity otherwise.
+        coloured: bool (F,); whether W is not the identity.
         header_noise: float64 (F,); N0 from the known symbols alone, as acquired.
         header_freedom: complex degrees of freedom behind header_noise.
         phase: float32 (F, Ka); carrier phase left in each active period, radians.
@@ -67,6 +71,9 @@ class FrameBatch:
     carrier_estimate: NDArray[np.float64]
     channel: NDArray[np.complex128]
     noise: NDArray[np.float64]
+    residual: NDArray[np.complex128]
+    whitener: NDArray[np.complex128]
+    coloured: NDArray[np.bool_]
     header_noise: NDArray[np.float64]
     phase: NDArray[np.float32]
     frequency_var: NDArray[np.float64]
@@ -103,6 +110,9 @@ def empty_batch(
         carrier_estimate=np.zeros(count),
         channel=np.zeros((count, channels, antennas), np.complex128),
         noise=np.zeros(count),
+        residual=np.zeros((count, channels, channels), np.complex128),
+        whitener=np.tile(np.eye(channels, dtype=np.complex128), (count, 1, 1)),
+        coloured=np.zeros(count, np.bool_),
         header_noise=np.zeros(count),
         phase=np.zeros((count, active), np.float32),
         frequency_var=np.zeros(count),

@@ -52,6 +52,7 @@ class LinkTables:
         active: int64 (Ka,); all periods in which something is sent, ascending.
         active_word: int64 (Ka,); running index of the payload word sent there, -1 for known
             symbols.
+        payload: int64 (Kp,); indices of the payload among the active periods.
         active_vectors: known vectors of the active periods (empty rows at payload).
         known_vectors: complex64 (Ka, Nt); the known vectors of the active periods, zero at payload.
         known_gram: complex128 (Nt, Nt); sum of x x^H over all known vectors.
@@ -67,6 +68,7 @@ class LinkTables:
     header_centroid: float
     active: NDArray[np.int64]
     active_word: NDArray[np.int64]
+    payload: NDArray[np.int64]
     active_vectors: SparseVectors
     known_vectors: NDArray[np.complex64]
     known_gram: NDArray[np.complex128]
@@ -103,6 +105,7 @@ def link_tables(link: Link) -> LinkTables:
         header_centroid=float(np.sum(header * energy) / np.sum(energy)),
         active=active,
         active_word=word_of_period[active],
+        payload=np.flatnonzero(word_of_period[active] >= 0).astype(np.int64),
         active_vectors=sparse_vectors(layout.known[active]),
         known_vectors=layout.known[active].astype(np.complex64),
         known_gram=layout.known.T @ layout.known.conj(),

@@ -17,8 +17,9 @@ from spatiq.kernels import C64, F32, F64
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
-from spatiq.receiver.refit_kernels import refit_round, take_symbols
+from spatiq.receiver.refit_kernels import refit_round, residual_covariance, take_symbols
 
+Room = tuple[F32, F32, F32, F32, C64, F64, F64]
 _WIDE = (10.0, 1.0)  # prior variances of phase and carrier left: nothing is assumed
 
 
@@ -33,11 +34,17 @@ class Refit:
     rounds: int = 2
 
     def __call__(self, batch: FrameBatch) -> FrameBatch:
-        """Refine t0, step, phase, channel, noise; fill symbols and the variances."""
-        tables, bank = self.tables, self.bank
+        """Refine t0, step, phase, channel, noise; fill symbols, residual and the variances."""
         channels, antennas = batch.channel.shape[1:]
-        room = _room(tables, channels, antennas)
-        payload = np.flatnonzero(tables.active_word >= 0)
+        room = _room(self.tables, channels, antennas)
+        for i in range(batch.count):
+            self.refit_frame(batch, i, room)
+        return batch
+
+    def refit_frame(self, batch: FrameBatch, i: int, room: Room | None = None) -> None:
+        """Refit frame i of a batch alone; `room` spares making it anew."""
+        tables, bank = self.tables, self.bank
+        room = room or _room(tables, *batch.channel.shape[1:])
         sent = (
             tables.active,
             tables.active_word,
@@ -48,33 +55,39 @@ class Refit:
         filters = (bank.taps, bank.slopes, bank.phases, bank.curvature)
         step_var = (self.clock_std * bank.samples_per_symbol) ** 2
         priors = np.array([*_WIDE, self.phase_walk, step_var])
-        for i in range(batch.count):
-            timing = np.array([batch.t0[i], batch.step[i], 0.0, 0.0])
-            for turn in range(self.rounds):
-                batch.noise[i], batch.frequency_var[i] = refit_round(
-                    batch.planes[i],
-                    timing,
-                    batch.phase[i],
-                    batch.channel[i],
-                    batch.noise[i],
-                    sent,
-                    tables.words.parts,
-                    filters,
-                    priors,
-                    turn == 0,
-                    room,
-                    batch.antenna_energy[i],
-                )
-            batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = timing
-            take_symbols(room[0], payload, tables.active_amplitude, batch.symbols[i])
-            slope = _mean_slope(tables.active, batch.phase[i])  # radians per symbol period
-            batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
-        return batch
+        timing = np.array([batch.t0[i], batch.step[i], 0.0, 0.0])
+        for turn in range(self.rounds):
+            batch.noise[i], batch.frequency_var[i] = refit_round(
+                batch.planes[i],
+                timing,
+                batch.phase[i],
+                batch.channel[i],
+                batch.noise[i],
+                sent,
+                tables.words.parts,
+                filters,
+                priors,
+                turn == 0,
+                room,
+                batch.antenna_energy[i],
+            )
+        batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = timing
+        residual_covariance(
+            room[0],
+            room[4],
+            tables.active_word,
+            tables.words.parts,
+            room[5],
+            batch.channel[i],
+            batch.noise[i],
+            batch.residual[i],
+        )
+        take_symbols(room[0], tables.payload, tables.active_amplitude, batch.symbols[i])
+        slope = _mean_slope(tables.active, batch.phase[i])  # radians per symbol period
+        batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
 
 
-def _room(
-    tables: LinkTables, channels: int, antennas: int
-) -> tuple[F32, F32, F32, F32, C64, F64, F64]:
+def _room(tables: LinkTables, channels: int, antennas: int) -> Room:
     """Arrays that `refit_round` works in."""
     n = tables.active.size
     return (

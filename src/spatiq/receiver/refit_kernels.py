@@ -249,6 +249,54 @@ def refit_phase(
 
 
 @kernel
+def residual_covariance(
+    y: F32,
+    mean: C64,
+    active_word: I64,
+    words: tuple[I64, I64, C64],
+    energy: F64,
+    channel: C128,
+    noise: float,
+    covariance: C128,
+) -> None:
+    """Expected covariance of y - H x over the channels into (Nr, Nr), scaled to a trace of Nr N0.
+
+    E[(y - H x)(y - H x)^H] is what E[x] leaves, and H cov(x) H^H of the doubtful words: without the
+    second, doubt would look like noise that follows the channel's directions.
+    """
+    channels, antennas = channel.shape
+    spread = np.zeros((antennas, antennas), np.complex128)
+    gram(words, energy, np.zeros((antennas, antennas), np.complex128), spread)
+    covariance[:] = 0.0
+    error = np.empty(channels, np.complex128)
+    for i in range(y.shape[0]):
+        for r in range(channels):
+            v = complex(y[i, 0, r], y[i, 1, r])
+            for a in range(antennas):
+                v -= channel[r, a] * mean[i, a]
+            error[r] = v
+        for r in range(channels):
+            for q in range(channels):
+                covariance[r, q] += error[r] * np.conj(error[q])
+        if active_word[i] >= 0:
+            for a in range(antennas):
+                if mean[i, a] != 0.0:  # mostly one antenna at a time is likely at all
+                    for b in range(antennas):
+                        spread[a, b] -= mean[i, a] * np.conj(mean[i, b])
+    trace = 0.0
+    for r in range(channels):
+        for q in range(channels):
+            for a in range(antennas):
+                for b in range(antennas):
+                    covariance[r, q] += channel[r, a] * spread[a, b] * np.conj(channel[q, b])
+        trace += covariance[r, r].real
+    scale = channels * noise / trace if trace > 0.0 else 0.0
+    for r in range(channels):
+        for q in range(channels):
+            covariance[r, q] *= scale
+
+
+@kernel
 def take_symbols(y: F32, payload: I64, amplitude: F32, symbols: C64) -> None:
     """y (Ka, 2, Nr) of the payload's active periods, over their amplitude, into (Kp, Nr)."""
     for k in range(payload.size):

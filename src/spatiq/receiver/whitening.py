@@ -1,0 +1,80 @@
+"""Whitening: noise that differs between the receive channels, or is correlated over them.
+
+The refit's residuals show the noise covariance R. Where they say that it is no multiple of the
+identity, samples and channel are turned to W y with W R W^H = N0 I, and the frame is refitted:
+every stage after this one may take the noise for white. Where the noise is white nothing is
+changed, for an estimated R costs a little.
+
+Test: likelihood ratio for sphericity (J. W. Mauchly, Ann. Math. Statist. 11(2), 1940; complex form:
+T. W. Anderson, "An Introduction to Multivariate Statistical Analysis", ch. 10; from memory).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import scipy.stats
+from numpy.typing import NDArray
+
+from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.refit import Refit
+
+_CHANCE = 1e-6  # that white noise is taken for coloured, per frame
+_ROUNDS = 3  # decisions improve with whitening, and the estimate of the noise with them
+_DEAD = 1e-9  # share of the largest noise below which a direction carries nothing at all
+
+
+@dataclass(frozen=True, eq=False)
+class Whitening:
+    """The stage; `refit` is run again on frames that were whitened."""
+
+    refit: Refit
+
+    def __call__(self, batch: FrameBatch) -> FrameBatch:
+        """Whiten what is not white; fill whitener and coloured."""
+        channels = batch.channel.shape[1]
+        if channels < 2:
+            return batch
+        for i in range(batch.count):
+            periods = self.refit.tables.active.size - np.count_nonzero(batch.antenna_energy[i])
+            for _ in range(_ROUNDS):
+                if sphericity(batch.residual[i], int(periods)) >= _CHANCE:
+                    break
+                self._whiten(batch, i)
+        return batch
+
+    def _whiten(self, batch: FrameBatch, i: int) -> None:
+        whitener, alive = whitening_matrix(batch.residual[i])
+        real, imag = batch.planes[i, :, 0], batch.planes[i, :, 1]
+        turned = whitener.astype(np.complex64) @ (real + 1j * imag)
+        batch.planes[i, :, 0], batch.planes[i, :, 1] = turned.real, turned.imag
+        batch.channel[i] = whitener @ batch.channel[i]
+        batch.whitener[i], batch.coloured[i] = whitener @ batch.whitener[i], True
+        self.refit.refit_frame(batch, i)
+        if alive < batch.channel.shape[1]:
+            # Directions without any noise or signal are no degrees of freedom.
+            batch.noise[i] *= batch.channel.shape[1] / alive
+
+
+def sphericity(covariance: NDArray[np.complex128], periods: int) -> float:
+    """Probability that white noise shows a covariance (Nr, Nr) so uneven over so many vectors."""
+    size = covariance.shape[0]
+    values = np.linalg.eigvalsh(covariance)
+    if values[-1] <= 0:
+        return 1.0
+    if values[0] <= _DEAD * values[-1]:
+        return 0.0
+    uneven = size * np.log(values.mean()) - np.sum(np.log(values))
+    statistic = 2.0 * (periods - (2 * size * size + 1) / (6.0 * size)) * uneven
+    return float(scipy.stats.chi2.sf(statistic, size * size - 1))
+
+
+def whitening_matrix(
+    covariance: NDArray[np.complex128],
+) -> tuple[NDArray[np.complex128], int]:
+    """W (Nr, Nr) with W R W^H = mean noise times the identity, and how many directions live."""
+    values, vectors = np.linalg.eigh(covariance)
+    alive = values > _DEAD * values[-1]
+    root = np.where(alive, np.sqrt(values.mean() / np.where(alive, values, 1.0)), 0.0)
+    return (vectors * root) @ vectors.conj().T, int(alive.sum())
