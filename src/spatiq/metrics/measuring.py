@@ -119,6 +119,7 @@ class Measuring:
             antenna_reference_energy=sums[:, 1],
             words_decided=batch.words,
             words_sent=sent,
+            llr=batch.llr,
         )
 
     def _global_shift(self, batch: FrameBatch) -> NDArray[np.float64]:
