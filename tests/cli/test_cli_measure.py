@@ -13,6 +13,7 @@ from typer.testing import CliRunner
 
 from spatiq.cli import measuring
 from spatiq.cli.main import app
+from spatiq.link.loading import load_link
 from spatiq.recording.opening import open_recording
 from spatiq.results.reader import open_results
 
@@ -97,6 +98,29 @@ def test_symbols_are_kept_on_request(bench):
         assert decided.shape == (FRAMES, 256)
         assert (decided == sent).all()
         assert results.symbols().shape == (FRAMES, 256, 2)
+
+
+@pytest.mark.parametrize("kind", ["exact", "max-log"])
+def test_log_likelihood_ratios_are_kept_on_request(bench, kind):
+    done = program("measure", "run", LINK.name, "--llr", kind, "--symbols", "--out", "with.h5")
+    assert done.exit_code == 0, done.stderr
+    with open_results("with.h5") as results:
+        assert results.llr_kind == kind
+        _, sent = results.words()
+        llr, bits = results.llr(), load_link(LINK).codebook.words_to_bits(sent.astype(np.int64))
+        assert llr.dtype == np.float32 and llr.shape == bits.shape
+        # No bit is wrong at 30 dB: positive means 0.
+        np.testing.assert_array_equal(llr < 0, bits == 1)
+        assert json.loads(results.provenance["options"])["soft_output"] == kind
+
+
+def test_an_unknown_kind_of_ratio_is_refused_in_one_line(bench):
+    done = program("measure", "run", LINK.name, "--llr", "soft")
+    assert done.exit_code == 2
+    assert done.stderr == (
+        "spatiq: receiver options: soft_output: found soft; expected none, exact, max-log\n"
+    )
+    assert "run.spatiq.h5" not in names(bench)
 
 
 def test_noise_alone_is_measured_too(bench):

@@ -15,7 +15,7 @@ from spatiq.receiver.options import ReceiverOptions
 from spatiq.results.hdf5 import ResultsWriter
 
 SETS = ((0,), (1,), (3,))
-ANTENNAS, CHANNELS, PERIODS = 4, 2, 5
+ANTENNAS, CHANNELS, PERIODS, BITS = 4, 2, 5, 4
 
 
 @dataclass
@@ -46,7 +46,7 @@ def made_link(sets: tuple[tuple[int, ...], ...] = SETS, periods: int = PERIODS) 
         carrier_hz=2.4e9,
         symbol_rate_hz=1e6,
         frame_symbols=100,
-        codebook=SimpleNamespace(antenna_sets=sets),
+        codebook=SimpleNamespace(antenna_sets=sets, bits=BITS),
         layout=SimpleNamespace(payload_index=np.arange(periods)),
     )
 
@@ -57,6 +57,7 @@ def made_frames(
     *,
     seed: int = 1,
     symbols: bool = False,
+    llr: bool = False,
     lost: list[LostFrame] | None = None,
 ) -> MeasuredFrames:
     """Frames whose every column differs from frame to frame; a few figures are missing."""
@@ -89,6 +90,7 @@ def made_frames(
         words_decided=rng.integers(0, 16, (count, PERIODS)),
         words_sent=rng.integers(-1, 16, (count, PERIODS)),
         symbols=(vectors[..., 0] + 1j * vectors[..., 1]) if symbols else None,
+        llr=rng.standard_normal((count, PERIODS * BITS)).astype("f4") if llr else None,
         lost=lost or [],
     )
 
@@ -151,10 +153,11 @@ def write_results(
     summary: dict[str, Any] | None = None,
     *,
     keep_symbols: bool = False,
+    soft_output: str = "none",
     recording: MadeRecording | None = None,
 ) -> Path:
     """A results file of these batches."""
-    options = ReceiverOptions(keep_symbols=keep_symbols)
+    options = ReceiverOptions(keep_symbols=keep_symbols, soft_output=soft_output)
     with ResultsWriter(path, made_link(), recording or MadeRecording(), options) as writer:
         for batch in batches:
             writer.add(batch)

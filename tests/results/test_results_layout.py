@@ -22,6 +22,12 @@ def test_a_stale_table_and_a_lost_part_are_noticed():
         layout_doc.filled(text.replace("<!-- marks: generated -->", ""))
 
 
+def full_results(folder):
+    """A results file with everything in it that can be asked for."""
+    frames = made_frames(3, symbols=True, llr=True)
+    return write_results(folder / "r.h5", [frames], keep_symbols=True, soft_output="exact")
+
+
 def documented(text):
     """Paths of all datasets that the document lists in tables."""
     paths, group = set(), ""
@@ -37,7 +43,7 @@ def documented(text):
 
 
 def test_every_dataset_is_documented_and_every_documented_one_is_there(tmp_path):
-    path = write_results(tmp_path / "r.h5", [made_frames(3, symbols=True)], keep_symbols=True)
+    path = full_results(tmp_path)
     found = set()
 
     def visit(name, item):
@@ -54,8 +60,8 @@ def test_every_dataset_is_documented_and_every_documented_one_is_there(tmp_path)
 
 
 def test_types_and_shapes_are_as_documented(tmp_path):
-    path = write_results(tmp_path / "r.h5", [made_frames(3, symbols=True)], keep_symbols=True)
-    sizes = {"F": 3, "A": 3, "Nr": 2, "Nt": 4, "Kp": 5}
+    path = full_results(tmp_path)
+    sizes = {"F": 3, "A": 3, "Nr": 2, "Nt": 4, "Kp": 5, "B": 20}
     checked = 0
     group = ""
     with h5py.File(path) as file:
@@ -68,4 +74,4 @@ def test_types_and_shapes_are_as_documented(tmp_path):
                 shape = tuple(sizes[axis] for axis in entry[3].split(", "))
                 assert (dataset.dtype.str[1:], dataset.shape) == (entry[2], shape)
                 checked += 1
-    assert checked == 14
+    assert checked == 15

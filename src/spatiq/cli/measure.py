@@ -34,6 +34,13 @@ _Json = Annotated[
 _Symbols = Annotated[
     bool, typer.Option("--symbols", help="Keep received symbols and words in the results.")
 ]
+_Llr = Annotated[
+    str,
+    typer.Option(
+        metavar="exact|max-log",
+        help="Keep log-likelihood ratios of all bits; positive: 0 likelier.",
+    ),
+]
 _CfoRange = Annotated[
     float, typer.Option(help="Carrier offsets searched, +- this share of the symbol rate.")
 ]
@@ -87,6 +94,7 @@ def measure_command(
     annotations: _Annotations = False,
     as_json: _Json = False,
     symbols: _Symbols = False,
+    llr: _Llr = _DEFAULTS.soft_output,
     cfo_range: _CfoRange = _DEFAULTS.cfo_range,
     false_alarm: _FalseAlarm = _DEFAULTS.false_alarm,
     detector: _Detector = _DEFAULTS.detector,
@@ -112,6 +120,7 @@ def measure_command(
         confidence=confidence,
         compare_two_step=two_step,
         keep_symbols=symbols,
+        soft_output=llr,
         max_clock_ppm=max_clock_ppm,
         phase_noise_hz=phase_noise_hz,
     )

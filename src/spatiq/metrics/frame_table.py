@@ -124,6 +124,8 @@ class MeasuredFrames:
             antenna_evm_percent, to be added over frames.
         words_decided: int64, shape (F, Kp).
         words_sent: int64, shape (F, Kp); -1 where unknown.
+        llr: float32, shape (F, Kp * b); log-likelihood ratios of the bits as sent (scrambled, where
+            the link scrambles), positive when 0 is likelier; or None.
     """
 
     columns: dict[str, NDArray[Any]]
@@ -139,6 +141,7 @@ class MeasuredFrames:
     white_noise: NDArray[np.float64] | None = None
     antenna_error_energy: NDArray[np.float64] | None = None
     antenna_reference_energy: NDArray[np.float64] | None = None
+    llr: NDArray[np.float32] | None = None
     lost: list[LostFrame] = field(default_factory=list)
 
     @property

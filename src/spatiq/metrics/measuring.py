@@ -122,6 +122,7 @@ class Measuring:
             antenna_reference_energy=sums[:, 1],
             words_decided=batch.words,
             words_sent=sent,
+            llr=batch.llr,
         )
 
     def _global_shift(self, batch: FrameBatch) -> NDArray[np.float64]:

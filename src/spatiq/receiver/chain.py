@@ -1,6 +1,7 @@
 """The chain: recording and link in, batches of received frames out.
 
     framing (with frame search) -> acquisition -> tracking -> refit -> whitening -> detection
+    (-> soft output, when asked for)
 
 Each stage is a callable that takes a batch and gives a batch. A list of stages of one's own takes
 the place of `standard_stages`.
@@ -25,6 +26,7 @@ from spatiq.receiver.link_tables import LinkTables, link_tables
 from spatiq.receiver.matched_filter import FilterBank, filter_bank
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.refit import Refit
+from spatiq.receiver.soft_output import SoftOutput
 from spatiq.receiver.tracking import Tracking
 from spatiq.receiver.whitening import Whitening
 from spatiq.recording.recording import Recording
@@ -115,13 +117,17 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     spacing = float(steps[1] - steps[0]) if steps.size > 1 else 1.0
     reach = spacing / parts.pattern.transform_size
     refit = Refit(parts.bank, parts.tables, clock_std, walk)
-    return [
+    stages: list[Stage] = [
         Acquisition(parts.bank, parts.tables, reach, link.symbol_rate_hz, locked),
         Tracking(parts.bank, parts.tables, clock_std, walk),
         refit,
         Whitening(refit),
         Detection(link.codebook, find_detector(options.detector), options.compare_two_step),
     ]
+    if options.soft_output != "none":
+        amplitude = link.layout.payload_amplitude
+        stages.append(SoftOutput(link.codebook, amplitude, options.soft_output))
+    return stages
 
 
 def receive(

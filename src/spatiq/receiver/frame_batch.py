@@ -58,6 +58,8 @@ class FrameBatch:
         symbols: complex64 (F, Kp, Nr); payload vectors, carrier phase removed.
         words: int64 (F, Kp); decided words.
         words_two_step: the same by the two-step detector, or None.
+        llr: float32 (F, Kp * b); log-likelihood ratios of the bits as sent, positive when 0 is
+            likelier; None unless asked for.
     """
 
     planes: NDArray[np.float32]
@@ -84,6 +86,7 @@ class FrameBatch:
     words: NDArray[np.int64]
     header_freedom: int = 0
     words_two_step: NDArray[np.int64] | None = None
+    llr: NDArray[np.float32] | None = None
     lost: list[LostFrame] = field(default_factory=list)
     final: bool = False
 

@@ -7,6 +7,9 @@ from typing import Any
 
 from spatiq.errors import InputError
 
+# Log-likelihood ratios of the payload bits: see receiver/soft_output.py.
+SOFT_OUTPUTS = ("none", "exact", "max-log")
+
 
 @dataclass(frozen=True)
 class ReceiverOptions:
@@ -20,6 +23,7 @@ class ReceiverOptions:
         confidence: level of all intervals.
         compare_two_step: also run the two-step detector and count its errors.
         keep_symbols: keep received payload vectors and words in the results.
+        soft_output: log-likelihood ratios of the payload bits: "none", "exact" or "max-log".
         max_clock_ppm: clock offsets expected, +- ppm; frames are tracked a little beyond.
         phase_noise_hz: linewidth of the oscillators' phase noise that carrier tracking expects.
         block_size: samples read at a time; never changes a figure.
@@ -34,6 +38,7 @@ class ReceiverOptions:
     max_clock_ppm: float = 50.0
     phase_noise_hz: float = 0.0
     block_size: int = 1 << 18
+    soft_output: str = "none"
 
     def __post_init__(self) -> None:
         """Refuse values outside their range.
@@ -53,6 +58,9 @@ class ReceiverOptions:
             value = getattr(self, name)
             if not low <= value <= high:
                 raise InputError("receiver options", name, value, f"a value from {low} to {high}")
+        if self.soft_output not in SOFT_OUTPUTS:
+            accepted = ", ".join(SOFT_OUTPUTS)
+            raise InputError("receiver options", "soft_output", self.soft_output, accepted)
 
     def as_dict(self) -> dict[str, Any]:
         """All options by name, for provenance."""

@@ -50,6 +50,7 @@ PER_ANTENNA: dict[str, str] = {
     "antennas/error_energy": "sum of |y - h s|^2 behind evm_percent: add over frames to pool",
     "antennas/reference_energy": "sum of |h s|^2 behind evm_percent",
 }
+LLR_SIGN = "positive: 0 is the likelier value of the bit"
 
 
 class ResultsWriter:
@@ -67,7 +68,7 @@ class ResultsWriter:
         path: the file to be.
         link: what was on the air.
         recording: what was measured; its digest is taken in `close`.
-        options: how it was received; `keep_symbols` adds /symbols.
+        options: how it was received; `keep_symbols` adds /symbols, `soft_output` /soft.
         overwrite: replace a file that stands at `path`.
 
     Raises:
@@ -98,6 +99,10 @@ class ResultsWriter:
         for row, members in enumerate(sets):
             self._set_mask[row, list(members)] = 1
         periods = int(link.layout.payload_index.size) if options.keep_symbols else 0
+        self._soft = options.soft_output
+        self._soft_bits = 0
+        if self._soft != "none":
+            self._soft_bits = int(link.layout.payload_index.size) * link.codebook.bits
         self._shapes = (len(sets), channels, antennas, periods)
 
     def __enter__(self) -> ResultsWriter:
@@ -166,6 +171,10 @@ class ResultsWriter:
                 add(f"symbols/{part}", "f4", (periods, channels), meaning, compress=False)
             add("symbols/words_decided", "i4", (periods,), "decided word of each payload period")
             add("symbols/words_sent", "i4", (periods,), "the same as sent; -1 where unknown")
+        if self._soft_bits:
+            meaning = "log-likelihood ratio, natural logarithm, of each payload bit as sent"
+            add("soft/llr", "f4", (self._soft_bits,), meaning, compress=False)
+            file["soft/llr"].attrs.update({"sign": LLR_SIGN, "kind": self._soft})
         return made
 
     def add(self, frames: MeasuredFrames) -> None:
@@ -173,7 +182,7 @@ class ResultsWriter:
 
         Raises:
             ValueError: columns other than those of the frame table, arrays of another shape, or
-                symbols missing when the options keep them.
+                symbols or ratios missing when the options keep them.
         """
         names = {c.name for c in COLUMNS}
         if frames.columns.keys() != names:
@@ -201,6 +210,10 @@ class ResultsWriter:
             values["symbols/imag"] = frames.symbols.imag
             values["symbols/words_decided"] = frames.words_decided
             values["symbols/words_sent"] = frames.words_sent
+        if self._soft_bits:
+            if frames.llr is None:
+                raise ValueError("the options keep soft output, but this batch has none")
+            values["soft/llr"] = frames.llr
         for name, rows in values.items():
             if len(rows) != frames.count:
                 raise ValueError(f"{name}: {len(rows)} rows for {frames.count} frames")

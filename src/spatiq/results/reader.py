@@ -135,6 +135,23 @@ class Results:
         decided = self.rows("symbols/words_decided", start, stop)
         return decided, self.rows("symbols/words_sent", start, stop)
 
+    @property
+    def llr_kind(self) -> str:
+        """How the log-likelihood ratios were taken: "exact", "max-log", or "none" when not."""
+        return str(self.file["soft/llr"].attrs["kind"]) if "soft" in self.file else "none"
+
+    def llr(self, start: int = 0, stop: int | None = None) -> NDArray[np.float32]:
+        """Log-likelihood ratios of the payload bits as sent, float32, shape (n, Kp * b).
+
+        Natural logarithm; positive when 0 is the likelier value.
+
+        Raises:
+            InputError: they were not asked for.
+        """
+        if "soft" not in self.file:
+            raise InputError(self.path, "soft", "none", "results measured with soft output")
+        return self.rows("soft/llr", start, stop)
+
     def lost(self, rows: int = 4096) -> Iterator[LostFrame]:
         """Frames that were expected and are not in the table."""
         group = self.file["lost"]
