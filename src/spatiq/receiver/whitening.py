@@ -36,10 +36,11 @@ class Whitening:
         channels = batch.channel.shape[1]
         if channels < 2:
             return batch
+        limit = float(scipy.stats.chi2.isf(_CHANCE, channels * channels - 1))
         for i in range(batch.count):
             periods = self.refit.tables.active.size - np.count_nonzero(batch.antenna_energy[i])
             for _ in range(_ROUNDS):
-                if sphericity(batch.residual[i], int(periods)) >= _CHANCE:
+                if unevenness(batch.residual[i], int(periods)) <= limit:
                     break
                 self._whiten(batch, i)
         return batch
@@ -57,17 +58,22 @@ class Whitening:
             batch.noise[i] *= batch.channel.shape[1] / alive
 
 
-def sphericity(covariance: NDArray[np.complex128], periods: int) -> float:
-    """Probability that white noise shows a covariance (Nr, Nr) so uneven over so many vectors."""
+def unevenness(covariance: NDArray[np.complex128], periods: int) -> float:
+    """Statistic of a covariance (Nr, Nr) over so many vectors: chi-square of Nr^2 - 1 when white."""
     size = covariance.shape[0]
     values = np.linalg.eigvalsh(covariance)
     if values[-1] <= 0:
-        return 1.0
-    if values[0] <= _DEAD * values[-1]:
         return 0.0
+    if values[0] <= _DEAD * values[-1]:
+        return float("inf")
     uneven = size * np.log(values.mean()) - np.sum(np.log(values))
-    statistic = 2.0 * (periods - (2 * size * size + 1) / (6.0 * size)) * uneven
-    return float(scipy.stats.chi2.sf(statistic, size * size - 1))
+    return float(2.0 * (periods - (2 * size * size + 1) / (6.0 * size)) * uneven)
+
+
+def sphericity(covariance: NDArray[np.complex128], periods: int) -> float:
+    """Probability that white noise shows a covariance (Nr, Nr) so uneven over so many vectors."""
+    freedom = covariance.shape[0] ** 2 - 1
+    return float(scipy.stats.chi2.sf(unevenness(covariance, periods), freedom))
 
 
 def whitening_matrix(
