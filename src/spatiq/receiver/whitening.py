@@ -59,7 +59,7 @@ class Whitening:
 
 
 def unevenness(covariance: NDArray[np.complex128], periods: int) -> float:
-    """Statistic of a covariance (Nr, Nr) over so many vectors: chi-square of Nr^2 - 1 when white."""
+    """Statistic of a covariance (Nr, Nr) of so many vectors: chi-square of Nr^2 - 1 when white."""
     size = covariance.shape[0]
     values = np.linalg.eigvalsh(covariance)
     if values[-1] <= 0:
