@@ -3,10 +3,7 @@
 import numpy as np
 import pytest
 from books import complex_normal, gsm_4_2, qsm, sm, ssk
-
-from spatiq.errors import InputError
-from spatiq.metrics import evm_theory
-from spatiq.metrics.evm import (
+from plain_evm import (
     EvmSums,
     equalised_evm,
     equalised_symbols,
@@ -14,6 +11,11 @@ from spatiq.metrics.evm import (
     evm_ratio,
     received_evm,
 )
+
+from spatiq.errors import InputError
+from spatiq.metrics import evm_theory
+from spatiq.metrics.measuring_kernels import error_vectors
+from spatiq.receiver.link_tables import sparse_vectors
 from spatiq.signal.codebooks import spatial_modulation
 from spatiq.signal.constellations import explicit, named
 
@@ -176,3 +178,20 @@ def test_qam_reference_is_the_mean_power():
     y = book.vectors[words] + 0.1
     assert equalised_evm(y, np.ones((1, 1, 1)), book, words).overall == pytest.approx(0.1)
     assert received_evm(y, np.ones((1, 1, 1)), book, words).overall == pytest.approx(0.1 / 0.2**0.5)
+
+
+@pytest.mark.parametrize("book", [sm(4, "QPSK"), sm(2, "16QAM"), ssk(4)])
+def test_the_kernel_adds_the_same_sums(book):
+    """error_vectors, per antenna, against the plain sums per antenna set (one antenna each)."""
+    y, h, words = link(book, frames=2, periods=50)
+    plain, projected = received_evm(y, h, book, words), equalised_evm(y, h, book, words)
+    sparse = sparse_vectors(book.vectors)
+    antennas = [s[0] for s in book.antenna_sets]
+    for f in range(2):
+        sums = np.empty((6, book.antennas))
+        error_vectors(y[f].astype(np.complex64), h[f], words[f], *sparse.parts, sums)
+        np.testing.assert_allclose(sums[0, antennas], plain.error[f], rtol=1e-4)
+        np.testing.assert_allclose(sums[1, antennas], plain.reference[f], rtol=1e-5)
+        np.testing.assert_allclose(sums[2, antennas], projected.error[f], rtol=1e-4)
+        power = np.mean(np.abs(book.constellation.points) ** 2)
+        np.testing.assert_allclose(power * sums[3, antennas], projected.reference[f], rtol=1e-6)

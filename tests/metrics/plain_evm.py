@@ -1,4 +1,4 @@
-"""Error vector magnitude (EVM), as sums of energies that pool by adding.
+"""A plain oracle: error vector magnitude (EVM) as sums of energies that pool by adding.
 
 EVM = sqrt(error energy / reference energy). The sums are kept apart by frame and by antenna set;
 add over whatever is to be pooled, then call `evm_ratio`. With the words sent the figure is
