@@ -16,6 +16,7 @@ from spatiq.metrics.summary import Spread
 from spatiq.receiver.detection import maximum_likelihood
 from spatiq.receiver.link_tables import sparse_vectors
 from spatiq.receiver.options import ReceiverOptions
+from spatiq.signal.pulses import isi_floor
 from spatiq.transmit.genie import genie_symbols
 
 LINK = measured_link()
@@ -241,6 +242,42 @@ def test_data_only_payload_counts_nothing(tmp_path):
     # Decided words stand in: at 20 dB with few errors the EVM is nearly the known-data one.
     snr = np.mean(10 ** (-case.truth.snr_db / 20))
     assert case.summary["evm"]["percent"] / 100 == pytest.approx(snr, rel=0.5)
+
+
+DATA = '[[payload.field]]\ntype = "data"\nbits = {bits}\n'
+
+
+def test_padding_is_no_reference(tmp_path):
+    """Zeros that fill a payload up are no bits to count, and no known symbols for the EVM."""
+    link = measured_link(DATA.format(bits=600))
+    assert link.payload.fields[-1].padding
+    case = measured(tmp_path, link, snr_db=15.0, frames=4)
+    assert np.all(case.columns["bits_compared"] == 0)
+    assert np.all(case.columns["evm_data_aided"] == 0)
+    assert case.summary["ber"] is None and case.summary["evm"]["percent"] > 0
+
+
+@pytest.mark.parametrize(("known", "aided"), [(496, 0), (512, 1)])
+def test_a_few_known_words_do_not_make_the_evm_data_aided(tmp_path, known, aided):
+    """256 words of 4 bits: 124 known words are less than half, 128 are half."""
+    value = "01" * (known // 2)
+    fixed = f'[[payload.field]]\ntype = "fixed"\nvalue = "{value}"\n'
+    case = measured(tmp_path, measured_link(fixed + DATA.format(bits='"rest"')), frames=3)
+    assert np.all(case.columns["bits_compared"] == known)
+    assert np.all(case.columns["evm_data_aided"] == aided)
+    assert case.summary["evm"]["data_aided"] == bool(aided)
+
+
+def test_the_chain_itself_adds_next_to_nothing(tmp_path):
+    """Without noise, at a ratio that is no whole number, what is left is the pulse's truncation."""
+    link = measured_link()
+    ratio = 4.0690104
+    case = measured(
+        tmp_path, link, frames=8, snr_db=np.inf, samples_per_symbol=ratio, cfo_hz=7e3, clock_ppm=11
+    )
+    timings = np.arange(4) / 4
+    pulse = max(isi_floor(link.pulse, ratio, timing=t) for t in timings)
+    assert case.summary["evm"]["db"] < min(pulse + 3.0, -55.0)
 
 
 def test_payload_power_is_in_signal_but_not_in_channel(tmp_path):

@@ -32,7 +32,7 @@ class PayloadFormat:
         fields: they cover bits 0..n_bits-1 without gap; padding is the last, if any.
         scrambler: applied to all n_bits, anew in each frame; None for none.
         known_mask: bool, shape (n_bits,); plain bits that the receiver can count: of prbs, file and
-            fixed fields.
+            fixed fields. Padding is no reference: some zeros would pass for the whole payload.
         reference_mask: bool, shape (n_bits,); plain bits that follow from the frame number: the
             same, counters, and check bits over nothing but such bits.
     """
@@ -48,7 +48,7 @@ class PayloadFormat:
         known = np.zeros(self.n_bits, np.bool_)
         follows = np.zeros(self.n_bits, np.bool_)
         for span in self.fields:
-            known[span.start : span.stop] = span.type in COUNTABLE
+            known[span.start : span.stop] = span.type in COUNTABLE and not span.padding
             if isinstance(span.source, CrcSource):
                 covered = (self.fields[i] for i in span.source.covers)
                 fixed = all(follows[c.start : c.stop].all() for c in covered)

@@ -79,7 +79,7 @@ COLUMNS: tuple[Column, ...] = (
     Column("symbol_error_ratio", "f8", "", "symbol_errors / periods with the right antenna"),
     Column("symbol_error_ratio_low", "f8", "", "lower end of its interval"),
     Column("symbol_error_ratio_high", "f8", "", "upper end of its interval"),
-    Column("evm_data_aided", "u1", "", "1: against the known symbols; 0: against the decided ones"),
+    Column("evm_data_aided", "u1", "", "1: against known symbols (of half or more); 0: decided"),
     Column("evm_percent", "f8", "%", "EVM rms at the receive antennas"),
     Column("evm_db", "f8", "dB", "the same in dB"),
     Column("evm_error_energy", "f8", "", "sum of |y - h s|^2: add over frames to pool EVM"),

@@ -201,7 +201,8 @@ class Measuring:
             )
             for name, value in zip(_COUNT_COLUMNS, counts, strict=True):
                 columns[name][i] = value
-            aided = counts[0] > 0
+            # A few known words are no measure of a payload that is mostly unknown.
+            aided = counts[0] > 0 and 2 * counts[0] >= sent.shape[1]
             columns["evm_data_aided"][i] = aided
             error_vectors(
                 batch.symbols[i],
