@@ -38,6 +38,7 @@ from spatiq.cli.simulate_options import (
     DatatypeOption,
     DcOption,
     DeadOption,
+    DelaySpreadOption,
     DepartureOption,
     DopplerOption,
     FirstFrameOption,
@@ -105,6 +106,7 @@ def simulate_command(
     constant: ConstantOption = False,
     matrices: MatricesOption = None,
     doppler: DopplerOption = None,
+    delay_spread: DelaySpreadOption = None,
     antenna_delay: AntennaDelayOption = "",
     receive_delay: ReceiveDelayOption = "",
     receive_gain: ReceiveGainOption = "",
@@ -161,6 +163,7 @@ def simulate_command(
         transmit_correlation,
         constant,
         doppler,
+        delay_spread,
     )
     front_end = FrontEndOptions(
         gain_step or (), frame_gain, iq_gain, iq_phase, dc, invert, clip, dead or ()

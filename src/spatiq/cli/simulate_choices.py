@@ -40,32 +40,43 @@ class FadingOptions(NamedTuple):
     transmit_correlation: float | None
     constant: bool
     doppler: float | None
+    delay_spread: float | None
 
 
 def channels(fading: FadingOptions, matrices: Path | None) -> Any:
     """The channel model, or array, that the options ask for."""
-    from spatiq.transmit.channel import rayleigh, rician, steering_line_of_sight
+    from spatiq.transmit.channel import Fading, rayleigh, rician, steering_line_of_sight
+    from spatiq.transmit.delay_profiles import PROFILES
     from spatiq.transmit.moving_channel import Doppler
+    from spatiq.transmit.tapped_delay_line import TappedDelayLine
 
     if (matrices is not None) != (fading.kind is ChannelKind.FIXED):
         found = f"--channel {fading.kind} and --matrices {matrices}"
         raise InputError("--matrices", "", found, "a file for --channel fixed, and only for it")
     if fading.doppler is not None and (fading.constant or matrices is not None):
         found = "beside a channel that stands still"
-        raise InputError("--doppler", "", found, "--channel rayleigh or rician, no --constant")
+        raise InputError("--doppler", "", found, "no --channel fixed and no --constant")
     if matrices is not None:
         return _matrices(matrices)
+    dispersive = fading.kind.value in PROFILES
+    if (fading.delay_spread is not None) != dispersive:
+        found = f"--channel {fading.kind} and --delay-spread {fading.delay_spread}"
+        expected = f"symbol periods for --channel {', '.join(PROFILES)}, and only for these"
+        raise InputError("--delay-spread", "", found, expected)
     correlations: dict[str, Any] = {
         "receive_correlation": fading.receive_correlation,
         "transmit_correlation": fading.transmit_correlation,
         "constant": fading.constant,
     }
+    direct = partial(
+        steering_line_of_sight, arrival_deg=fading.arrival, departure_deg=fading.departure
+    )
+    if fading.delay_spread is not None:
+        each = Fading(line_of_sight=direct, **correlations)
+        return TappedDelayLine(fading.kind.value, fading.delay_spread, each, fading.doppler or 0.0)
     if fading.kind is ChannelKind.RAYLEIGH:
         model = rayleigh(**correlations)
     else:
-        direct = partial(
-            steering_line_of_sight, arrival_deg=fading.arrival, departure_deg=fading.departure
-        )
         model = rician(fading.rician_k, line_of_sight=direct, **correlations)
     return model if fading.doppler is None else Doppler(fading.doppler, model)
 

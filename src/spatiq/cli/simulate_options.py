@@ -23,6 +23,9 @@ class ChannelKind(StrEnum):
     RAYLEIGH = "rayleigh"
     RICIAN = "rician"
     FIXED = "fixed"
+    TDL_A = "tdl-a"
+    TDL_C = "tdl-c"
+    TDL_D = "tdl-d"
 
 
 class SnrReference(StrEnum):
@@ -63,7 +66,19 @@ SnrReferenceOption = Annotated[
     SnrReference,
     typer.Option(help="SNR of the average channel, or of each frame's own.", rich_help_panel=NOISE),
 ]
-ChannelOption = Annotated[ChannelKind, typer.Option(help="Channel model.", rich_help_panel=CHANNEL)]
+ChannelOption = Annotated[
+    ChannelKind,
+    typer.Option(
+        help="Channel model; tdl-...: echoes by a delay profile of 3GPP TR 38.901.",
+        rich_help_panel=CHANNEL,
+    ),
+]
+DelaySpreadOption = Annotated[
+    float | None,
+    typer.Option(
+        help="Echoes (tdl-...): rms delay spread in symbol periods.", rich_help_panel=CHANNEL
+    ),
+]
 RicianKOption = Annotated[float, typer.Option(help="Rician K in dB.", rich_help_panel=CHANNEL)]
 ArrivalOption = Annotated[
     float, typer.Option(help="Rician line of sight: degrees at receiver.", rich_help_panel=CHANNEL)

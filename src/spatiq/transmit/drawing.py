@@ -11,6 +11,7 @@ from spatiq.errors import InputError
 from spatiq.link.description import Link
 from spatiq.transmit.carrier import Offset, plan_carrier
 from spatiq.transmit.channel import Matrix
+from spatiq.transmit.echoes import Echoes, moving_figures, standing_figures
 from spatiq.transmit.emission import checked_antenna_delays, checked_receive_delays
 from spatiq.transmit.frames import received_payload_power
 from spatiq.transmit.moving_channel import Doppler, Field
@@ -20,6 +21,7 @@ from spatiq.transmit.randomness import Purpose, generator
 from spatiq.transmit.scenario import Level, Scenario
 from spatiq.transmit.second_transmitter import OtherTransmitter
 from spatiq.transmit.spacing import frame_starts
+from spatiq.transmit.tapped_delay_line import TappedDelayLine
 from spatiq.transmit.truth import Truth
 
 # Instants of the payload over which the SNR of a moving channel is taken.
@@ -78,8 +80,12 @@ def draw_truth(link: Link, scenario: Scenario, terms: Terms, first: float | None
     if covariance is not None:
         noise = float(np.mean(np.diag(covariance).real))
     scale = terms.level.gain * column
-    field = None
-    if isinstance(scenario.channels, Doppler):
+    field, echoes = None, None
+    if isinstance(scenario.channels, TappedDelayLine):
+        steps = (1 / terms.samples_per_symbol, terms.spacing / terms.samples_per_symbol)
+        times = (starts * steps[0], steps[1])
+        echoes, channels, power = _echoes(scenario, scenario.channels, link, scale, times)
+    elif isinstance(scenario.channels, Doppler):
         field = _field(scenario, scenario.channels, link, scale)
         steps = (1 / terms.samples_per_symbol, terms.spacing / terms.samples_per_symbol)
         channels, power = _moving_figures(link, field, starts * steps[0], steps[1])
@@ -108,6 +114,7 @@ def draw_truth(link: Link, scenario: Scenario, terms: Terms, first: float | None
         noise_covariance=covariance,
         rotations=scenario.rotations(),
         moving=field,
+        echoes=echoes,
     )
 
 
@@ -130,6 +137,24 @@ def _field(scenario: Scenario, model: Doppler, link: Link, scale: Matrix) -> Fie
     rng = generator(scenario.seed, Purpose.CHANNEL)
     drawn = model.field(rng, scenario.receive_channels, link.antennas)
     return replace(drawn, gain=scale)
+
+
+def _echoes(
+    scenario: Scenario,
+    model: TappedDelayLine,
+    link: Link,
+    scale: Matrix,
+    times: tuple[NDArray[np.float64], float],
+) -> tuple[Echoes, Matrix, NDArray[np.float64]]:
+    """A dispersive channel in the scale of the samples, its sum over paths and its power."""
+    if scenario.snr_reference != "average":
+        expected = "average: a frame's paths are not to be scaled"
+        raise InputError("SNR", "reference", repr(scenario.snr_reference), expected)
+    rng = generator(scenario.seed, Purpose.CHANNEL)
+    echoes = model.draw(rng, scenario.frames, scenario.receive_channels, link.antennas, scale)
+    if echoes.matrices is not None:
+        return echoes, *standing_figures(link, echoes)
+    return echoes, *moving_figures(link, echoes, *times)
 
 
 def _moving_figures(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import product
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,7 +25,8 @@ class Emission:
 
     Attributes:
         parts: (rows, stream): each adds to these receive channels. Transmit antennas that share a
-            delay, and receive channels that share one, share a stream.
+            delay, and receive channels that share one, share a stream; each path of a dispersive
+            channel has its own.
         receive_channels: Nr.
     """
 
@@ -46,12 +48,16 @@ def emission(truth: Truth, table: PulseTable) -> Emission:
     receive, transmit = truth.H.shape[1:]
     sent = np.zeros(transmit) if truth.antenna_delays is None else truth.antenna_delays
     taken = np.zeros(receive) if truth.receive_delays is None else truth.receive_delays
+    paths: list[tuple[int | None, float]] = [(None, 0.0)]
+    if truth.echoes is not None:
+        paths = list(enumerate(truth.echoes.delays.tolist()))
     parts = []
-    for antenna_delay in np.unique(sent):
+    for antenna_delay, (path, late) in product(np.unique(sent), paths):
         antennas = sent == antenna_delay
         for receive_delay in np.unique(taken):
             rows = np.flatnonzero(taken == receive_delay)
-            stream = _stream(truth, table, antennas, float(antenna_delay), rows, receive_delay)
+            moved = float(antenna_delay) + late
+            stream = _stream(truth, table, antennas, moved, rows, receive_delay, path)
             parts.append((rows, stream))
     return Emission(tuple(parts), receive)
 
@@ -63,12 +69,13 @@ def _stream(
     antenna_delay: float,
     rows: NDArray[np.int64],
     receive_delay: float,
+    path: int | None,
 ) -> FrameStream:
-    """What some antennas send to some receive channels."""
+    """What some antennas send to some receive channels, over one path of a dispersive channel."""
     chosen = None if antennas.all() else antennas
 
     def symbols(first: int, stop: int) -> NDArray[np.complex64]:
-        received = truth.received_symbols(first, stop, chosen)
+        received = truth.received_symbols(first, stop, chosen, path)
         return received[..., rows].astype(np.complex64)
 
     # An antenna's delay moves its pulses under a carrier that runs on; a receive channel's delay

@@ -24,6 +24,7 @@ from spatiq.transmit.randomness import Purpose, generator
 from spatiq.transmit.rotation import CarrierDrift, Rotation
 from spatiq.transmit.second_transmitter import OtherTransmitter
 from spatiq.transmit.spacing import Spacing
+from spatiq.transmit.tapped_delay_line import TappedDelayLine
 
 # Bits per component that the simulator puts into each SigMF sample format; None: floating point,
 # nothing to round. Samples are made in single precision, so 24 bits is the most there can be.
@@ -105,7 +106,7 @@ class Scenario:
     """
 
     receive_channels: int = 2
-    channels: ChannelModel | Doppler | ArrayLike | None = None
+    channels: ChannelModel | Doppler | TappedDelayLine | ArrayLike | None = None
     snr_db: float = 20.0
     snr_reference: str = "average"
     sample_rate: float | None = None
@@ -201,7 +202,7 @@ class Scenario:
             expected = " or ".join(SNR_REFERENCES)
             raise InputError("SNR", "reference", repr(self.snr_reference), expected)
         rng = generator(self.seed, Purpose.CHANNEL)
-        if isinstance(self.channels, Doppler):
+        if isinstance(self.channels, Doppler | TappedDelayLine):
             raise InputError(
                 "channel", "matrices", "a moving channel", "one that is drawn by frame"
             )

@@ -8,8 +8,10 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from spatiq.errors import InputError
 from spatiq.link.description import Link
 from spatiq.transmit.data_bits import random_data_bits
+from spatiq.transmit.echoes import Echoes
 from spatiq.transmit.frames import frame_words, vectors_of_words
 from spatiq.transmit.gain_steps import GainSteps
 from spatiq.transmit.losses import recorded_index
@@ -42,19 +44,23 @@ class Truth:
         cfo_hz: float64 (F,); without drift (see `cfo_at_start_hz`).
         phase: float64 (F,); carrier phase at the frame's start, radians; without common phase.
         H: complex128 (F, Nr, Nt); converter gain and receive gains included. Of a channel that
-            moves: in the middle of the payload (see `channels`).
+            moves: in the middle of the payload (see `channels`). Of a dispersive one: the sum over
+            its paths, which is its response at the carrier.
         N0: noise variance per complex sample and, of white noise, per received symbol; converter
             gain and receive gains included; mean over the receive channels. Rounding noise of the
             converter is not in it.
         gain: converter gain, factor from E|h|^2 = 1 to the samples.
         snr_db: float64 (F,); mean over payload of ||H x||^2 / (Nr N0) for equiprobable words. Of a
-            channel that moves: over 16 instants of the payload.
+            channel that moves: over 16 instants of the payload. Of a dispersive one, the energy
+            that a symbol brings over all paths stands for ||H x||^2.
         seed: seed of the simulation.
         antenna_delays: float64 (Nt,), nominal symbol periods; None: none.
         receive_delays: float64 (Nr,), samples; None: none.
         noise_covariance: complex128 (Nr, Nr) of the noise of a sample; None: N0 times the identity.
         rotations: what makes up the common phase.
         moving: the channel as a function of time; None when it stands still in each frame.
+        echoes: the paths of a dispersive channel, each as a transmitter of its own that is late by
+            the path's delay; None of a flat one.
         gain_steps: gain after noise; None: 1 throughout.
         gaps: int64 (G, 2); first lost sample and count of each run of samples that was lost.
     """
@@ -77,6 +83,7 @@ class Truth:
     noise_covariance: NDArray[np.complex128] | None = None
     rotations: tuple[Rotation, ...] = ()
     moving: Field | None = None
+    echoes: Echoes | None = None
     gain_steps: GainSteps | None = None
     gaps: NDArray[np.int64] = field(default_factory=_no_gaps)
 
@@ -131,12 +138,35 @@ class Truth:
     def channels(self, frame: int) -> NDArray[np.complex128]:
         """Channel at each symbol period of a frame, complex128 (K, Nr, Nt)."""
         periods = self.link.layout.length
+        self._flat_only()
         if self.moving is None:
             return np.broadcast_to(self.H[frame], (periods, *self.H.shape[1:]))
         return self.moving.along(*self._channel_times(frame), periods)
 
+    def _flat_only(self) -> None:
+        if self.echoes is not None:
+            raise InputError("truth", "channel", "a dispersive channel", "one path at a time")
+
+    def taps(self, frame: int, lags: NDArray[np.float64]) -> NDArray[np.complex128]:
+        """Channel of a frame as sampled behind the matched filter, complex128 (L, Nr, Nt).
+
+        lags: symbol periods after a symbol's own instant. Of a channel that moves: in the middle of
+        the payload. A flat channel leaves the pulse's overlap with itself.
+        """
+        payload = self.link.layout.payload_index
+        start, step = self._channel_times(frame)
+        middle = start + step * float(payload[0] + payload[-1]) / 2
+        echoes = self.echoes
+        if echoes is None:
+            echoes = Echoes(np.zeros(1), self.H[:, None])
+        return echoes.taps(self.link.pulse, frame, middle, np.asarray(lags, np.float64))
+
     def received_symbols(
-        self, first: int = 0, stop: int | None = None, antennas: NDArray[np.bool_] | None = None
+        self,
+        first: int = 0,
+        stop: int | None = None,
+        antennas: NDArray[np.bool_] | None = None,
+        path: int | None = None,
     ) -> NDArray[np.complex128]:
         """Noise-free received symbols H x, complex128 (F, K, Nr); carrier and clock taken out.
 
@@ -144,18 +174,30 @@ class Truth:
             first: first frame.
             stop: frame after the last one; None: all.
             antennas: bool (Nt,); what only these antennas contribute; None: all.
+            path: of a dispersive channel, which path; its delay taken out, too.
+
+        Raises:
+            InputError: a dispersive channel without a path.
         """
         vectors = self.vectors(first, stop)
         if antennas is not None:
             vectors *= antennas
-        if self.moving is None:
-            return vectors @ self.H[first:stop].transpose(0, 2, 1)
-        moved = [
-            self.moving.received(*self._channel_times(f), frame)
-            for f, frame in enumerate(vectors, first)
-        ]
+        if path is None:
+            self._flat_only()
+            if self.moving is None:
+                return vectors @ self.H[first:stop].transpose(0, 2, 1)
+        moved = [self._moved(f, frame, path) for f, frame in enumerate(vectors, first)]
         shape = (len(vectors), self.link.layout.length, self.H.shape[1])
         return np.array(moved, np.complex128).reshape(shape)
+
+    def _moved(
+        self, frame: int, vectors: NDArray[np.complex128], path: int | None
+    ) -> NDArray[np.complex128]:
+        times = self._channel_times(frame)
+        if path is not None and self.echoes is not None:
+            return self.echoes.received(path, frame, *times, vectors)
+        assert self.moving is not None
+        return self.moving.received(*times, vectors)
 
     def _channel_times(self, frame: int) -> tuple[float, float]:
         """Instant of a frame's first symbol, and from symbol to symbol, nominal symbol periods."""

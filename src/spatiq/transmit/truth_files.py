@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from spatiq.transmit.echoes import Echoes
 from spatiq.transmit.truth import Truth
 
 # Words are left out beyond this many: frame numbers, link description and seed determine them.
@@ -29,7 +30,10 @@ def write_truth(truth: Truth, folder: Path, base: str) -> None:
     receive_delays, noise_covariance, gaps; recorded_starts (sample numbers in the file, NaN for
     lost ones); gain_places and gain_factors of its gain steps; and a moving channel, see
     `spatiq.transmit.moving_channel.Field`: field_doppler, field_phases, field_gain, field_scale,
-    field_direct, field_at_receiver, field_at_transmitter.
+    field_direct, field_at_receiver, field_at_transmitter. A dispersive channel: path_delays
+    (nominal symbol periods), and path_matrices (F, P, Nr, Nt); or for one that moves the same as
+    above, where they differ with the paths as first axis: path_doppler, path_phases, path_gain,
+    path_scale, path_direct, path_at_receiver, path_at_transmitter.
     """
     as_json, as_npz = truth_names(base)
     words = truth.frames * len(truth.link.layout.payload_index)
@@ -78,6 +82,8 @@ def _further_arrays(truth: Truth) -> dict[str, Any]:
     if truth.gain_steps is not None:
         found["gain_places"] = truth.gain_steps.places
         found["gain_factors"] = truth.gain_steps.factors
+    if truth.echoes is not None:
+        found |= _path_arrays(truth.echoes)
     if truth.moving is not None:
         mixing = truth.moving.mixing
         found |= {
@@ -90,6 +96,24 @@ def _further_arrays(truth: Truth) -> dict[str, Any]:
             "field_at_transmitter": mixing.at_transmitter,
         }
     return {name: value for name, value in found.items() if value is not None}
+
+
+def _path_arrays(echoes: Echoes) -> dict[str, Any]:
+    """The paths of a dispersive channel."""
+    found: dict[str, Any] = {"path_delays": echoes.delays, "path_matrices": echoes.matrices}
+    if echoes.fields:
+        none = np.zeros_like(echoes.fields[0].doppler[..., 0], np.complex128)
+        mixings = [field.mixing for field in echoes.fields]
+        found |= {
+            "path_doppler": np.stack([field.doppler for field in echoes.fields]),
+            "path_phases": np.stack([field.phases for field in echoes.fields]),
+            "path_gain": np.stack([field.gain for field in echoes.fields]),
+            "path_scale": np.array([mixing.scale for mixing in mixings]),
+            "path_direct": np.stack([none if m.direct is None else m.direct for m in mixings]),
+            "path_at_receiver": mixings[0].at_receiver,
+            "path_at_transmitter": mixings[0].at_transmitter,
+        }
+    return found
 
 
 def _mean_db(truth: Truth) -> float:
