@@ -133,9 +133,10 @@ def test_samples_are_what_the_truth_says(doppler):
 
 @pytest.mark.parametrize("doppler", [0.0, 1e-4])
 def test_snr_is_the_energy_of_a_symbol(doppler):
-    """N0 from the stated SNR; the frame's own SNR averages to it over channels (200 frames, 50 moving)."""
+    """N0 from the stated SNR; the frame's own SNR averages to it over 200 channels (50 moving)."""
+    frames = 200 if doppler == 0 else 50
     made = simulate(
-        make_link(payload=8, sync_order=3), samples_per_symbol=2, frames=200 if doppler == 0 else 50, snr_db=10, seed=5,
+        make_link(payload=8, sync_order=3), samples_per_symbol=2, frames=frames, snr_db=10, seed=5,
         channels=TappedDelayLine("tdl-a", 1.0, doppler=doppler), spacing=(4000.0, 9000.0),
         datatype="cf32_le",
     )  # fmt: skip
