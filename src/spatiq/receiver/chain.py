@@ -27,6 +27,7 @@ from spatiq.receiver.matched_filter import FilterBank, filter_bank
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.refit import Refit
 from spatiq.receiver.soft_output import SoftOutput
+from spatiq.receiver.stretches import Stretch
 from spatiq.receiver.tracking import Tracking
 from spatiq.receiver.whitening import Whitening
 from spatiq.recording.recording import Recording
@@ -137,6 +138,7 @@ def receive(
     *,
     stages: Sequence[Stage] | None = None,
     progress: Callable[[Progress], None] | None = None,
+    stretch: Stretch | None = None,
 ) -> Iterator[FrameBatch]:
     """Received frames of a recording, batch by batch, in the order of time.
 
@@ -146,6 +148,7 @@ def receive(
         options: how to receive.
         stages: stages after framing; `standard_stages` when None.
         progress: called as samples are read and after each batch.
+        stretch: which of the frames; all of them when None.
 
     Raises:
         InputError: when the link cannot be received from this recording.
@@ -155,7 +158,7 @@ def receive(
     chosen = list(stages) if stages is not None else standard_stages(link, options, parts)
     report = _Report(progress, recording.n_samples)
     framing = Framing(
-        recording, link, options, parts.bank, parts.tables, parts.pattern, report.read
+        recording, link, options, parts.bank, parts.tables, parts.pattern, report.read, stretch
     )
     report.tell()
     edges = _edge_frames(recording, link, parts)
@@ -164,7 +167,7 @@ def receive(
         for stage in chosen:
             batch = stage(batch)
         if edges is not None and batch.count:
-            if last is None:
+            if last is None and (stretch is None or stretch.first):
                 batch.lost = _merged(edges.before(batch), batch.lost, edges.period)
             last = batch
         if edges is not None and batch.final and last is not None:

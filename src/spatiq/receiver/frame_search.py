@@ -27,6 +27,7 @@ from spatiq.receiver.frame_search_kernels import metric_at, raise_peak, window_e
 from spatiq.receiver.matched_filter import FilterBank, derotate, sample_instants
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
+from spatiq.recording.placement import Segment
 
 LAGS_PER_SYMBOL = 2
 # A carrier off the matched filter's centre by this share of the symbol rate costs below 0.2 dB at
@@ -70,6 +71,11 @@ class SyncPattern:
     def length(self) -> int:
         """Symbol periods in the sync section, N."""
         return int(self.basis.shape[1])
+
+    @property
+    def hop(self) -> int:
+        """Lags from one block of the search grid to the next."""
+        return LAGS_PER_SYMBOL * (self.transform_size - self.length + 1)
 
     def served(self, group: int) -> slice:
         """Carrier bins served by a filter, as a slice; filters share them out evenly."""
@@ -144,6 +150,29 @@ def largest_side_lobe(basis: NDArray[np.complex128], shifts: NDArray[np.float64]
     return top
 
 
+def last_lag(samples: int, bank: FilterBank, pattern: SyncPattern) -> int:
+    """Last lag at which a sync section ends within a segment of so many samples."""
+    count = int(samples / (bank.samples_per_symbol / LAGS_PER_SYMBOL)) + 1
+    return count - LAGS_PER_SYMBOL * (pattern.length - 1) - 1
+
+
+def first_needed_sample(lag: int, bank: FilterBank, pattern: SyncPattern, lead: int) -> int:
+    """First sample, from the segment's start, that a search from a lag on may ask for.
+
+    The lag's block of the grid, and before it the lead of a frame and a peak's neighbourhood.
+    """
+    keep = min(lag, lag // pattern.hop * pattern.hop)
+    keep -= LAGS_PER_SYMBOL * (lead + pattern.length)
+    return int(keep * (bank.samples_per_symbol / LAGS_PER_SYMBOL)) - 2 * bank.half - 8
+
+
+def first_needed(
+    segment: Segment, lag: int, bank: FilterBank, pattern: SyncPattern, lead: int
+) -> int:
+    """The same as a file index, not before the segment."""
+    return segment.start + max(first_needed_sample(lag, bank, pattern, lead), 0)
+
+
 class FrameSearch:
     """Finds sync sections in one segment; lags are asked for in rising order.
 
@@ -158,13 +187,13 @@ class FrameSearch:
         self._bank = bank
         self._pattern = pattern
         self._spacing = bank.samples_per_symbol / LAGS_PER_SYMBOL
-        self._hop = LAGS_PER_SYMBOL * (pattern.transform_size - pattern.length + 1)
+        self._hop = pattern.hop
         transform = scipy.fft.fft(pattern.basis, pattern.transform_size, axis=-1)
         self._base = np.conj(transform).astype(np.complex64)
         self._kept: dict[bytes, NDArray[np.complex64]] = {}
         self._blocks: dict[int, tuple[NDArray[np.float32], NDArray[np.int32]]] = {}
-        count = int((stream.stop - stream.start) / self._spacing) + 1
-        self.last_lag = count - LAGS_PER_SYMBOL * (pattern.length - 1) - 1
+        self.last_lag = last_lag(stream.stop - stream.start, bank, pattern)
+        self.crossed = -1
 
     def _spectra(self, offsets: NDArray[np.int64]) -> NDArray[np.complex64]:
         """Conjugate transforms of the basis at carrier offsets, complex64 (bins, 1, 1, P, size).
@@ -236,37 +265,43 @@ class FrameSearch:
             for b in range(parts.shape[0]):
                 raise_peak(parts[b], inverse, first + b, metric, best, where)
 
-    def scan(self, from_lag: int) -> Detection | None:
-        """First sync section at or after a lag.
+    def scan(self, from_lag: int, before: int | None = None) -> Detection | None:
+        """First sync section at or after a lag; None when none crosses the threshold `before` one.
 
-        That is the largest metric within one sync length of the first crossing of the threshold.
+        That is the largest metric within one sync length of the first crossing of the threshold,
+        which is kept in `crossed`.
         """
         lag = max(from_lag, 0)
-        while lag <= self.last_lag:
+        stop = self.last_lag + 1 if before is None else min(before, self.last_lag + 1)
+        while lag < stop:
             index, offset = divmod(lag, self._hop)
             self.release(lag)
             best, _ = self._block(index)
             crossing = np.flatnonzero(best[offset:] >= self._pattern.threshold)
             if crossing.size:
                 first = lag + int(crossing[0])
-                if first > self.last_lag:
+                if first >= stop:
                     return None
                 found = self._peak(first)
                 if found.metric >= self._pattern.threshold:
+                    self.crossed = first
                     return found
                 lag = first + 1  # the transforms' rounding only
                 continue
             lag = (index + 1) * self._hop
         return None
 
-    def release(self, lag: int) -> None:
-        """Nothing before this lag is searched any more.
+    def pass_over(self, lag: int | None) -> None:
+        """Read on to a lag, or to the segment's end, without searching."""
+        before = self._stream.stop
+        if lag is not None:
+            samples = first_needed_sample(lag, self._bank, self._pattern, self._lead)
+            before = self._stream.start + samples
+        self._stream.pass_over(before)
 
-        Its grid block is kept, and before it the lead of a frame and a peak's neighbourhood.
-        """
-        keep = min(lag, lag // self._hop * self._hop)
-        keep -= LAGS_PER_SYMBOL * (self._lead + self._pattern.length)
-        samples = int(keep * self._spacing) - 2 * self._bank.half - 8
+    def release(self, lag: int) -> None:
+        """Nothing before this lag is searched any more."""
+        samples = first_needed_sample(lag, self._bank, self._pattern, self._lead)
         self._stream.release(self._stream.start + samples)
 
     def _peak(self, first: int) -> Detection:

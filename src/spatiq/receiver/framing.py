@@ -23,13 +23,20 @@ from spatiq.receiver.frame_batch import (
     LostFrame,
     empty_batch,
 )
-from spatiq.receiver.frame_search import LAGS_PER_SYMBOL, Detection, FrameSearch, SyncPattern
+from spatiq.receiver.frame_search import (
+    LAGS_PER_SYMBOL,
+    Detection,
+    FrameSearch,
+    SyncPattern,
+    first_needed,
+)
 from spatiq.receiver.framing_kernels import cut_window
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank, derotate
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
 from spatiq.receiver.spoiled_samples import SpoiledSamples
+from spatiq.receiver.stretches import Find, Place, Stretch, WholeRecording
 from spatiq.recording.placement import Segment
 from spatiq.recording.recording import Recording
 
@@ -90,9 +97,11 @@ class Framing:
         tables: LinkTables,
         pattern: SyncPattern,
         on_read: Callable[[int], None] | None = None,
+        stretch: Stretch | None = None,
     ) -> None:
         self._recording = recording
         self._on_read = on_read
+        self._stretch: Stretch = stretch if stretch is not None else WholeRecording()
         self._link = link
         self._options = options
         self._bank = bank
@@ -110,8 +119,8 @@ class Framing:
     def __iter__(self) -> Iterator[FrameBatch]:
         """Batches of at most a few hundred frames; the last may hold lost frames only."""
         batch, count = self._new_batch(), 0
-        previous: FoundStart | None = None
-        for segment in self._recording.segments:
+        previous = self._stretch.previous
+        for segment in filter(self._stretch.covers, self._recording.segments):
             for found, start in self._segment(segment):
                 here = None
                 if start is not None:
@@ -128,9 +137,22 @@ class Framing:
                 if count == self._batch_size:
                     yield batch
                     batch, count = self._new_batch(), 0
-        last = _first_frames(batch, count)
-        last.final = True
-        yield last
+        if self._stretch.final:
+            last = _first_frames(batch, count)
+            last.final = True
+            yield last
+
+    @property
+    def batch_size(self) -> int:
+        """Frames in a full batch: depends on the link and the number of channels alone."""
+        return self._batch_size
+
+    def search(self) -> None:
+        """Look for all frames of the stretch, which keeps what is found; cut none out."""
+        for segment in filter(self._stretch.covers, self._recording.segments):
+            for _, start in self._segment(segment):
+                if start is not None:
+                    self._spoiled.forget(self._reach(start)[0])
 
     def _new_batch(self) -> FrameBatch:
         return empty_batch(
@@ -165,18 +187,18 @@ class Framing:
         self, segment: Segment
     ) -> Iterator[tuple[tuple[Detection, NDArray[np.float32]] | LostFrame, float | None]]:
         """Frames of one segment: what was found, and the start of a frame in file samples."""
-        blocks = self._recording.blocks(self._options.block_size, segment.start, segment.stop)
-        channels = self._recording.channels
-        stream = SampleStream(
-            blocks, segment.start, segment.stop, channels, self._spoiled, self._on_read
-        )
         sync = self._link.layout.sync.start
         lead = sync + 2 * self._geometry.guard
+        place, begin = self._stretch.begin(segment)
+        if place.last is not None:
+            place = Place(segment.index, self._resume(place.last), place.last)
+        if begin is None:
+            begin = first_needed(segment, place.lag, self._bank, self._pattern, lead)
+        stream = self._stream(segment, begin)
         search = FrameSearch(stream, self._bank, self._pattern, lead)
         spacing = self._geometry.samples_per_symbol / LAGS_PER_SYMBOL
-        lag, last = 0, None
         while True:
-            found = self._next(search, lag, last)
+            found, crossed = self._stretch.next(search, place, self._expected)
             if found is None:
                 break
             start = segment.start + (found.lag - LAGS_PER_SYMBOL * sync) * spacing
@@ -189,24 +211,34 @@ class Framing:
                 yield LostFrame(segment.index, start, -1, reason), start
             else:
                 yield (found, samples), start
-            last = found
-            drift = 1 + int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
-            lag = found.lag + LAGS_PER_SYMBOL * max(self._geometry.length - drift, 1)
-            search.release(lag)
+            self._stretch.see(Find(segment.index, found, place.lag, crossed, not reason))
+            place = Place(segment.index, self._resume(found), found)
+            search.release(place.lag)
 
-    def _next(self, search: FrameSearch, lag: int, last: Detection | None) -> Detection | None:
-        """Where a frame is expected after the last one; failing that, wherever one is.
+    def _stream(self, segment: Segment, begin: int) -> SampleStream:
+        """Samples of a segment, read from `begin` on."""
+        blocks = self._recording.blocks(self._options.block_size, begin, segment.stop)
+        channels = self._recording.channels
+        return SampleStream(
+            blocks, segment.start, segment.stop, channels, self._spoiled, self._on_read, begin
+        )
+
+    def _resume(self, found: Detection) -> int:
+        """Lag at which the search goes on after a frame."""
+        drift = 1 + int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
+        return found.lag + LAGS_PER_SYMBOL * max(self._geometry.length - drift, 1)
+
+    def _expected(self, search: FrameSearch, last: Detection | None) -> Detection | None:
+        """A frame where one is expected after the last one; None when there is none.
 
         A side lobe of the next frame may lie where it is expected: only a scan compares the two.
         """
-        if last is not None and not self._pattern.ambiguous:
-            period = self._link.period_symbols or float(self._geometry.length)
-            drift = 1 + int(np.ceil(period * self._options.max_clock_ppm * 1e-6))
-            expected = last.lag + round(LAGS_PER_SYMBOL * period)
-            found = search.near(expected, last.carrier_bin, LAGS_PER_SYMBOL * drift)
-            if found is not None:
-                return found
-        return search.scan(lag)
+        if last is None or self._pattern.ambiguous:
+            return None
+        period = self._link.period_symbols or float(self._geometry.length)
+        drift = 1 + int(np.ceil(period * self._options.max_clock_ppm * 1e-6))
+        expected = last.lag + round(LAGS_PER_SYMBOL * period)
+        return search.near(expected, last.carrier_bin, LAGS_PER_SYMBOL * drift)
 
     def _first_sample(self, start: float) -> int:
         geometry = self._geometry

@@ -47,7 +47,8 @@ class SampleStream:
     loops then vectorise. Positions are per-channel file indices. Samples outside the segment read
     as zero, and so do samples that are not finite in any channel, which are entered in `spoiled`.
     Memory: what lies between `release` and the furthest position asked for, plus a block. `on_read`
-    is told after each block how far it has been read.
+    is told after each block how far it has been read. Blocks begin at `begin`, the segment's start
+    unless given.
     """
 
     def __init__(
@@ -58,6 +59,7 @@ class SampleStream:
         channels: int,
         spoiled: SpoiledSamples | None = None,
         on_read: Callable[[int], None] | None = None,
+        begin: int | None = None,
     ) -> None:
         self._spoiled = spoiled
         self._on_read = on_read
@@ -65,8 +67,8 @@ class SampleStream:
         self.stop = stop
         self.channels = channels
         self._blocks = blocks
-        self._kept_from = start
-        self._read_to = start
+        self._kept_from = start if begin is None else begin
+        self._read_to = self._kept_from
         self._planes = np.zeros((channels, 2, 1 << 16), np.float32)
 
     def planes(self, first: int, last: int) -> NDArray[np.float32]:
@@ -100,6 +102,12 @@ class SampleStream:
             kept = self._read_to - before
             self._planes[:, :, :kept] = self._planes[:, :, dead : dead + kept].copy()
             self._kept_from = before
+
+    def pass_over(self, before: int) -> None:
+        """Read on to a position without keeping what lies before it; spoiled samples are noted."""
+        while self._read_to < min(before, self.stop):
+            self._read_block()
+            self.release(before)
 
     def _read_block(self) -> None:
         samples = next(self._blocks).samples
