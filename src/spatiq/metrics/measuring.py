@@ -15,9 +15,10 @@ from spatiq.link.description import Link
 from spatiq.metrics.figures import as_received, channel_error_variance, fill_figures
 from spatiq.metrics.frame_table import MeasuredFrames, empty_columns
 from spatiq.metrics.measuring_kernels import compare_words, count_bits, error_vectors
-from spatiq.metrics.reference_following import Numbering, ReferenceFollower
+from spatiq.metrics.reference_following import Numberer, Numbering, ReferenceFollower
+from spatiq.metrics.skipped_frames import SkippedFrames, places_in_stream
 from spatiq.receiver.chain import Progress, Stage, receive
-from spatiq.receiver.frame_batch import FrameBatch, LostFrame
+from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.link_tables import sparse_vectors
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.recording.recording import Recording
@@ -49,29 +50,50 @@ def measure(
         yield measuring(batch)
 
 
+def shortest_distance(recording: Recording, link: Link) -> float:
+    """Least distance of two frames, samples: half a symbol less, for starts are estimates."""
+    return (link.frame_symbols - 0.5) * recording.sample_rate / link.symbol_rate_hz
+
+
+def reference_follower(recording: Recording, link: Link) -> ReferenceFollower:
+    """What numbers the frames of a recording in the order of time."""
+    period = link.period_symbols
+    samples_per_symbol = recording.sample_rate / link.symbol_rate_hz
+    return ReferenceFollower(
+        link.payload,
+        period * samples_per_symbol if period is not None else None,
+        shortest_distance(recording, link),
+    )
+
+
 @dataclass
 class Measuring:
-    """The stage after the receiver; knows the payload, and uses it to count, never to receive."""
+    """The stage after the receiver; knows the payload, and uses it to count, never to receive.
+
+    Attributes:
+        recording, link, options: as received with.
+        first_frame: running index of the first frame it is given.
+        follower: numbers the frames; a `ReferenceFollower` when None.
+        list_skipped: list frames lost that only the numbers tell of.
+    """
 
     recording: Recording
     link: Link
     options: ReceiverOptions
-    _found: int = 0
-    _follower: ReferenceFollower = field(init=False)
-    _previous: tuple[int, float] | None = None
+    first_frame: int = 0
+    follower: Numberer | None = None
+    list_skipped: bool = True
+    _found: int = field(init=False)
+    _follower: Numberer = field(init=False)
+    _skipped: SkippedFrames = field(init=False)
 
     def __post_init__(self) -> None:
         """Prepare what does not change from batch to batch."""
         link = self.link
-        samples_per_symbol = self.recording.sample_rate / link.symbol_rate_hz
-        period = link.period_symbols
-        # Half a symbol less: the starts are estimates.
-        self._shortest = (link.frame_symbols - 0.5) * samples_per_symbol
-        self._follower = ReferenceFollower(
-            link.payload,
-            period * samples_per_symbol if period is not None else None,
-            self._shortest,
-        )
+        self._found = self.first_frame
+        self._follower = self.follower or reference_follower(self.recording, link)
+        shortest = shortest_distance(self.recording, link)
+        self._skipped = SkippedFrames(link.period_symbols is not None, shortest)
         self._words = sparse_vectors(link.codebook.vectors)
         self._spatial = np.tile(link.codebook.spatial_bits, link.layout.payload_index.size)
         payload = link.payload
@@ -84,7 +106,7 @@ class Measuring:
     def __call__(self, batch: FrameBatch) -> MeasuredFrames:
         """Figures of a batch."""
         start = batch.first_sample + batch.t0
-        position = start + self._global_shift(batch)
+        position = places_in_stream(self.recording.segments, batch.segment, start)
         columns = empty_columns(batch.count)
         columns["frame"][:] = self._found + np.arange(batch.count)
         columns["start_sample"][:] = start
@@ -104,7 +126,9 @@ class Measuring:
         seen = as_received(batch)
         confusion, sums = self._compare(columns, seen, sent)
         fill_figures(columns, seen, batch, sums, numbering, self.link, self.recording, self.options)
-        lost = batch.lost + self._skipped(batch, columns, position)
+        lost = list(batch.lost)
+        if self.list_skipped:
+            lost += self._skipped.before(columns, position)
         with np.errstate(invalid="ignore", divide="ignore"):
             antenna_evm = 100.0 * np.sqrt(sums[:, 0] / sums[:, 1])
         return MeasuredFrames(
@@ -124,11 +148,6 @@ class Measuring:
             words_sent=sent,
             llr=batch.llr,
         )
-
-    def _global_shift(self, batch: FrameBatch) -> NDArray[np.float64]:
-        """What to add to file samples to get places in the original stream, gaps counted."""
-        shift = [s.global_index - s.start for s in self.recording.segments]
-        return np.asarray(shift, np.float64)[batch.segment]
 
     def _reference(self, numbering: Numbering) -> NDArray[np.uint8]:
         """Plain bits as sent, (F, n_bits), as far as they are known."""
@@ -214,32 +233,6 @@ class Measuring:
                 sums[i],
             )
         return confusion, sums
-
-    def _skipped(
-        self,
-        batch: FrameBatch,
-        columns: dict[str, NDArray[np.generic]],
-        position: NDArray[np.float64],
-    ) -> list[LostFrame]:
-        """Frames that the numbers say were sent in between; with a frame period, time says so."""
-        lost: list[LostFrame] = []
-        for i, number in enumerate(columns["frame_number"].tolist()):
-            if number < 0:
-                continue
-            if self._previous is not None and self.link.period_symbols is None:
-                before, at = self._previous
-                room = int((position[i] - at) / self._shortest) + 1
-                # A jump that time has no room for is no loss: the numbers have begun anew.
-                skipped = range(before + 1, number) if number - before <= room else range(0)
-                for n in skipped:
-                    share = (n - before) / (number - before)
-                    between = at + share * (position[i] - at)
-                    shift = position[i] - columns["start_sample"][i]
-                    lost.append(
-                        LostFrame(int(batch.segment[i]), float(between - shift), n, "not found")
-                    )
-            self._previous = (number, float(position[i]))
-        return lost
 
 
 _COUNT_COLUMNS = ("periods_compared", "antenna_errors", "symbol_errors")

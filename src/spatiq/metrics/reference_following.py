@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from itertools import pairwise
+from typing import Protocol
 
 import numpy as np
 import scipy.stats
@@ -33,6 +34,19 @@ class Numbering:
     numbers: NDArray[np.int64]
     resolved: NDArray[np.bool_]
     reference: NDArray[np.uint8] | None = None
+
+
+class Numberer(Protocol):
+    """What numbers batches of frames in the order of time."""
+
+    def number(
+        self,
+        plain: NDArray[np.uint8],
+        crc_ok: NDArray[np.bool_] | None,
+        position: NDArray[np.float64],
+    ) -> Numbering:
+        """See `ReferenceFollower.number`."""
+        ...
 
 
 @dataclass

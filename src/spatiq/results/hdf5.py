@@ -232,10 +232,11 @@ class ResultsWriter:
         self._growing["lost/frame_number"].append([f.frame_number for f in lost])
         self._growing["lost/reason"].append(reasons)
 
-    def close(self, summary: Mapping[str, Any]) -> None:
+    def close(self, summary: Mapping[str, Any], digest: str = "") -> None:
         """Write what waits, the summary, the digest of the recording and the provenance.
 
-        The file takes its name when the `with` block ends. Reads the whole recording once more.
+        The file takes its name when the `with` block ends. Reads the whole recording once more,
+        unless its digest is given.
         """
         for dataset in self._growing.values():
             dataset.finish()
@@ -256,9 +257,9 @@ class ResultsWriter:
         for name, value in leaves(plain(summary)):
             if value is not None:
                 group.attrs[name] = value
-        digest = {"recording_sha256": self._recording.digest()}
+        taken = {"recording_sha256": digest or self._recording.digest()}
         provenance = file.create_group("provenance")
-        for name, value in (self._provenance | digest).items():
+        for name, value in (self._provenance | taken).items():
             provenance.create_dataset(name, data=value, dtype=text)
         file.flush()
         self._complete = True
