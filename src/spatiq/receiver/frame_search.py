@@ -9,7 +9,8 @@ of the sync section's transmit vectors, jointly over all receive channels:
 In white noise the metric follows Beta(P*Nr, (N-P)*Nr) whatever the noise power, which gives the
 threshold in closed form (the generalised likelihood ratio of a subspace signal in noise of unknown
 power: L. L. Scharf and B. Friedlander, "Matched subspace detectors", IEEE Trans. Signal Process.
-42(8), 1994).
+42(8), 1994). A metric that passes only because noise is taken to be even over the receive channels
+is looked at again with the noise as it is (frame_search_law.py).
 """
 
 from __future__ import annotations
@@ -24,6 +25,7 @@ from numpy.typing import NDArray
 
 from spatiq.link.description import Link
 from spatiq.receiver.frame_search_kernels import metric_at, raise_peak, window_energy
+from spatiq.receiver.frame_search_law import noise_powers, tail_probability
 from spatiq.receiver.matched_filter import FilterBank, derotate, sample_instants
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
@@ -53,7 +55,10 @@ class SyncPattern:
         basis: complex64 (P, N); orthonormal rows spanning the sync section's transmit vectors.
         transform_size: length of the correlation transforms, symbol periods.
         carrier_bins: transform bins of the carrier offsets tested, ascending, symmetric.
-        threshold: smallest metric that counts as a detection.
+        false_alarm: see `ReceiverOptions`.
+        threshold: smallest metric that counts as a detection, noise even over the channels.
+        certain: smallest metric that counts whatever the noise's covariance over the channels: the
+            threshold of one channel, as if all noise were on it.
         filter_bins: transform bins at which the matched filter is centred; each serves the carrier
             bins within `FILTER_REACH` of it.
         ambiguous: whether the section, shifted in time and carrier, resembles itself so much that a
@@ -63,7 +68,9 @@ class SyncPattern:
     basis: NDArray[np.complex64]
     transform_size: int
     carrier_bins: NDArray[np.int64]
+    false_alarm: float
     threshold: float
+    certain: float
     filter_bins: NDArray[np.int64]
     ambiguous: bool = False
 
@@ -125,7 +132,9 @@ def sync_pattern(link: Link, options: ReceiverOptions, channels: int) -> SyncPat
         basis=basis.astype(np.complex64),
         transform_size=size,
         carrier_bins=carrier_bins,
+        false_alarm=options.false_alarm,
         threshold=limit,
+        certain=threshold(options.false_alarm, n, rank, 1),
         filter_bins=np.array([part[part.size // 2] for part in parts if part.size], np.int64),
         ambiguous=largest_side_lobe(basis, shifts) > limit / 2,
     )
@@ -194,6 +203,7 @@ class FrameSearch:
         self._blocks: dict[int, tuple[NDArray[np.float32], NDArray[np.int32]]] = {}
         self.last_lag = last_lag(stream.stop - stream.start, bank, pattern)
         self.crossed = -1
+        self._refused = (-1, -1)
 
     def _spectra(self, offsets: NDArray[np.int64]) -> NDArray[np.complex64]:
         """Conjugate transforms of the basis at carrier offsets, complex64 (bins, 1, 1, P, size).
@@ -282,11 +292,14 @@ class FrameSearch:
                 first = lag + int(crossing[0])
                 if first >= stop:
                     return None
-                found = self._peak(first)
-                if found.metric >= self._pattern.threshold:
-                    self.crossed = first
-                    return found
-                lag = first + 1  # the transforms' rounding only
+                place = self._peak(first)
+                if place != self._refused:
+                    found = self.refine(*place)
+                    if self.passes(found):
+                        self.crossed = first
+                        return found
+                    self._refused = place  # for the noise's sake, or by the transforms' rounding
+                lag = first + 1  # so that a find does not depend on where the scan began
                 continue
             lag = (index + 1) * self._hop
         return None
@@ -304,7 +317,8 @@ class FrameSearch:
         samples = first_needed_sample(lag, self._bank, self._pattern, self._lead)
         self._stream.release(self._stream.start + samples)
 
-    def _peak(self, first: int) -> Detection:
+    def _peak(self, first: int) -> tuple[int, int]:
+        """Lag and carrier bin of the largest metric within one sync length of a crossing."""
         last = min(first + LAGS_PER_SYMBOL * self._pattern.length, self.last_lag)
         top, at, carrier_bin = -1.0, first, 0
         for index in range(first // self._hop, last // self._hop + 1):
@@ -314,7 +328,7 @@ class FrameSearch:
             i = low + int(np.argmax(best[low:high]))
             if best[i] > top:
                 top, at, carrier_bin = float(best[i]), index * self._hop + i, int(where[i])
-        return self.refine(at, carrier_bin)
+        return at, carrier_bin
 
     def refine(self, lag: int, carrier_bin: int, lags: int = 2, bins: int = 1) -> Detection:
         """Best metric by direct correlation in a neighbourhood: the same however one got there."""
@@ -338,7 +352,23 @@ class FrameSearch:
         found = self.refine(min(max(lag, 0), self.last_lag), carrier_bin, lags=reach)
         if found.metric < self._pattern.threshold:
             return None
-        return self.refine(found.lag, found.carrier_bin)
+        found = self.refine(found.lag, found.carrier_bin)
+        return found if self.passes(found) else None
+
+    def passes(self, found: Detection) -> bool:
+        """Whether noise alone, as it is over the receive channels, would hardly give this metric."""
+        pattern = self._pattern
+        if found.metric < pattern.threshold or found.metric >= pattern.certain:
+            return found.metric >= pattern.certain
+        rank, length = pattern.basis.shape
+        centre = pattern.filter_of(found.carrier_bin)
+        y = self.instants(found.lag, LAGS_PER_SYMBOL * (length - 1) + 1, centre)[:, ::2]
+        cycles = (pattern.carrier_bins[found.carrier_bin] - centre) / pattern.transform_size
+        y = y * np.exp(-2j * np.pi * cycles * np.arange(length))
+        basis = pattern.basis.astype(np.complex128)
+        y = y - (y @ basis.conj().T) @ basis
+        powers = noise_powers(y @ y.conj().T / (length - rank), length - rank)
+        return tail_probability(found.metric, powers, length, rank) <= pattern.false_alarm
 
 
 def noise_metrics(search: FrameSearch) -> Iterator[NDArray[np.float32]]:
