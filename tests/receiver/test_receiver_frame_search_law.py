@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-import scipy.stats
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from receiver_cases import MemoryRecording, complex_noise, make_link, rayleigh, waveform

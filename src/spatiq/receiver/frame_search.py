@@ -356,7 +356,7 @@ class FrameSearch:
         return found if self.passes(found) else None
 
     def passes(self, found: Detection) -> bool:
-        """Whether noise alone, as it is over the receive channels, would hardly give this metric."""
+        """Whether noise, as it is over the receive channels, would hardly give this metric."""
         pattern = self._pattern
         if found.metric < pattern.threshold or found.metric >= pattern.certain:
             return found.metric >= pattern.certain

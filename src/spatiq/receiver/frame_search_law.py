@@ -76,7 +76,7 @@ def noise_powers(residual: NDArray[np.complex128], freedom: int) -> NDArray[np.f
     Returns:
         float64 (Nr,), ascending.
     """
-    values = np.maximum(np.linalg.eigvalsh(residual), 0.0)
+    values = np.asarray(np.maximum(np.linalg.eigvalsh(residual), 0.0), np.float64)
     mean = float(values.mean())
     if freedom < 2 or mean <= 0.0:
         return values
