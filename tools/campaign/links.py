@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 from spatiq.link.loading import Link, parse_link
 
 # Sixteen pilots for each antenna, sent in turn.
@@ -14,14 +16,14 @@ name = "{name}"
 antennas = {antennas}
 symbol_rate_hz = 1e6
 carrier_hz = 2.45e9
+clock = "{clock}"
 
 [modulation]
-scheme = "spatial-modulation"
-constellation = {{ name = "{constellation}" }}
+{modulation}
 
 [pulse]
 shape = "root-raised-cosine"
-rolloff = 0.25
+rolloff = {rolloff}
 span_symbols = {span}
 {frame}
 [[frame.section]]
@@ -38,8 +40,8 @@ repeat = 2
 
 [[frame.section]]
 kind = "payload"
-symbols = 1000
-
+symbols = {payload}
+{known}
 [payload]
 [[payload.field]]
 type = "prbs"
@@ -51,33 +53,54 @@ bits = "rest"
 
 def campaign_text(
     antennas: int,
-    constellation: str,
+    constellation: str | None,
     *,
     span: int = 32,
     period_symbols: float | None = None,
     continuation: str = "running",
+    payload: int = 1000,
+    rolloff: float = 0.25,
+    clock: str = "independent",
+    known_every: int | None = None,
 ) -> str:
     """A link description: 63 sync symbols, 16 pilots an antenna, 1000 payload words.
 
     Args:
         antennas: Nt.
-        constellation: by name.
+        constellation: by name; None: space-shift keying.
         span: of the root-raised-cosine pulse, symbol periods.
         period_symbols: frame period; None: frames may come at any time.
         continuation: of the reference, "running" or "restart".
+        payload: symbol periods of the payload section.
+        rolloff: of the pulse.
+        clock: "locked" to the carrier's reference, or "independent".
+        known_every: one payload period in so many is a known symbol, antennas in rotation.
     """
+    scheme = "space-shift-keying" if constellation is None else "spatial-modulation"
+    modulation = f'scheme = "{scheme}"'
+    if constellation is not None:
+        modulation += f'\nconstellation = {{ name = "{constellation}" }}'
+    everyone = list(range(antennas))
+    known = ""
+    if known_every is not None:
+        sequence = '{ type = "list", symbols = [[1, 0]] }'
+        known = f"known = {{ every = {known_every}, sequence = {sequence}, antennas = {everyone} }}"
     return _TEXT.format(
-        name=f"{antennas} antennas {constellation}",
+        name=f"{antennas} antennas {constellation or 'space-shift keying'}",
         antennas=antennas,
-        constellation=constellation,
-        all_antennas=list(range(antennas)),
+        modulation=modulation,
+        all_antennas=everyone,
         span=span,
+        rolloff=rolloff,
+        clock=clock,
+        payload=payload,
+        known=known,
         pilots=_PILOTS,
         frame="" if period_symbols is None else f"\n[frame]\nperiod_symbols = {period_symbols}\n",
         continuation=continuation,
     )
 
 
-def campaign_link(antennas: int, constellation: str, *, span: int = 32) -> Link:
-    """The same, checked."""
-    return parse_link(campaign_text(antennas, constellation, span=span))
+def campaign_link(antennas: int, constellation: str | None, **choices: Any) -> Link:
+    """The same, checked; choices of `campaign_text`."""
+    return parse_link(campaign_text(antennas, constellation, **choices))
