@@ -23,6 +23,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import scipy.linalg
 from numpy.typing import NDArray
 
 Complex = NDArray[np.complex128]
@@ -120,47 +121,60 @@ class FirFit:
         """From the normal equations.
 
         Args:
-            shifted: complex128 (n, L, Nt), see `shifted_vectors`.
+            shifted: complex128 (n, L, Nt), see `shifted_vectors`; an antenna that never sends is
+                estimated as zero.
             received: complex128 (n, Nr).
             window: the widest window.
         """
         rows, lags, antennas = shifted.shape
-        flat = shifted.reshape(rows, lags * antennas)
-        self._window = window
-        self._antennas = antennas
-        self._rows = rows
-        self._gram = flat.conj().T @ flat
-        self._cross = flat.conj().T @ received
+        sends = np.any(shifted != 0, axis=(0, 1))
+        flat = shifted[:, :, sends].reshape(rows, -1)
+        gram = flat.conj().T @ flat
+        # Keeps the factors finite where symbols repeat; changes a solvable fit by nothing.
+        gram[np.diag_indices_from(gram)] += 1e-12 * max(np.max(gram.real, initial=0.0), 1e-300)
+        self._window, self._rows, self._channels = window, rows, received.shape[1]
+        self._sends, self._antennas, self._count = sends, antennas, int(sends.sum())
+        self._gram, self._cross = gram, flat.conj().T @ received
         self._energy = float(np.sum(np.abs(received) ** 2))
-        self._channels = received.shape[1]
 
     def solve(self, window: Window) -> FirChannel:
         """The estimate with the lags of a window."""
-        chosen, taps, inverse = self._solution(window)
-        channels = self._channels
-        residual = self._energy - float(np.sum(self._cross[chosen].conj() * taps).real)
-        freedom = channels * (self._rows - np.linalg.matrix_rank(self._gram[chosen][:, chosen]))
-        noise = max(residual, 1e-13 * self._energy, 1e-300) / max(int(freedom) - 1, 1)
-        shape = (window.size, self._antennas)
-        spread = noise * np.diag(inverse).real.reshape(shape).sum(axis=0)
-        shaped = taps.reshape(*shape, channels).swapaxes(1, 2)
-        return FirChannel(window, shaped, noise, int(freedom), np.asarray(spread, np.float64))
-
-    def criterion(self, window: Window) -> float:
-        """Bayesian information criterion, halved: smallest is best."""
-        chosen, taps, _ = self._solution(window)
-        residual = self._energy - float(np.sum(self._cross[chosen].conj() * taps).real)
-        spread = max(residual, 1e-13 * self._energy, 1e-300) / (self._rows * self._channels)
-        parameters = window.size * self._antennas
-        return self._channels * (self._rows * np.log(spread) + parameters * np.log(self._rows))
+        chosen = self._columns(window.first, window.size)
+        factor = scipy.linalg.cho_factor(self._gram[np.ix_(chosen, chosen)])
+        cross = self._cross[chosen]
+        solved = scipy.linalg.cho_solve(factor, cross)
+        inverse = scipy.linalg.cho_solve(factor, np.eye(chosen.size))
+        residual = self._energy - float(np.sum(cross.conj() * solved).real)
+        freedom = self._channels * (self._rows - chosen.size)
+        noise = max(residual, 1e-13 * self._energy, 1e-300) / max(freedom - 1, 1)
+        taps = np.zeros((window.size, self._channels, self._antennas), np.complex128)
+        shape = (window.size, self._count)
+        taps[:, :, self._sends] = solved.reshape(*shape, self._channels).swapaxes(1, 2)
+        variance = np.zeros(self._antennas)
+        variance[self._sends] = noise * np.diag(inverse).real.reshape(shape).sum(axis=0)
+        return FirChannel(window, taps, noise, freedom, variance)
 
     def best(self, windows: list[Window]) -> Window:
-        """The window with the smallest criterion; the first of equals."""
-        return min(windows, key=self.criterion)
+        """The window with the smallest Bayesian information criterion; the first of equals."""
+        criteria = {first: self._criteria(first) for first in {w.first for w in windows}}
+        return min(windows, key=lambda w: criteria[w.first][w.size - 1])
 
-    def _solution(self, window: Window) -> tuple[NDArray[np.int64], Complex, Complex]:
-        first = (window.first - self._window.first) * self._antennas
-        chosen = np.arange(first, first + window.size * self._antennas)
-        gram = self._gram[np.ix_(chosen, chosen)]
-        inverse = np.linalg.pinv(gram, rcond=1e-10, hermitian=True)
-        return chosen, inverse @ self._cross[chosen], inverse
+    def _columns(self, first: int, lags: int) -> NDArray[np.int64]:
+        begin = (first - self._window.first) * self._count
+        return np.arange(begin, begin + lags * self._count)
+
+    def _criteria(self, first: int) -> NDArray[np.float64]:
+        """Half the criterion of the windows that begin at lag `first`, of 1, 2, ... lags.
+
+        The windows are nested: one triangular factor gives the energy that each lag explains.
+        """
+        lags = self._window.last - first + 1
+        chosen = self._columns(first, lags)
+        factor = scipy.linalg.cholesky(self._gram[np.ix_(chosen, chosen)], lower=True)
+        white = scipy.linalg.solve_triangular(factor, self._cross[chosen], lower=True)
+        explained = np.sum(np.abs(white) ** 2, axis=1).reshape(lags, self._count).sum(axis=1)
+        residual = np.maximum(self._energy - np.cumsum(explained), 1e-13 * self._energy)
+        spread = np.maximum(residual, 1e-300) / (self._rows * self._channels)
+        parameters = np.arange(1, lags + 1) * self._count
+        criteria = self._rows * np.log(spread) + parameters * np.log(self._rows)
+        return np.asarray(self._channels * criteria, np.float64)
