@@ -56,6 +56,25 @@ _PhaseNoise = Annotated[float, typer.Option(help="Linewidth of phase noise to tr
 _TwoStep = Annotated[
     bool, typer.Option("--two-step/--no-two-step", help="Compare with the two-step detector.")
 ]
+_Channel = Annotated[
+    str,
+    typer.Option(
+        metavar="flat|dispersive", help="Whether echoes reach into the symbols that follow."
+    ),
+]
+_Memory = Annotated[
+    int | None,
+    typer.Option(
+        help="Dispersive: earlier symbols that count.", show_default="chosen for each frame"
+    ),
+]
+_Equaliser = Annotated[
+    str,
+    typer.Option(
+        metavar="sequence|mmse", help="Dispersive: decide whole sequences, or equalise linearly."
+    ),
+]
+_Survivors = Annotated[int, typer.Option(help="Dispersive: sequences kept by the search.")]
 _Name = Annotated[
     str | None, typer.Option("--recording", metavar="NAME", help="Which one, out of an archive.")
 ]
@@ -102,6 +121,10 @@ def measure_command(
     max_clock_ppm: _Clock = _DEFAULTS.max_clock_ppm,
     phase_noise_hz: _PhaseNoise = _DEFAULTS.phase_noise_hz,
     two_step: _TwoStep = _DEFAULTS.compare_two_step,
+    channel: _Channel = _DEFAULTS.channel,
+    memory: _Memory = _DEFAULTS.memory,
+    equaliser: _Equaliser = _DEFAULTS.equaliser,
+    survivors: _Survivors = _DEFAULTS.survivors,
     name: _Name = None,
     full_scale: _FullScale = None,
     rows: _Rows = 20,
@@ -123,6 +146,10 @@ def measure_command(
         soft_output=llr,
         max_clock_ppm=max_clock_ppm,
         phase_noise_hz=phase_noise_hz,
+        channel=channel,
+        memory=memory,
+        equaliser=equaliser,
+        survivors=survivors,
     )
     request = MeasureRequest(
         recording=recording,

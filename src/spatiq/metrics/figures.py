@@ -68,7 +68,8 @@ def fill_figures(
         _power(columns, batch, sums, link)
         _error_vector(columns, sums, link)
         _ratios(columns, options.confidence)
-        _prediction(columns, white, link)
+        if white.dispersive is None:  # else no bound of a single word holds: missing
+            _prediction(columns, white, link)
     _marks(columns, batch, numbering, link)
 
 

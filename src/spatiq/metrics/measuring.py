@@ -223,10 +223,14 @@ class Measuring:
             # A few known words are no measure of a payload that is mostly unknown.
             aided = counts[0] > 0 and 2 * counts[0] >= sent.shape[1]
             columns["evm_data_aided"][i] = aided
+            reference = sent[i] if aided else batch.words[i]
+            symbols = batch.symbols[i]
+            if batch.dispersive is not None:
+                symbols = batch.dispersive.symbols(i, reference, batch.channel[i])
             error_vectors(
-                batch.symbols[i],
+                symbols,
                 batch.channel[i],
-                sent[i] if aided else batch.words[i],
+                reference,
                 self._words.pointer,
                 self._words.antenna,
                 self._words.value,

@@ -218,7 +218,7 @@ class Summary:
 
     def _loss(self) -> dict[str, Any] | None:
         errors, trials = self._sums["bit_errors"], self._sums["bits_compared"]
-        if not trials or not self._kept:
+        if not trials or not self._kept or self._prediction(0) is None:
             return None
         channel = np.stack([k[1][0] for k in self._kept])
         noise = np.array([k[1][1] for k in self._kept])

@@ -3,6 +3,8 @@
     framing (with frame search) -> acquisition -> tracking -> refit -> whitening -> detection
     (-> soft output, when asked for)
 
+On a dispersive channel other stages follow framing, see `spatiq.receiver.dispersive_chain`.
+
 Each stage is a callable that takes a batch and gives a batch. A list of stages of one's own takes
 the place of `standard_stages`.
 """
@@ -18,6 +20,7 @@ from spatiq.errors import InputError
 from spatiq.link.description import Link
 from spatiq.receiver.acquisition import Acquisition
 from spatiq.receiver.detection import Detection, find_detector
+from spatiq.receiver.dispersive_chain import dispersive_stages
 from spatiq.receiver.edge_frames import EdgeFrames
 from spatiq.receiver.frame_batch import FrameBatch, LostFrame
 from spatiq.receiver.frame_search import SyncPattern, sync_pattern
@@ -117,9 +120,12 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     steps = parts.pattern.carrier_bins
     spacing = float(steps[1] - steps[0]) if steps.size > 1 else 1.0
     reach = spacing / parts.pattern.transform_size
+    acquisition = Acquisition(parts.bank, parts.tables, reach, link.symbol_rate_hz, locked)
+    if options.channel == "dispersive":
+        return dispersive_stages(link, options, acquisition, clock_std, walk)
     refit = Refit(parts.bank, parts.tables, clock_std, walk)
     stages: list[Stage] = [
-        Acquisition(parts.bank, parts.tables, reach, link.symbol_rate_hz, locked),
+        acquisition,
         Tracking(parts.bank, parts.tables, clock_std, walk),
         refit,
         Whitening(refit),

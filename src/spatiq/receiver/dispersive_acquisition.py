@@ -107,10 +107,16 @@ class KnownSymbols:
 
 
 def sampled(
-    planes: NDArray[np.float32], t0: float, step: float, periods: int, bank: FilterBank
+    planes: NDArray[np.float32],
+    t0: float,
+    step: float,
+    periods: NDArray[np.int64],
+    bank: FilterBank,
+    *,
+    slopes: bool = False,
 ) -> Complex:
-    """Matched-filter outputs of all symbol periods, complex128 (K, Nr)."""
-    out = np.empty((periods, 2, planes.shape[0]), np.float32)
-    every = np.arange(periods, dtype=np.int64)
-    sample_periods(planes, t0, step, every, bank.taps, bank.phases, out)
+    """Matched-filter outputs of symbol periods, complex128 (n, Nr); or their slopes, per sample."""
+    out = np.empty((periods.size, 2, planes.shape[0]), np.float32)
+    table = bank.slopes if slopes else bank.taps
+    sample_periods(planes, t0, step, periods, table, bank.phases, out)
     return np.asarray(out[:, 0] + 1j * out[:, 1].astype(np.float64), np.complex128)

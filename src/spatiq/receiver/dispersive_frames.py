@@ -29,9 +29,7 @@ class DispersiveFrames:
     window: Window
     decided: NDArray[np.int64]
 
-    def symbols(
-        self, i: int, words: NDArray[np.int64], channel: Complex
-    ) -> NDArray[np.complex64]:
+    def symbols(self, i: int, words: NDArray[np.int64], channel: Complex) -> NDArray[np.complex64]:
         """Payload vectors of frame i as a flat channel would have given them, (Kp, Nr).
 
         That is H x of each word and what the words do not explain of the vector received in its

@@ -1,8 +1,8 @@
 """Reception on a dispersive channel: the stage between acquisition and measuring.
 
-Known symbols give carrier and impulse responses (`dispersive_acquisition`), a first pass gives words
-and phase (`dispersive_tracking`); then, in rounds, all symbols of the frame give phase, symbol
-clock, impulse responses, their length and N0 anew, and the words are decided again.
+Known symbols give carrier and impulse responses (`dispersive_acquisition`), a first pass gives
+words and phase (`dispersive_tracking`); then, in rounds, all symbols of the frame give phase,
+symbol clock, impulse responses, their length and N0 anew, and the words are decided again.
 
 Noise is taken to be white and equal over the receive channels, the channel to stand still within a
 frame but for its common phase, and the frame to be alone: nothing else within the channel's memory
@@ -115,7 +115,7 @@ class DispersiveReception:
         return frame
 
     def _sampled(self, batch: FrameBatch, i: int) -> Complex:
-        periods = self.plan.amplitude.size
+        periods = np.arange(self.plan.amplitude.size, dtype=np.int64)
         return sampled(batch.planes[i], batch.t0[i], batch.step[i], periods, self.bank)
 
     def _derotate(self, batch: FrameBatch, i: int, carrier: float) -> None:
@@ -174,7 +174,8 @@ class DispersiveReception:
 
         The channel's own delay is free, so that only the drift of the instants can be told.
         """
-        slope = _slopes(batch.planes[i], batch.t0[i], batch.step[i], rows, self.bank)
+        where = (batch.t0[i], batch.step[i], rows)
+        slope = sampled(batch.planes[i], *where, self.bank, slopes=True)
         slope *= np.exp(-1j * frame.phase[rows])[:, None]
         window = frame.channel.window
         begin = window.first - WIDEST.first
@@ -218,18 +219,3 @@ def _identified(widest: Window, memory: int | None, rows: int) -> list[Window]:
 def _planes(values: Complex) -> NDArray[np.float32]:
     """complex (K, Nr) -> float32 (K, 2, Nr)."""
     return np.stack([values.real, values.imag], axis=1).astype(np.float32)
-
-
-def _slopes(
-    planes: NDArray[np.float32],
-    t0: float,
-    step: float,
-    rows: NDArray[np.int64],
-    bank: FilterBank,
-) -> Complex:
-    """Slope of the matched-filter outputs with the instant, per sample, complex128 (n, Nr)."""
-    from spatiq.receiver.matched_filter import sample_periods
-
-    out = np.empty((rows.size, 2, planes.shape[0]), np.float32)
-    sample_periods(planes, t0, step, rows, bank.slopes, bank.phases, out)
-    return np.asarray(out[:, 0] + 1j * out[:, 1].astype(np.float64), np.complex128)

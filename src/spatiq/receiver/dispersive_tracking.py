@@ -40,7 +40,7 @@ class _Carrier:
         distance = to - self.at
         move = np.array([[1.0, distance], [0.0, 1.0]])
         self.state = move @ self.state
-        self.covariance = move @ self.covariance @ move.T
+        self.covariance = np.asarray(move @ self.covariance @ move.T, np.float64)
         self.covariance[0, 0] += self.walk * abs(distance)
         self.at = to
 
@@ -59,7 +59,8 @@ class _Carrier:
         information = gain * np.array(
             [[weight.sum(), weight @ k], [weight @ k, weight @ (k * k)]], np.float64
         )
-        self.covariance = np.linalg.inv(np.linalg.inv(self.covariance) + information)
+        inverse = np.linalg.inv(np.linalg.inv(self.covariance) + information)
+        self.covariance = np.asarray(inverse, np.float64)
         self.state = self.state + self.covariance @ (gain * np.array([score.sum(), score @ k]))
 
 
@@ -121,7 +122,7 @@ def track_frame(
 
 def _blocks(plan: DispersivePlan) -> list[tuple[int, int]]:
     """Blocks of periods that hold payload, ascending."""
-    found = []
+    found: list[tuple[int, int]] = []
     begin = 0
     while True:
         ahead = np.flatnonzero(plan.amplitude[begin:])

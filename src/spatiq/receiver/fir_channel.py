@@ -126,7 +126,7 @@ class FirFit:
             received: complex128 (n, Nr).
             window: the widest window.
         """
-        rows, lags, antennas = shifted.shape
+        rows, _, antennas = shifted.shape
         sends = np.any(shifted != 0, axis=(0, 1))
         flat = shifted[:, :, sends].reshape(rows, -1)
         gram = flat.conj().T @ flat

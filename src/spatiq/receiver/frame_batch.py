@@ -7,6 +7,8 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from spatiq.receiver.dispersive_frames import DispersiveFrames
+
 
 @dataclass(frozen=True)
 class LostFrame:
@@ -60,6 +62,9 @@ class FrameBatch:
         words_two_step: the same by the two-step detector, or None.
         llr: float32 (F, Kp * b); log-likelihood ratios of the bits as sent, positive when 0 is
             likelier; None unless asked for.
+        dispersive: the frames as they were received over a dispersive channel; `channel` and
+            `symbols` then are a flat channel of the same energy (`DispersiveFrames.symbols`).
+            None on a flat channel.
     """
 
     planes: NDArray[np.float32]
@@ -87,6 +92,7 @@ class FrameBatch:
     header_freedom: int = 0
     words_two_step: NDArray[np.int64] | None = None
     llr: NDArray[np.float32] | None = None
+    dispersive: DispersiveFrames | None = None
     lost: list[LostFrame] = field(default_factory=list)
     final: bool = False
 

@@ -9,6 +9,10 @@ from spatiq.errors import InputError
 
 # Log-likelihood ratios of the payload bits: see receiver/soft_output.py.
 SOFT_OUTPUTS = ("none", "exact", "max-log")
+# Of symbols that reach into their neighbours: see receiver/dispersive_chain.py.
+CHANNELS = ("flat", "dispersive")
+EQUALISERS = ("sequence", "mmse")
+LARGEST_MEMORY = 12
 
 
 @dataclass(frozen=True)
@@ -26,6 +30,13 @@ class ReceiverOptions:
         soft_output: log-likelihood ratios of the payload bits: "none", "exact" or "max-log".
         max_clock_ppm: clock offsets expected, +- ppm; frames are tracked a little beyond.
         phase_noise_hz: linewidth of the oscillators' phase noise that carrier tracking expects.
+        channel: "flat": a symbol is over before the next one; "dispersive": echoes reach into the
+            symbols that follow.
+        memory: on a dispersive channel, how many earlier symbols a received vector depends on;
+            None: chosen by frame.
+        equaliser: on a dispersive channel, "sequence" decides whole sequences, "mmse" equalises
+            linearly and decides word by word.
+        survivors: sequences kept by the sequence detector from one symbol period to the next.
         block_size: samples read at a time; never changes a figure.
     """
 
@@ -39,6 +50,10 @@ class ReceiverOptions:
     phase_noise_hz: float = 0.0
     block_size: int = 1 << 18
     soft_output: str = "none"
+    channel: str = "flat"
+    memory: int | None = None
+    equaliser: str = "sequence"
+    survivors: int = 64
 
     def __post_init__(self) -> None:
         """Refuse values outside their range.
@@ -53,14 +68,19 @@ class ReceiverOptions:
             "max_clock_ppm": (0.0, 1000.0),
             "phase_noise_hz": (0.0, 1e9),
             "block_size": (1024, 1 << 30),
+            "survivors": (1, 65536),
         }
         for name, (low, high) in bounds.items():
             value = getattr(self, name)
             if not low <= value <= high:
                 raise InputError("receiver options", name, value, f"a value from {low} to {high}")
-        if self.soft_output not in SOFT_OUTPUTS:
-            accepted = ", ".join(SOFT_OUTPUTS)
-            raise InputError("receiver options", "soft_output", self.soft_output, accepted)
+        choices = {"soft_output": SOFT_OUTPUTS, "channel": CHANNELS, "equaliser": EQUALISERS}
+        for name, accepted in choices.items():
+            if getattr(self, name) not in accepted:
+                raise InputError("receiver options", name, getattr(self, name), ", ".join(accepted))
+        if self.memory is not None and not 0 <= self.memory <= LARGEST_MEMORY:
+            expected = f"0 to {LARGEST_MEMORY} symbols"
+            raise InputError("receiver options", "memory", self.memory, expected)
 
     def as_dict(self) -> dict[str, Any]:
         """All options by name, for provenance."""

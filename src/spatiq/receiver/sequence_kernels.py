@@ -163,8 +163,8 @@ def survivor_search(
     for s in range(alive):
         if cost[s] < cost[best]:
             best = s
-    total = cost[best]
+    least = float(cost[best])
     for k in range(periods - 1, -1, -1):
         decided[k] = word[k, best] if word[k, best] < size else -1
         best = parent[k, best]
-    return total
+    return least
