@@ -58,6 +58,97 @@ def place_of(table: I32, stamp: I64, now: int, keys: I64, key: int) -> int:
     return slot
 
 
+# Survivors: cost (M,), state (M,), words (M, L), latest first; the codebook's size stands for none.
+Survivors = tuple[F64, I64, I32]
+# Candidates: key, cost, parent, word; order; hash table and the period that filled each slot.
+Candidates = tuple[I64, F64, I32, I32, I64, I32, I64]
+
+
+@kernel
+def extend(
+    k: int,
+    target: C128,
+    images: C128,
+    discount: F64,
+    none: bool,
+    state_bits: tuple[int, int],
+    survivors: Survivors,
+    alive: int,
+    candidates: Candidates,
+) -> int:
+    """Extend every survivor by all words, or by none; of equal states the best is kept.
+
+    Args: k the period; target (Nt,), z[k]; images of `word_images`; state_bits: bits of a word, and
+    the mask of a state. Returns the number of candidates.
+    """
+    cost, state, history = survivors
+    keys, costs, parents, chosen, order, table, stamp = candidates
+    size, memory = discount.size, images.shape[0] - 1
+    bits, mask = state_bits
+    begin, end = (size, size + 1) if none else (0, size)
+    left = np.empty(target.size, np.complex128)
+    found = 0
+    for s in range(alive):
+        for a in range(target.size):
+            left[a] = target[a]
+        for lag in range(1, memory + 1):
+            before = history[s, lag - 1]
+            if before < size:
+                for a in range(target.size):
+                    left[a] -= images[lag, before, a]
+        for c in range(begin, end):
+            total = cost[s] - (discount[c] if c < size else 0.0)
+            for a in range(target.size):
+                e = left[a] - images[0, c, a]
+                total += e.real * e.real + e.imag * e.imag
+            key = ((state[s] << bits) | c) & mask
+            slot = place_of(table, stamp, k, keys, key)
+            if stamp[slot] != k:
+                stamp[slot] = k
+                table[slot] = found
+                order[found] = found
+                keys[found] = key
+                costs[found] = np.inf
+                found += 1
+            i = table[slot]
+            if total < costs[i]:
+                costs[i] = total
+                parents[i] = s
+                chosen[i] = c
+    return found
+
+
+@kernel
+def take_over(
+    kept: int,
+    candidates: Candidates,
+    survivors: Survivors,
+    following: I32,
+    parent: I32,
+    word: I32,
+) -> None:
+    """Make the first `kept` candidates the survivors; their words go into following (M, L)."""
+    cost, state, history = survivors
+    keys, costs, parents, chosen, order, _, _ = candidates
+    for s in range(kept):
+        i = order[s]
+        parent[s] = parents[i]
+        word[s] = chosen[i]
+        following[s, 0] = chosen[i]
+        for lag in range(1, history.shape[1]):
+            following[s, lag] = history[parents[i], lag - 1]
+        cost[s] = costs[i]
+        state[s] = keys[i]
+
+
+@kernel
+def trace_back(parent: I32, word: I32, best: int, size: int, decided: I64) -> None:
+    """Words of the survivor `best` of the last period into decided (N,); none: -1."""
+    for k in range(decided.size - 1, -1, -1):
+        decided[k] = word[k, best] if word[k, best] < size else -1
+        best = parent[k, best]
+
+
 @kernel
 def survivor_search(
     z: C128,
@@ -98,73 +189,33 @@ def survivor_search(
     # States are told apart by as many words as an integer holds; beyond, by the latest of them.
     mask = (1 << (bits * min(memory, 62 // bits))) - 1
     room = survivors * size
-    table_size = 2
-    while table_size < 2 * room:
-        table_size *= 2
-    table, stamp = np.zeros(table_size, np.int32), np.full(table_size, -1, np.int64)
-    keys, order = np.empty(room, np.int64), np.empty(room, np.int64)
-    costs, parents = np.empty(room), np.empty(room, np.int32)
-    chosen = np.empty(room, np.int32)
+    slots = 2
+    while slots < 2 * room:
+        slots *= 2
+    order, keys, costs = np.empty(room, np.int64), np.empty(room, np.int64), np.empty(room)
+    parents, chosen = np.empty(room, np.int32), np.empty(room, np.int32)
+    table, stamp = np.zeros(slots, np.int32), np.full(slots, -1, np.int64)
+    candidates = (keys, costs, parents, chosen, order, table, stamp)
     parent = np.zeros((periods, survivors), np.int32)
     word = np.zeros((periods, survivors), np.int32)
     history = np.full((survivors, memory + 1), size, np.int32)
-    earlier = np.full((survivors, memory + 1), size, np.int32)
+    following = np.full((survivors, memory + 1), size, np.int32)
     cost, state = np.zeros(survivors), np.zeros(survivors, np.int64)
     images = np.zeros((memory + 1, size + 1, antennas), np.complex128)
-    left = np.empty(antennas, np.complex128)
     alive = 1
     for k in range(periods):
         word_images(form[k], words, images)
-        begin, end = (0, size) if free[k] else (size, size + 1)
-        found = 0
-        for s in range(alive):
-            for a in range(antennas):
-                left[a] = z[k, a]
-            for lag in range(1, memory + 1):
-                before = history[s, lag - 1]
-                if before < size:
-                    for a in range(antennas):
-                        left[a] -= images[lag, before, a]
-            for c in range(begin, end):
-                total = cost[s] - (discount[c] if c < size else 0.0)
-                for a in range(antennas):
-                    e = left[a] - images[0, c, a]
-                    total += e.real * e.real + e.imag * e.imag
-                key = ((state[s] << bits) | c) & mask
-                slot = place_of(table, stamp, k, keys, key)
-                if stamp[slot] != k:
-                    stamp[slot] = k
-                    table[slot] = found
-                    keys[found] = key
-                    costs[found] = total
-                    parents[found] = s
-                    chosen[found] = c
-                    order[found] = found
-                    found += 1
-                elif total < costs[table[slot]]:
-                    costs[table[slot]] = total
-                    parents[table[slot]] = s
-                    chosen[table[slot]] = c
-        kept = min(found, survivors)
+        here = (cost, state, history)
+        none = free[k] == 0
+        found = extend(k, z[k], images, discount, none, (bits, mask), here, alive, candidates)
+        alive = min(found, survivors)
         if found > survivors:
             nearest_first(order, costs, found, survivors)
-        for s in range(kept):
-            i = order[s]
-            parent[k, s] = parents[i]
-            word[k, s] = chosen[i]
-            earlier[s, 0] = chosen[i]
-            for lag in range(1, memory + 1):
-                earlier[s, lag] = history[parents[i], lag - 1]
-            cost[s] = costs[i]
-            state[s] = keys[i]
-        history, earlier = earlier, history
-        alive = kept
+        take_over(alive, candidates, here, following, parent[k], word[k])
+        history, following = following, history
     best = 0
     for s in range(alive):
         if cost[s] < cost[best]:
             best = s
-    least = float(cost[best])
-    for k in range(periods - 1, -1, -1):
-        decided[k] = word[k, best] if word[k, best] < size else -1
-        best = parent[k, best]
-    return least
+    trace_back(parent, word, best, size, decided)
+    return float(cost[best])
