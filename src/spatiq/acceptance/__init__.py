@@ -1,0 +1,1 @@
+"""Acceptance of a transmitter: figures, limits, verdicts, probable causes."""
