@@ -1,6 +1,6 @@
 """The chain: recording and link in, batches of received frames out.
 
-    framing (with frame search) -> acquisition -> tracking -> refit -> whitening -> detection
+    framing (with frame search) -> acquisition -> tracking -> refit -> alignment -> whitening -> detection
     (-> soft output, when asked for)
 
 On a dispersive channel other stages follow framing, see `spatiq.receiver.dispersive_chain`.
@@ -19,6 +19,7 @@ import numpy as np
 from spatiq.errors import InputError
 from spatiq.link.description import Link
 from spatiq.receiver.acquisition import Acquisition
+from spatiq.receiver.alignment import Alignment
 from spatiq.receiver.detection import Detection, find_detector
 from spatiq.receiver.dispersive_chain import dispersive_stages
 from spatiq.receiver.edge_frames import EdgeFrames
@@ -124,10 +125,14 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     if options.channel == "dispersive":
         return dispersive_stages(link, options, acquisition, clock_std, walk)
     refit = Refit(parts.bank, parts.tables, clock_std, walk)
-    stages: list[Stage] = [
+    reception: list[Stage] = [
         acquisition,
         Tracking(parts.bank, parts.tables, clock_std, walk),
         refit,
+    ]
+    stages: list[Stage] = [
+        *reception,
+        Alignment(refit, reception),
         Whitening(refit),
         Detection(link.codebook, find_detector(options.detector), options.compare_two_step),
     ]

@@ -20,6 +20,7 @@ class LostFrame:
     reason: str  # "cut off by the start", "cut off by the end", "not found", "in a gap", ...
 
 
+RECEIVE_ALIGNED, ANTENNAS_ALIGNED = 1, 2
 NOT_FOUND = "not found"
 NOT_FINITE = "samples not finite"
 
@@ -55,6 +56,13 @@ class FrameBatch:
         frequency_var: float64 (F,); variance of the carrier estimate, (radians per symbol)^2.
         timing_var, step_var: float64 (F,); variances of t0 and step.
         antenna_energy: float64 (F, Nt); sum of |x_a|^2 behind the channel estimate.
+        delay_score, delay_energy: float64 (F, Nr, Nt); delay score and energy of each pair of
+            receive channel and antenna, see `delay_scores`.
+
+    Filled by alignment, relative to the mean over those measured; NaN where it cannot be told:
+        receive_delay, receive_delay_var: float64 (F, Nr); samples.
+        antenna_delay, antenna_delay_var: float64 (F, Nt); symbol periods.
+        aligned: uint8 (F,); which delays were taken out: `RECEIVE_ALIGNED`, `ANTENNAS_ALIGNED`.
 
     Filled by symbol sampling and detection:
         symbols: complex64 (F, Kp, Nr); payload vectors, carrier phase removed.
@@ -87,6 +95,13 @@ class FrameBatch:
     timing_var: NDArray[np.float64]
     step_var: NDArray[np.float64]
     antenna_energy: NDArray[np.float64]
+    delay_score: NDArray[np.float64]
+    delay_energy: NDArray[np.float64]
+    receive_delay: NDArray[np.float64]
+    receive_delay_var: NDArray[np.float64]
+    antenna_delay: NDArray[np.float64]
+    antenna_delay_var: NDArray[np.float64]
+    aligned: NDArray[np.uint8]
     symbols: NDArray[np.complex64]
     words: NDArray[np.int64]
     header_freedom: int = 0
@@ -128,6 +143,13 @@ def empty_batch(
         timing_var=np.zeros(count),
         step_var=np.zeros(count),
         antenna_energy=np.zeros((count, antennas)),
+        delay_score=np.zeros((count, channels, antennas)),
+        delay_energy=np.zeros((count, channels, antennas)),
+        receive_delay=np.full((count, channels), np.nan),
+        receive_delay_var=np.full((count, channels), np.nan),
+        antenna_delay=np.full((count, antennas), np.nan),
+        antenna_delay_var=np.full((count, antennas), np.nan),
+        aligned=np.zeros(count, np.uint8),
         symbols=np.zeros((count, payload, channels), np.complex64),
         words=np.zeros((count, payload), np.int64),
     )

@@ -66,10 +66,18 @@ class FrameGeometry:
 def frame_geometry(link: Link, bank: FilterBank, options: ReceiverOptions) -> FrameGeometry:
     """Windows large enough for the frame at twice the expected clock offset."""
     length = link.layout.length
-    guard = 2 + int(np.ceil(length * options.max_clock_ppm * 2e-6))
+    guard = 1 + skew(bank.samples_per_symbol) + int(np.ceil(length * options.max_clock_ppm * 2e-6))
     span = int(np.ceil((length + 2 * guard) * bank.samples_per_symbol))
     window = span + 2 * bank.half + 4
     return FrameGeometry(length, guard, window, bank.half, bank.samples_per_symbol)
+
+
+def skew(samples_per_symbol: float) -> int:
+    """Symbol periods by which the search may take a frame early or late.
+
+    Half the range of t0, or receive channels four samples apart, of which it found one.
+    """
+    return max(1, int(np.ceil(4.0 / samples_per_symbol)))
 
 
 def clip_levels(recording: Recording) -> tuple[float, float]:
@@ -225,7 +233,8 @@ class Framing:
 
     def _resume(self, found: Detection) -> int:
         """Lag at which the search goes on after a frame."""
-        drift = 1 + int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
+        drift = int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
+        drift += skew(self._geometry.samples_per_symbol)
         return found.lag + LAGS_PER_SYMBOL * max(self._geometry.length - drift, 1)
 
     def _expected(self, search: FrameSearch, last: Detection | None) -> Detection | None:

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from spatiq.errors import InputError
 from spatiq.kernels import C64, F32, I64, inlined, kernel
+from spatiq.receiver.pulse_correlation import PulseCorrelation, pulse_correlation
 from spatiq.signal.pulses import Pulse
 
 # Table steps per symbol. The nearest row is read; its instant is off by a uniform error of at most
@@ -37,6 +38,7 @@ class FilterBank:
             4 pi^2 xi / samples_per_symbol^2 with xi of the modified Cramer-Rao bound for timing.
         curvature: float64, shape (M+1,); correlation of the pulse's derivative with itself m symbol
             periods on, per sample squared; curvature[0] is slope_energy.
+        correlation: of the pulse with itself at any distance.
     """
 
     samples_per_symbol: float
@@ -46,6 +48,7 @@ class FilterBank:
     slopes: NDArray[np.float32]
     slope_energy: float
     curvature: NDArray[np.float64]
+    correlation: PulseCorrelation
 
     @property
     def parts(self) -> tuple[NDArray[np.float32], NDArray[np.float32], int, float]:
@@ -84,6 +87,7 @@ def filter_bank(pulse: Pulse, samples_per_symbol: float) -> FilterBank:
         slopes=slopes.astype(np.float32),
         slope_energy=slope_energy,
         curvature=_curvature(pulse, samples_per_symbol) * slope_energy,
+        correlation=pulse_correlation(pulse, samples_per_symbol),
     )
 
 

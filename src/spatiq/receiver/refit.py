@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.kernels import C64, F32, F64
+from spatiq.receiver.alignment_kernels import delay_scores
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
@@ -34,7 +35,7 @@ class Refit:
     rounds: int = 2
 
     def __call__(self, batch: FrameBatch) -> FrameBatch:
-        """Refine t0, step, phase, channel, noise; fill symbols, residual and the variances."""
+        """Refine t0, step, phase, channel, noise; fill symbols, residual, delay scores, variances."""
         channels, antennas = batch.channel.shape[1:]
         room = _room(self.tables, channels, antennas)
         for i in range(batch.count):
@@ -72,6 +73,16 @@ class Refit:
                 batch.antenna_energy[i],
             )
         batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = timing
+        delay_scores(
+            room[0],
+            room[1],
+            room[4],
+            batch.channel[i],
+            tables.active,
+            bank.correlation.slope_at(1.0),
+            batch.delay_score[i],
+            batch.delay_energy[i],
+        )
         residual_covariance(
             room[0],
             room[4],
