@@ -15,7 +15,7 @@ from spatiq.metrics.intervals import clopper_pearson
 from spatiq.metrics.loss import local_loss
 from spatiq.metrics.prediction import predict_ber
 from spatiq.metrics.reference_following import Numbering
-from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.frame_batch import ANTENNAS_ALIGNED, RECEIVE_ALIGNED, FrameBatch
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.recording.recording import Recording
 
@@ -183,6 +183,8 @@ def _marks(columns: Columns, batch: FrameBatch, numbering: Numbering, link: Link
     marks[batch.clipped > 0] |= np.uint32(Mark.CLIPPED)
     marks[~numbering.resolved] |= np.uint32(Mark.REFERENCE_UNKNOWN)
     marks[batch.coloured] |= np.uint32(Mark.COLOURED_NOISE)
+    marks[(batch.aligned & RECEIVE_ALIGNED) > 0] |= np.uint32(Mark.RECEIVE_DELAYS)
+    marks[(batch.aligned & ANTENNAS_ALIGNED) > 0] |= np.uint32(Mark.ANTENNA_DELAYS)
     marks[columns["crc_ok"] == 0] |= np.uint32(Mark.CRC_FAILED)
     channels = batch.channel.shape[1]
     header = max(batch.header_freedom, 1)

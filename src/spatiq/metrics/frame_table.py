@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from spatiq.metrics.path_figures import PathFigures
 from spatiq.receiver.frame_batch import LostFrame
 
 
@@ -25,6 +26,8 @@ class Mark(IntFlag):
     CRC_FAILED = 4
     TRACKING_LOST = 8  # the carrier-phase or timing track left its expected error
     COLOURED_NOISE = 16  # noise differs between receive channels or is correlated: whitened
+    RECEIVE_DELAYS = 4096  # receive channels differ in delay: taken out
+    ANTENNA_DELAYS = 8192  # transmit antennas differ in delay: taken into account
 
 
 @dataclass(frozen=True)
@@ -116,6 +119,7 @@ class MeasuredFrames:
             if none.
         antenna_power: float64, shape (F, Nt); ||h_a||^2 / Nr.
         lost: frames found to be lost before or between these.
+        paths: figures of each receive channel and each antenna's path.
         symbols: complex64, shape (F, Kp, Nr); received payload vectors, carrier removed; or None.
         white_channel, white_noise: channel (F, Nr, Nt) and N0 (F,) after whitening, as detected
             with; the same as channel and noise_power where the noise is white.
@@ -142,6 +146,7 @@ class MeasuredFrames:
     antenna_error_energy: NDArray[np.float64] | None = None
     antenna_reference_energy: NDArray[np.float64] | None = None
     llr: NDArray[np.float32] | None = None
+    paths: PathFigures | None = None
     lost: list[LostFrame] = field(default_factory=list)
 
     @property

@@ -15,6 +15,7 @@ from spatiq.link.description import Link
 from spatiq.metrics.figures import as_received, channel_error_variance, fill_figures
 from spatiq.metrics.frame_table import MeasuredFrames, empty_columns
 from spatiq.metrics.measuring_kernels import compare_words, count_bits, error_vectors
+from spatiq.metrics.path_figures import path_figures
 from spatiq.metrics.reference_following import Numberer, Numbering, ReferenceFollower
 from spatiq.metrics.skipped_frames import SkippedFrames, places_in_stream
 from spatiq.receiver.chain import Progress, Stage, receive
@@ -147,6 +148,7 @@ class Measuring:
             words_decided=batch.words,
             words_sent=sent,
             llr=batch.llr,
+            paths=path_figures(batch, seen, self.link, self.recording.sample_rate),
         )
 
     def _reference(self, numbering: Numbering) -> NDArray[np.uint8]:

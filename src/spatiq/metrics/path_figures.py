@@ -3,14 +3,19 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
-from spatiq.link.description import Link
-from spatiq.receiver.frame_batch import FrameBatch
+if TYPE_CHECKING:
+    from spatiq.link.description import Link
+    from spatiq.receiver.frame_batch import FrameBatch
 
 Floats = NDArray[np.float64]
+
+# What a receive channel carried, over a whole recording.
+NOTHING, NO_SIGNAL, SIGNAL = "nothing at all", "no signal", "signal"
 
 # Field of `PathFigures` -> unit, meaning; of receive channels first, of antennas then.
 RECEIVE: dict[str, tuple[str, str]] = {
@@ -33,7 +38,7 @@ ANTENNA: dict[str, tuple[str, str]] = {
 class PathFigures:
     """Float64 arrays, (F, Nr) or (F, Nt); NaN where a figure could not be measured.
 
-    Attributes: as in `RECEIVE` and `ANTENNA`.
+    Attributes: as in `RECEIVE` and `ANTENNA`; sample_rate in Hz.
     """
 
     receive_power: Floats
@@ -43,15 +48,19 @@ class PathFigures:
     receive_delay_std: Floats
     antenna_delay: Floats
     antenna_delay_std: Floats
+    sample_rate: float
 
 
-def path_figures(batch: FrameBatch, seen: FrameBatch, link: Link) -> PathFigures:
+def path_figures(
+    batch: FrameBatch, seen: FrameBatch, link: Link, sample_rate: float
+) -> PathFigures:
     """Figures of a batch.
 
     Args:
         batch: received frames, as detected (whitened where the noise is not white).
         seen: the same at the receive antennas.
         link: the link description.
+        sample_rate: Hz.
     """
     vectors = link.codebook.vectors
     moments = vectors.T @ vectors.conj() / len(vectors)
@@ -74,6 +83,7 @@ def path_figures(batch: FrameBatch, seen: FrameBatch, link: Link) -> PathFigures
         receive_delay_std=np.sqrt(batch.receive_delay_var),
         antenna_delay=batch.antenna_delay.copy(),
         antenna_delay_std=np.sqrt(batch.antenna_delay_var),
+        sample_rate=sample_rate,
     )
 
 
@@ -83,4 +93,4 @@ def channel_noise(batch: FrameBatch) -> Floats:
     for i in np.flatnonzero(batch.coloured):
         back = np.linalg.pinv(batch.whitener[i])
         noise[i] = np.einsum("rp,pq,rq->r", back, batch.residual[i], back.conj()).real
-    return noise
+    return np.asarray(noise, np.float64)

@@ -9,11 +9,13 @@ import numpy as np
 import scipy.stats
 from numpy.typing import NDArray
 
-from spatiq.metrics.path_figures import PathFigures
+from spatiq.metrics.path_figures import NO_SIGNAL, NOTHING, SIGNAL, PathFigures
 
 Floats = NDArray[np.float64]
 
-NOTHING, NO_SIGNAL, SIGNAL = "nothing at all", "no signal", "signal"
+NO_DELAY: dict[str, float | None] = dict.fromkeys(
+    ("delay_symbols", "delay_std_symbols", "delay_ns", "delay_std_ns")
+)
 _CHANCE = 1e-6  # that a channel with noise alone passes for one that carries the signal
 _MOST_SETS = 64
 
@@ -69,6 +71,8 @@ class PathSummary:
     """What receive channels and antennas showed."""
 
     frames: int = 0
+    sample_rate: float | None = None
+    _antennas_used: int = 0
     _level: Floats | None = None
     _receive: PooledDelays = field(default_factory=PooledDelays)
     _antennas: PooledDelays = field(default_factory=PooledDelays)
@@ -82,12 +86,12 @@ class PathSummary:
         self._level[2] += paths.receive_noise.sum(axis=0)
         self._level[3] += (paths.receive_noise**2).sum(axis=0)
         self._level[4] += antennas * np.nansum(paths.receive_excess, axis=0)
-        self._antennas_used = antennas
+        self._antennas_used, self.sample_rate = antennas, paths.sample_rate
         self._receive.add(paths.receive_delay, paths.receive_delay_std)
         self._antennas.add(paths.antenna_delay, paths.antenna_delay_std)
         self.frames += len(paths.receive_power)
 
-    def receive_channels(self, sample_rate: float | None) -> list[dict[str, Any]]:
+    def receive_channels(self) -> list[dict[str, Any]]:
         """One entry for each receive channel; None where a figure could not be measured."""
         if self._level is None or not self.frames:
             return []
@@ -111,8 +115,8 @@ class PathSummary:
                     "snr_db": None if snr is None else float(snr),
                     "delay_samples": delay,
                     "delay_std_samples": std,
-                    "delay_ns": _scaled(delay, sample_rate),
-                    "delay_std_ns": _scaled(std, sample_rate),
+                    "delay_ns": _scaled(delay, self.sample_rate),
+                    "delay_std_ns": _scaled(std, self.sample_rate),
                 }
             )
         return rows

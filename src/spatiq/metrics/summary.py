@@ -13,6 +13,7 @@ from spatiq.link.description import Link
 from spatiq.metrics.frame_table import Mark, MeasuredFrames
 from spatiq.metrics.intervals import clopper_pearson
 from spatiq.metrics.loss import pooled_loss
+from spatiq.metrics.path_summary import NO_DELAY, PathSummary
 
 _KEPT_FRAMES = 64  # channels kept for the implementation loss, spread over the recording
 _SPREAD = ("cfo_hz", "cfo_ppm", "clock_ppm", "snr_db")
@@ -88,6 +89,7 @@ class Summary:
     _spreads: dict[str, Spread] = field(default_factory=dict)
     _kept: list[tuple[int, Any]] = field(default_factory=list)
     _stride: int = 1
+    _paths: PathSummary = field(default_factory=PathSummary)
 
     def __post_init__(self) -> None:
         """Start all sums at nothing."""
@@ -122,6 +124,9 @@ class Summary:
         self._aided += int(columns["evm_data_aided"].sum())
         self._confusion += measured.confusion.sum(axis=0)
         self._add_antennas(measured)
+        if measured.paths is not None:
+            used = int(np.count_nonzero(np.any(self.link.codebook.vectors != 0, axis=0)))
+            self._paths.add(measured.paths, used)
         self._add_predictions(measured)
         self._keep(measured)
         self.frames += measured.count
@@ -192,6 +197,7 @@ class Summary:
             "evm": self._evm("evm"),
             "equalised_evm": self._evm("equalised"),
             "antennas": self._antennas(),
+            "receive_channels": self._paths.receive_channels(),
             **{name: spread.as_dict() for name, spread in self._spreads.items()},
             "crc": {"passed": passed, "failed": failed} if passed + failed else None,
             "marks": {name: n for name, n in self.marks.items() if n},
@@ -253,9 +259,11 @@ class Summary:
 
     def _antennas(self) -> list[dict[str, Any]]:
         rows = []
+        delays = self._paths.antenna_delays(self.link.symbol_rate_hz)
+        delays = delays or [NO_DELAY] * self.link.antennas
         for a in range(self.link.antennas):
             error, reference, power, frames = self._antenna[:, a]
             evm = 100 * float(np.sqrt(error / reference)) if reference > 0 else None
             mean = float(power / frames) if frames > 0 else None
-            rows.append({"antenna": a, "evm_percent": evm, "power": mean})
+            rows.append({"antenna": a, "evm_percent": evm, "power": mean, **delays[a]})
         return rows

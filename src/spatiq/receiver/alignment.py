@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 from spatiq.receiver.delay_evidence import (
     DelayEvidence,
     delay_evidence,
-    loss_share,
+    evidence_scale,
     relative,
 )
 from spatiq.receiver.fractional_delay import advanced
@@ -63,9 +63,9 @@ class Alignment:
 
     def _evidence(self, batch: FrameBatch, axis: int) -> DelayEvidence:
         channels = batch.channel.shape[1]
-        share = loss_share(self.refit.bank.correlation, self.refit.tables.active.size, channels)
+        scale = evidence_scale(self.refit.bank.correlation, self.refit.tables.active.size, channels)
         noise = np.einsum("frr->fr", batch.residual).real
-        return delay_evidence(batch.delay_score, batch.delay_energy, noise, share, axis)
+        return delay_evidence(batch.delay_score, batch.delay_energy, noise, scale, axis)
 
     def _elsewhere(self, batch: FrameBatch) -> NDArray[np.bool_]:
         """Frames with a channel that shows little signal where it is looked for, but much else.

@@ -26,42 +26,53 @@ def delay_scores(
     holds, without a filter's work.
 
     Args:
-        y, reference: float32 (Ka, 2, Nr); received vectors and H E[x].
+        y, reference: float32 (Ka, 2, Nr); received vectors, and H E[x] as they were fitted to.
         mean: complex64 (Ka, Nt); E[x].
         channel: complex128 (Nr, Nt).
         active: (Ka,); periods.
         slope: g'(1) of the pulse's autocorrelation, per symbol period; negative.
         score, energy: float64 (Nr, Nt); filled.
     """
-    score[:] = 0.0
-    energy[:] = 0.0
     channels, antennas = channel.shape
+    pushes, powers = np.zeros((antennas, channels)), np.zeros((antennas, channels))
+    before, here, after = np.zeros((3, 2, channels), np.float32)
     last = active.size - 1
-    error_re = np.empty(channels)
-    error_im = np.empty(channels)
-    for i in range(active.size):
-        neighbours = 0.0
-        error_re[:] = 0.0
-        error_im[:] = 0.0
-        if i < last and active[i + 1] == active[i] + 1:
-            neighbours += 1.0
-            for r in range(channels):
-                error_re[r] -= y[i + 1, 0, r] - reference[i + 1, 0, r]
-                error_im[r] -= y[i + 1, 1, r] - reference[i + 1, 1, r]
+    for r in range(channels):
+        for part in range(2):
+            after[part, r] = y[0, part, r] - reference[0, part, r]
+    for i in range(last + 1):
+        before, here, after = here, after, before
+        # Errors of the neighbours, weighted 0 where there is a gap in between.
+        gate_before, gate_after = np.float32(0.0), np.float32(0.0)
         if i > 0 and active[i - 1] == active[i] - 1:
-            neighbours += 1.0
-            for r in range(channels):
-                error_re[r] += y[i - 1, 0, r] - reference[i - 1, 0, r]
-                error_im[r] += y[i - 1, 1, r] - reference[i - 1, 1, r]
+            gate_before = np.float32(1.0)
+        if i < last and active[i + 1] == active[i] + 1:
+            gate_after = np.float32(1.0)
+        if i < last:
+            for part in range(2):
+                for r in range(channels):
+                    after[part, r] = y[i + 1, part, r] - reference[i + 1, part, r]
+        neighbours = gate_before + gate_after
+        only, some = -1, 0
         for a in range(antennas):
+            if mean[i, a].real != 0.0 or mean[i, a].imag != 0.0:
+                only = a
+                some += 1
+        for a in range(only if some == 1 else 0, only + 1):
             x = mean[i, a]
-            if x.real == 0.0 and x.imag == 0.0:
+            if some > 1 and x.real == 0.0 and x.imag == 0.0:
                 continue
             for r in range(channels):
-                v = channel[r, a] * x
-                score[r, a] += v.real * error_re[r] + v.imag * error_im[r]
-                energy[r, a] += neighbours * (v.real * v.real + v.imag * v.imag)
+                if some == 1:
+                    re, im = reference[i, 0, r], reference[i, 1, r]
+                else:
+                    v = channel[r, a] * x
+                    re, im = np.float32(v.real), np.float32(v.imag)
+                error_re = gate_before * before[0, r] - gate_after * after[0, r]
+                error_im = gate_before * before[1, r] - gate_after * after[1, r]
+                pushes[a, r] += re * error_re + im * error_im
+                powers[a, r] += neighbours * (re * re + im * im)
     for r in range(channels):
         for a in range(antennas):
-            score[r, a] *= slope
-            energy[r, a] *= slope * slope
+            score[r, a] = slope * pushes[a, r]
+            energy[r, a] = slope * slope * powers[a, r]

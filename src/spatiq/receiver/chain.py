@@ -1,7 +1,7 @@
 """The chain: recording and link in, batches of received frames out.
 
-    framing (with frame search) -> acquisition -> tracking -> refit -> alignment -> whitening -> detection
-    (-> soft output, when asked for)
+    framing (with frame search) -> acquisition -> tracking -> refit -> alignment -> whitening
+    -> detection (-> soft output, when asked for)
 
 On a dispersive channel other stages follow framing, see `spatiq.receiver.dispersive_chain`.
 

@@ -8,6 +8,8 @@ chi-square distributed; where residuals were fitted, a little less than that.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
+from typing import NamedTuple
 
 import numpy as np
 import scipy.stats
@@ -41,18 +43,18 @@ class DelayEvidence:
 
 
 def delay_evidence(
-    score: Floats, energy: Floats, noise: Floats, share: float, axis: int
+    score: Floats, energy: Floats, noise: Floats, scale: EvidenceScale, axis: int
 ) -> DelayEvidence:
     """Evidence over receive channels (axis 1) or transmit antennas (axis 2).
 
     Args:
         score, energy: float64 (F, Nr, Nt); of `delay_scores`.
         noise: float64 (F, Nr); N0 of each receive channel.
-        share: what the statistic is multiplied with to give the interference, see `loss_share`.
+        scale: see `EvidenceScale`.
         axis: which of the two is told apart.
     """
     other = 3 - axis
-    power = energy.mean(axis=2, keepdims=True)
+    power = energy.sum(axis=2, keepdims=True) / scale.full
     level = np.maximum(noise[:, :, None], _FLOOR * power)
     alive = level > 0
     weight = 2.0 * np.divide(energy, level, out=np.zeros_like(energy), where=alive)
@@ -64,19 +66,40 @@ def delay_evidence(
     apart = np.where(told, delay - common[:, None], 0.0)
     statistic = np.sum(information * apart**2, axis=1)
     freedom = np.maximum(told.sum(axis=1) - 1, 0)
-    limit = np.where(freedom > 0, scipy.stats.chi2.isf(CHANCE, np.maximum(freedom, 1)), np.inf)
-    return DelayEvidence(*relative(delay, variance), share * statistic, statistic > limit)
+    limit = _limits(delay.shape[1])[freedom]
+    return DelayEvidence(*relative(delay, variance), scale.share * statistic, statistic > limit)
 
 
-def loss_share(correlation: PulseCorrelation, periods: int, channels: int) -> float:
-    """Interference over N0 that unit statistic of so many periods and channels stands for.
+class EvidenceScale(NamedTuple):
+    """What sums over a frame of so many periods amount to.
+
+    Attributes:
+        share: interference over N0 that unit statistic stands for.
+        full: energy of a receive channel with unit received power.
+    """
+
+    share: float
+    full: float
+
+
+@lru_cache(maxsize=8)
+def evidence_scale(correlation: PulseCorrelation, periods: int, channels: int) -> EvidenceScale:
+    """Scale of a frame's evidence.
 
     A delay d leaves d^2 times the sum of g'(m)^2 over all neighbours m; the statistic has seen the
     two nearest, twice over N0.
     """
     lags = np.arange(1.0, max(correlation.reach, 2.0))
     slopes = correlation.at(correlation.slope, lags)
-    return float(2.0 * np.sum(slopes**2) / (4.0 * slopes[0] ** 2 * periods * channels))
+    full = 2.0 * float(slopes[0] ** 2) * periods
+    return EvidenceScale(float(np.sum(slopes**2)) / (full * channels), full)
+
+
+@lru_cache(maxsize=8)
+def _limits(most: int) -> Floats:
+    """Quantile of chi-square for 0 to `most` degrees of freedom; none for 0."""
+    quantiles = scipy.stats.chi2.isf(CHANCE, np.arange(1, most + 1))
+    return np.concatenate([[np.inf], quantiles])
 
 
 def estimates(total: Floats, information: Floats) -> tuple[Floats, Floats]:

@@ -31,6 +31,9 @@ def advanced(planes: NDArray[np.float32], delays: NDArray[np.float64]) -> NDArra
         into, out_of = slice(max(-whole, 0), count - max(whole, 0)), max(whole, 0)
         taken = slice(out_of, out_of + into.stop - into.start)
         samples[into] = planes[r, 0, taken] + 1j * planes[r, 1, taken]
+        if delays[r] == whole:
+            moved[r, 0, into], moved[r, 1, into] = planes[r, 0, taken], planes[r, 1, taken]
+            continue
         turn = np.exp(2j * np.pi * frequency * (delays[r] - whole))
         fine = scipy.fft.ifft(scipy.fft.fft(samples) * turn)[:count]
         moved[r, 0], moved[r, 1] = fine.real, fine.imag

@@ -40,7 +40,7 @@ def header_outputs(
 def offset_grid(reach: float) -> NDArray[np.float64]:
     """Offsets from -reach to reach, symbol periods."""
     count = int(np.ceil(reach / _SPACING))
-    return np.arange(-count, count + 1) * _SPACING
+    return np.asarray(np.arange(-count, count + 1) * _SPACING, np.float64)
 
 
 def receive_delays(

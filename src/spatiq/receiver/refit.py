@@ -35,7 +35,7 @@ class Refit:
     rounds: int = 2
 
     def __call__(self, batch: FrameBatch) -> FrameBatch:
-        """Refine t0, step, phase, channel, noise; fill symbols, residual, delay scores, variances."""
+        """Refine t0, step, phase, channel, noise; fill symbols, residuals, scores, variances."""
         channels, antennas = batch.channel.shape[1:]
         room = _room(self.tables, channels, antennas)
         for i in range(batch.count):

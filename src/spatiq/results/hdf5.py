@@ -17,6 +17,7 @@ import h5py
 import numpy as np
 
 from spatiq.metrics.frame_table import COLUMNS, Mark, MeasuredFrames
+from spatiq.metrics.path_figures import ANTENNA, RECEIVE
 from spatiq.receiver.frame_batch import LostFrame
 from spatiq.results.growing import GrowingDataset
 from spatiq.results.plain import json_text, leaves, plain
@@ -49,6 +50,11 @@ PER_ANTENNA: dict[str, str] = {
     "channel/error_variance": "variance of each coefficient of the estimated channel",
     "antennas/error_energy": "sum of |y - h s|^2 behind evm_percent: add over frames to pool",
     "antennas/reference_energy": "sum of |h s|^2 behind evm_percent",
+}
+# Dataset -> field of `PathFigures`; NaN where there are none.
+PER_PATH: dict[str, str] = {
+    name.replace("receive_", "receive/").replace("antenna_", "antennas/"): name
+    for name in (*RECEIVE, *ANTENNA)
 }
 LLR_SIGN = "positive: 0 is the likelier value of the bit"
 
@@ -164,6 +170,9 @@ class ResultsWriter:
         add("antennas/power", "f8", (antennas,), power)
         for name, meaning in PER_ANTENNA.items():
             add(name, "f8", (antennas,), meaning)
+        for name, figure in PER_PATH.items():
+            unit, meaning = (RECEIVE | ANTENNA)[figure]
+            add(name, "f8", (channels if figure in RECEIVE else antennas,), meaning, unit)
         if periods:
             for part in ("real", "imag"):
                 meaning = f"{part} part of the received payload vectors, carrier removed"
@@ -203,6 +212,12 @@ class ResultsWriter:
             strict=True,
         ):
             values[name] = np.full(frames.antenna_power.shape, np.nan) if rows is None else rows
+        for name, figure in PER_PATH.items():
+            if frames.paths is not None:
+                values[name] = getattr(frames.paths, figure)
+            else:
+                width = frames.channel.shape[1 if figure in RECEIVE else 2]
+                values[name] = np.full((frames.count, width), np.nan)
         if "symbols/real" in self._growing:
             if frames.symbols is None:
                 raise ValueError("the options keep the symbols, but this batch has none")

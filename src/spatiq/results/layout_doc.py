@@ -10,7 +10,8 @@ from importlib.resources import files
 from pathlib import Path
 
 from spatiq.metrics.frame_table import COLUMNS, Mark
-from spatiq.results.hdf5 import LOST
+from spatiq.metrics.path_figures import ANTENNA, RECEIVE
+from spatiq.results.hdf5 import LOST, PER_PATH
 from spatiq.results.provenance import FIELDS
 
 
@@ -25,12 +26,18 @@ def tables() -> dict[str, str]:
     """Name of each generated part -> its Markdown table."""
     columns = [[f"`{c.name}`", c.dtype, c.unit, c.meaning] for c in COLUMNS]
     marks = [[str(int(m)), (m.name or "").lower().replace("_", " ")] for m in Mark if m]
+    figures = RECEIVE | ANTENNA
     lost = [[f"`{name}`", *entry] for name, entry in LOST.items()]
+    paths = [
+        [f"`{name}`", "f8", "(F, Nr)" if figure in RECEIVE else "(F, Nt)", *figures[figure]]
+        for name, figure in PER_PATH.items()
+    ]
     heads = ["dataset", "type", "unit", "meaning"]
     return {
         "columns": _table(heads, columns),
         "marks": _table(["bit", "set when"], marks),
         "lost": _table(heads, lost),
+        "paths": _table(["dataset", "type", "shape", "unit", "meaning"], paths),
         "provenance": _table(["dataset", "text"], [[f"`{k}`", v] for k, v in FIELDS.items()]),
     }
 

@@ -9,8 +9,14 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
+from spatiq.metrics.path_figures import SIGNAL
 from spatiq.results.reader import Results
-from spatiq.results.text_tables import antenna_table, confusion_table, frames_table
+from spatiq.results.text_tables import (
+    antenna_table,
+    channel_table,
+    confusion_table,
+    frames_table,
+)
 from spatiq.results.wording import (
     DASH,
     count,
@@ -46,6 +52,7 @@ def show_results(results: Results, console: Console, *, rows: int = 20) -> None:
             confusion_table(results),
         ),
         ("transmit antennas", antenna_table(summary)),
+        ("receive channels", channel_table(summary)),
         ("frames", frames_table(results, rows)),
     ):
         if table is not None:
@@ -150,6 +157,10 @@ def _frames(summary: dict[str, Any]) -> Iterator[Line]:
     marks = {name.lower().replace("_", " "): n for name, n in (summary.get("marks") or {}).items()}
     if any(marks.values()):
         yield "frames marked", listing(marks), "", ""
+    silent = [c for c in summary.get("receive_channels") or [] if c["state"] != SIGNAL]
+    if silent:
+        told = ", ".join(f"{c['channel']} carried {c['state']}" for c in silent)
+        yield "receive channels", told.replace("carried no ", "carried noise, no "), "", ""
     crc = summary.get("crc")
     passed, failed = pick(crc, "passed"), pick(crc, "failed")
     if passed or failed:

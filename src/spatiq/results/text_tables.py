@@ -17,6 +17,7 @@ from spatiq.results.wording import (
     count,
     fixed,
     marks_text,
+    plus_minus,
     ratio,
 )
 
@@ -83,11 +84,42 @@ def antenna_table(summary: dict[str, Any]) -> Table | None:
     antennas = summary.get("antennas")
     if not antennas:
         return None
-    table = _table("EVM rms %", "power, dB of full scale")
+    timed = any(row.get("delay_symbols") is not None for row in antennas)
+    delays = ("delay, symbol periods", "delay, ns") if timed else ()
+    table = _table("EVM rms %", "power, dB of full scale", *delays)
     for row in antennas:
         power = row["power"]
         decibel = 10 * math.log10(power) if power else None
-        table.add_row(f"  {row['antenna']}", fixed(row["evm_percent"]), fixed(decibel))
+        table.add_row(
+            f"  {row['antenna']}",
+            fixed(row["evm_percent"]),
+            fixed(decibel),
+            *(
+                plus_minus(row.get(f"delay_{unit}"), row.get(f"delay_std_{unit}"))
+                for unit in (("symbols", "ns") if timed else ())
+            ),
+        )
+    return table
+
+
+def channel_table(summary: dict[str, Any]) -> Table | None:
+    """Levels and delay of each receive channel; None when the summary has none."""
+    channels = summary.get("receive_channels")
+    if not channels:
+        return None
+    table = _table(
+        "carries", "signal, dB of full scale", "noise", "SNR dB", "delay, samples", "delay, ns"
+    )
+    for row in channels:
+        levels = (row["signal_power"], row["noise_power"])
+        table.add_row(
+            f"  {row['channel']}",
+            row["state"],
+            *(fixed(10 * math.log10(x) if x else None) for x in levels),
+            fixed(row["snr_db"]),
+            plus_minus(row["delay_samples"], row["delay_std_samples"]),
+            plus_minus(row["delay_ns"], row["delay_std_ns"]),
+        )
     return table
 
 

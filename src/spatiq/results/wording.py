@@ -42,6 +42,14 @@ def fixed(value: float | None, unit: str = "", decimals: int = 2) -> str:
     return f"{text} {unit}" if unit else text
 
 
+def plus_minus(value: float | None, std: float | None) -> str:
+    """A figure with its standard deviation, to the decimals that this has two digits of."""
+    if value is None or std is None or not std > 0 or not math.isfinite(value):
+        return DASH
+    decimals = min(max(0, 1 - math.floor(math.log10(std))), 6)
+    return f"{value:.{decimals}f} +- {std:.{decimals}f}"
+
+
 def count(value: int | None) -> str:
     """A whole number with its thousands set apart."""
     return DASH if value is None else f"{value:,}"
