@@ -16,6 +16,7 @@ Floats = NDArray[np.float64]
 
 # What a receive channel carried, over a whole recording.
 NOTHING, NO_SIGNAL, SIGNAL = "nothing at all", "no signal", "signal"
+SILENT = (NOTHING, NO_SIGNAL)
 
 # Field of `PathFigures` -> unit, meaning; of receive channels first, of antennas then.
 RECEIVE: dict[str, tuple[str, str]] = {

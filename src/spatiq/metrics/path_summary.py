@@ -73,6 +73,7 @@ class PathSummary:
     frames: int = 0
     sample_rate: float | None = None
     _antennas_used: int = 0
+    _told: int = 0
     _level: Floats | None = None
     _receive: PooledDelays = field(default_factory=PooledDelays)
     _antennas: PooledDelays = field(default_factory=PooledDelays)
@@ -85,6 +86,7 @@ class PathSummary:
         self._level[1] += (paths.receive_power**2).sum(axis=0)
         self._level[2] += paths.receive_noise.sum(axis=0)
         self._level[3] += (paths.receive_noise**2).sum(axis=0)
+        self._told += int(np.isfinite(paths.receive_excess).any(axis=1).sum())
         self._level[4] += antennas * np.nansum(paths.receive_excess, axis=0)
         self._antennas_used, self.sample_rate = antennas, paths.sample_rate
         self._receive.add(paths.receive_delay, paths.receive_delay_std)
@@ -133,11 +135,16 @@ class PathSummary:
             for delay, std in self._antennas.pooled()
         ]
 
-    def _state(self, level: float, excess: float, largest: float) -> str:
-        """Noise alone: twice the excess is chi-square, two degrees for each coefficient."""
+    def _state(self, level: float, excess: float, largest: float) -> str | None:
+        """Noise alone: twice the excess is chi-square, two degrees for each coefficient.
+
+        None where the receiver estimated no flat channel.
+        """
         if level <= 1e-9 * largest:
             return NOTHING
-        freedom = 2 * self._antennas_used * self.frames
+        if not self._told:
+            return None
+        freedom = 2 * self._antennas_used * self._told
         chance = scipy.stats.chi2.sf(2.0 * excess, freedom)
         return SIGNAL if chance < _CHANCE else NO_SIGNAL
 

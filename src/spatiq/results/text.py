@@ -9,7 +9,7 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from spatiq.metrics.path_figures import SIGNAL
+from spatiq.metrics.path_figures import SILENT
 from spatiq.results.reader import Results
 from spatiq.results.text_tables import (
     antenna_table,
@@ -157,7 +157,7 @@ def _frames(summary: dict[str, Any]) -> Iterator[Line]:
     marks = {name.lower().replace("_", " "): n for name, n in (summary.get("marks") or {}).items()}
     if any(marks.values()):
         yield "frames marked", listing(marks), "", ""
-    silent = [c for c in summary.get("receive_channels") or [] if c["state"] != SIGNAL]
+    silent = [c for c in summary.get("receive_channels") or [] if c["state"] in SILENT]
     if silent:
         told = ", ".join(f"{c['channel']} carried {c['state']}" for c in silent)
         yield "receive channels", told.replace("carried no ", "carried noise, no "), "", ""

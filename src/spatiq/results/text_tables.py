@@ -114,7 +114,7 @@ def channel_table(summary: dict[str, Any]) -> Table | None:
         levels = (row["signal_power"], row["noise_power"])
         table.add_row(
             f"  {row['channel']}",
-            row["state"],
+            row["state"] or DASH,
             *(fixed(10 * math.log10(x) if x else None) for x in levels),
             fixed(row["snr_db"]),
             plus_minus(row["delay_samples"], row["delay_std_samples"]),
