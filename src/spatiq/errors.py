@@ -25,3 +25,7 @@ class InputError(SpatiqError):
         place = f"{self.source}: {field}" if field else self.source
         text = f"{place}: found {self.found}; expected {expected}"
         super().__init__(" ".join(text.split()))
+
+    def __reduce__(self) -> tuple[type[InputError], tuple[str, str, str, str]]:
+        """What it is made anew from, so that a worker process can hand it on."""
+        return type(self), (self.source, self.field, self.found, self.expected)

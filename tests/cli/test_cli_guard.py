@@ -1,3 +1,4 @@
+import pickle
 import subprocess
 import sys
 
@@ -136,3 +137,10 @@ def test_results_that_are_not_there_are_one_line(tmp_path):
     assert result.exit_code == 2
     assert result.stderr.count("\n") == 1
     assert "none.h5: found no such file" in result.stderr
+
+
+def test_input_errors_pass_between_processes():
+    """Workers hand their errors on pickled."""
+    error = InputError("a file", "a field", 3, "a number below 3")
+    again = pickle.loads(pickle.dumps(error))
+    assert (str(again), again.field, again.found) == (str(error), "a field", "3")

@@ -14,6 +14,7 @@ from campaign import (
     false_alarm_rows,
     fidelity_table,
     floor_rows,
+    impairment_rows,
     miss_rows,
 )
 from campaign.sections import Row, Section
@@ -25,6 +26,7 @@ SECTIONS: dict[str, Section] = {
         false_alarm_rows,
         estimator_rows,
         floor_rows,
+        impairment_rows,
         fidelity_table,
     )
 }
