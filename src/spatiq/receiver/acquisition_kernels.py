@@ -78,6 +78,71 @@ def parabola_top(left: float, centre: float, right: float) -> float:
 
 
 @kernel
+def carrier_score(
+    y: F32, known: Known, carrier: float, root: C128, origin: float, z: C128
+) -> float:
+    """Likelihood of a carrier, the channel concentrated out; z complex128 (Nt, Nr) is scratch."""
+    correlate_known(y, known, carrier, origin, z)
+    return projected_energy(z, root)
+
+
+@kernel
+def carrier_peak(
+    y: F32, known: Known, carrier: float, width: float, root: C128, origin: float, z: C128
+) -> tuple[float, float]:
+    """Top of a peak within +-width of a carrier, and its likelihood: parabolas ever narrower."""
+    top = carrier_score(y, known, carrier, root, origin, z)
+    for _ in range(3):
+        left = carrier_score(y, known, carrier - width, root, origin, z)
+        right = carrier_score(y, known, carrier + width, root, origin, z)
+        moved = carrier + width * parabola_top(left, top, right)
+        score = carrier_score(y, known, moved, root, origin, z)
+        if score > top:
+            carrier, top = moved, score
+        width *= 0.25
+    return carrier, top
+
+
+@kernel
+def highest_fringe(
+    y: F32, known: Known, grid: F64, score: F64, top: int, root: C128, origin: float, z: C128
+) -> float:
+    """Carrier of the highest peak, where several are so close that the grid cannot tell.
+
+    An antenna's known symbols that lie apart make fringes, whose tops a grid meets or misses: peaks
+    that may lose out to the grid's largest point, `top`, by that alone are compared at their tops.
+    A peak between grid points is at most 15 % higher than the larger of them.
+
+    Args:
+        y: float32 (n, 2, Nr); received vectors.
+        known, root, origin: as for `acquire_frame`.
+        grid, score: float64 (n,); carriers tried and their likelihood.
+        top: index of the largest.
+        z: scratch.
+    """
+    step = grid[1] - grid[0]
+    carrier = grid[top]
+    best = carrier_score(y, known, carrier, root, origin, z)
+    for j in range(1, grid.size - 1):
+        if score[j] < 0.85 * score[top] or score[j] < score[j - 1] or score[j] < score[j + 1]:
+            continue
+        at, height = carrier_peak(y, known, grid[j], step, root, origin, z)
+        if height > best:
+            best, carrier = height, at
+    return carrier
+
+
+@kernel
+def rivals(score: F64, top: int) -> bool:
+    """Whether another peak comes within 15 % of the largest point."""
+    for j in range(1, score.size - 1):
+        close = abs(j - top) > 1 and score[j] >= 0.85 * score[top]
+        if close and score[j] >= score[j - 1] and score[j] >= score[j + 1]:
+            return True
+    return False
+
+
+@kernel
 def grid_search(
     planes: F32,
     t0: float,
@@ -98,17 +163,19 @@ def grid_search(
     for i in range(3):
         sample_periods(planes, t0 + (i - 1) * reach, step, known[0], taps, phases, y)
         for j in range(grid.size):
-            correlate_known(y, known, grid[j], origin, z)
-            score[i, j] = projected_energy(z, root)
+            score[i, j] = carrier_score(y, known, grid[j], root, origin, z)
     top = int(np.argmax(score))
     i, j = top // grid.size, top % grid.size
-    carrier = grid[j]
-    if 0 < j < grid.size - 1:
-        bend = parabola_top(score[i, j - 1], score[i, j], score[i, j + 1])
-        carrier += bend * (grid[1] - grid[0])
     timing = t0 + (i - 1) * reach
     if i == 1:
         timing += reach * parabola_top(score[0, j], score[1, j], score[2, j])
+    carrier = grid[j]
+    if rivals(score[i], j):
+        sample_periods(planes, timing, step, known[0], taps, phases, y)
+        carrier = highest_fringe(y, known, grid, score[i], j, root, origin, z)
+    elif 0 < j < grid.size - 1:
+        bend = parabola_top(score[i, j - 1], score[i, j], score[i, j + 1])
+        carrier += bend * (grid[1] - grid[0])
     return timing, carrier
 
 
