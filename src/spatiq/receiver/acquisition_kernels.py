@@ -121,7 +121,7 @@ def highest_fringe(
         z: scratch.
     """
     step = grid[1] - grid[0]
-    carrier = grid[top]
+    carrier = float(grid[top])
     best = carrier_score(y, known, carrier, root, origin, z)
     for j in range(1, grid.size - 1):
         if score[j] < 0.85 * score[top] or score[j] < score[j - 1] or score[j] < score[j + 1]:
