@@ -13,6 +13,7 @@ import tomllib
 from pathlib import Path
 
 import numpy as np
+from plain_schemes import PlainScheme
 
 
 def table_rows(manual, *head):
@@ -89,30 +90,13 @@ class PlainTransmitter:
 
     def build_words(self):
         modulation = self.file["modulation"]
-        order = modulation.get("antenna_order", list(range(self.antennas)))
-        spatial = int(math.log2(len(order)))
-        signal = 0
-        if modulation["scheme"] == "spatial-modulation":
-            table = modulation["constellation"]
+        table = modulation.get("constellation")
+        points = 1
+        if table is not None:
             sizes = {"BPSK": 2, "QPSK": 4, "8PSK": 8, "16QAM": 16, "64QAM": 64, "256QAM": 256}
             points = len(table["points"]) if "points" in table else sizes[table["name"]]
-            signal = int(math.log2(points))
-        self.word_bits = spatial + signal
-        places = modulation.get("spatial_bits", "first")
-        if places == "first":
-            places = list(range(spatial))
-        elif places == "last":
-            places = list(range(signal, self.word_bits))
-        self.places, self.order = places, order
-
-    def vector(self, word):
-        value = 0
-        for place in self.places:
-            value = 2 * value + word[place]
-        label = [b for i, b in enumerate(word) if i not in self.places]
-        result = [0j] * self.antennas
-        result[self.order[value]] = complex(self.symbol_of_label(label))
-        return result
+        self.scheme = PlainScheme(modulation, self.antennas, self.symbol_of_label, points)
+        self.word_bits = self.scheme.bits
 
     # Chapter 6
 
@@ -166,7 +150,8 @@ class PlainTransmitter:
         return [complex(sent.get(a, 0)) for a in range(self.antennas)]
 
     def periods(self):
-        """For each period of the frame: ("known", row) or ("word", g)."""
+        """For each period of the frame ("known", row) or ("word", g); in differential form a word
+        and ("reference", g) take Nt periods."""
         result = []
         for s in self.file["frame"]["section"]:
             if s["kind"] == "silence":
@@ -174,6 +159,9 @@ class PlainTransmitter:
             elif s["kind"] == "payload":
                 g = 10 ** (s.get("power_db", 0) / 20)
                 section = [("word", g)] * s["symbols"]
+                if self.scheme.differential:
+                    blocks = s["symbols"] // self.antennas - 1
+                    section = [("reference", g)] + [("word", g)] * blocks
                 if "known" in s:
                     k = s["known"]
                     u = self.sequence(k["sequence"])
@@ -282,9 +270,11 @@ class PlainTransmitter:
         for kind, what in self.periods():
             if kind == "known":
                 rows.append(what)
+            elif kind == "reference":
+                rows += [[what * x for x in row] for row in self.scheme.start()]
             else:
                 word, bits = bits[: self.word_bits], bits[self.word_bits :]
-                rows.append([what * x for x in self.vector(word)])
+                rows += [[what * x for x in row] for row in self.scheme.vectors(word)]
         assert not bits
         return np.array(rows)
 

@@ -13,7 +13,9 @@ from spatiq.link.layout import Period
 from spatiq.link.loading import load_link, parse_link
 from spatiq.link.schema import LinkSpec
 from spatiq.signal import crc, prbs
+from spatiq.signal.codebooks import registered
 from spatiq.signal.scramblers import AdditiveScrambler
+from spatiq.transmit.frames import vectors_of_words
 
 DATA = Path(__file__).parent / "data"
 MANUAL = manual_text()
@@ -45,10 +47,7 @@ c_init = 2147483646
 def received_vectors(link, frame_numbers, data=None):
     """Symbols as the package sees them: (F, K, Nt)."""
     words = link.codebook.bits_to_words(link.payload.encode(frame_numbers, data))
-    frames = np.tile(link.layout.known, (len(frame_numbers), 1, 1))
-    gain = link.layout.payload_amplitude[:, None]
-    frames[:, link.layout.payload_index] = link.codebook.vectors[words] * gain
-    return frames
+    return vectors_of_words(link, words)
 
 
 def assert_agree(link, text, frame_numbers, folder=None):
@@ -98,6 +97,66 @@ def test_every_named_constellation(constellation, places):
         name="PRBS11",
     )
     assert_agree(parse_link(text), text, [0, 3])
+
+
+QPSK = 'constellation = { name = "QPSK" }'
+SCHEMES = [
+    (4, f'scheme = "generalised-spatial-modulation", active_antennas = 2, {QPSK}'),
+    (
+        5,
+        'scheme = "generalised-spatial-modulation", '
+        "antenna_sets = [[4, 1], [0, 2], [3, 1], [2, 4]], "
+        f'streams = "independent", spatial_bits = "last", {QPSK}',
+    ),
+    (
+        3,
+        'scheme = "generalised-spatial-modulation", antenna_sets = [[0], [2, 1]], '
+        'spatial_bits = [1], constellation = { name = "8PSK" }',
+    ),
+    (6, 'scheme = "generalised-space-shift-keying", active_antennas = 3'),
+    (3, 'scheme = "generalised-space-shift-keying", antenna_sets = [[2], [0, 1]]'),
+    (4, f'scheme = "quadrature-spatial-modulation", {QPSK}'),
+    (
+        5,
+        'scheme = "quadrature-spatial-modulation", antenna_order = [3, 0], spatial_bits = [4, 1], '
+        'constellation = { name = "16QAM", labelling = "802.11" }',
+    ),
+    (2, f'scheme = "differential-spatial-modulation", {QPSK}'),
+    (3, 'scheme = "differential-spatial-modulation", constellation = { name = "BPSK" }'),
+    (
+        5,
+        'scheme = "differential-spatial-modulation", spatial_bits = [3, 0], '
+        "permutations = [[0, 1, 2, 3, 4], [4, 0, 2, 3, 1], [1, 0, 4, 2, 3], [3, 4, 0, 1, 2]], "
+        'constellation = { points = [[0, 2], [0, -2]], labels = ["1", "0"], normalise = false }',
+    ),
+    (
+        3,
+        'scheme = "vector-table", normalise = true, words = ['
+        '{ word = "10", antennas = [1], symbols = [[0, 1]] }, '
+        '{ word = "00", antennas = [0], symbols = [1] }, '
+        '{ word = "01", antennas = [2, 0], symbols = [-1, [0.5, 0.25]] }, '
+        '{ word = "11", antennas = [2], symbols = [3] }]',
+    ),
+]
+
+
+@pytest.mark.parametrize(("antennas", "modulation"), SCHEMES)
+def test_every_scheme(antennas, modulation):
+    text = WIDE.format(
+        antennas=antennas,
+        modulation=f"modulation = {{ {modulation} }}",
+        sequence='{ type = "m-sequence", order = 5 }',
+        symbols=120,
+        name="PRBS9",
+    )
+    text = text.replace("symbols = 120", 'symbols = 120\npower_db = -3\n[[frame.section]]\n'
+                        'kind = "payload"\nsymbols = 60')  # fmt: skip
+    assert_agree(parse_link(text), text, [0, 1, 5])
+
+
+def test_every_scheme_of_the_registry_is_transmitted_by_the_manual():
+    named = {re.search(r'scheme = "([^"]+)"', modulation)[1] for _, modulation in SCHEMES}
+    assert named | {"spatial-modulation", "space-shift-keying"} == set(registered())
 
 
 SEQUENCES = [

@@ -46,8 +46,11 @@ def made_link(sets: tuple[tuple[int, ...], ...] = SETS, periods: int = PERIODS) 
         carrier_hz=2.4e9,
         symbol_rate_hz=1e6,
         frame_symbols=100,
-        codebook=SimpleNamespace(antenna_sets=sets, bits=BITS),
+        codebook=SimpleNamespace(
+            antenna_sets=sets, bits=BITS, set_names=tuple("+".join(map(str, a)) for a in sets)
+        ),
         layout=SimpleNamespace(payload_index=np.arange(periods)),
+        words_per_frame=periods,
     )
 
 

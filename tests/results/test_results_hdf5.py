@@ -102,7 +102,9 @@ def test_nothing_in_the_file_needs_a_compound_or_boolean_type(tmp_path):
     with h5py.File(path) as file:
         file.visititems(visit)
     texts = {n for n, kind in kinds.items() if kind == "O"}
-    assert texts == {"summary/json", "lost/reasons"} | {f"provenance/{n}" for n in FIELDS}
+    assert texts == {"summary/json", "lost/reasons", "confusion/names"} | {
+        f"provenance/{n}" for n in FIELDS
+    }
     assert {kind for kind in kinds.values() if kind != "O"} == set("iuf")
 
 

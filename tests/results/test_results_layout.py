@@ -61,7 +61,7 @@ def test_every_dataset_is_documented_and_every_documented_one_is_there(tmp_path)
 
 def test_types_and_shapes_are_as_documented(tmp_path):
     path = full_results(tmp_path)
-    sizes = {"F": 3, "A": 3, "Nr": 2, "Nt": 4, "Kp": 5, "B": 20}
+    sizes = {"F": 3, "A": 3, "Nr": 2, "Nt": 4, "Kp": 5, "Kw": 5, "B": 20}
     checked = 0
     group = ""
     with h5py.File(path) as file:

@@ -136,7 +136,7 @@ def test_a_wide_matrix_is_given_as_its_most_frequent_confusions():
 
     class Wide:
         confusion_total = np.diag(np.full(16, 100))
-        antenna_sets = tuple((a,) for a in range(16))
+        set_names = tuple(str(a) for a in range(16))
 
     Wide.confusion_total[5, 9] = 25
     Wide.confusion_total[0, 1] = 1

@@ -16,40 +16,39 @@ from spatiq.signal.codebooks import (
     spatial_modulation,
 )
 from spatiq.signal.constellations import named
+from spatiq.signal.scheme_examples import scheme_examples
 
-EXAMPLES: dict[str, list[Codebook]] = {
-    "spatial-modulation": [
-        spatial_modulation(2, named("BPSK"), [0, 1], [0]),
-        spatial_modulation(4, named("QPSK"), [0, 1, 2, 3], [0, 1]),
-        spatial_modulation(4, named("16QAM", "802.11"), [3, 1, 0, 2], [4, 5]),
-        spatial_modulation(5, named("8PSK"), [4, 2], [1]),
-        spatial_modulation(1, named("64QAM"), [0], []),
-    ],
-    "space-shift-keying": [
-        space_shift_keying(2, [0, 1], [0]),
-        space_shift_keying(8, [7, 6, 5, 4, 3, 2, 1, 0], [2, 0, 1]),
-    ],
-}
+EXAMPLES = scheme_examples()
 CASES = [(scheme, book) for scheme, books in EXAMPLES.items() for book in books]
 
 
 def test_every_scheme_has_examples() -> None:
     assert set(registered()) == set(EXAMPLES)
+    assert all(EXAMPLES.values())
 
 
 @pytest.mark.nojit
 @pytest.mark.parametrize(("scheme", "book"), CASES)
 def test_contract_of_every_scheme(scheme: str, book: Codebook) -> None:
     assert book.scheme == scheme
-    assert book.vectors.shape == (book.size, book.antennas) == (1 << book.bits, book.antennas)
-    assert np.unique(book.vectors, axis=0).shape[0] == book.size
+    assert book.size == 1 << book.bits == book.symbol_index.size
+    assert book.vectors.shape[1] == book.antennas
+    assert np.unique(book.vectors, axis=0).shape[0] == book.vectors.shape[0]
     assert np.mean(np.sum(np.abs(book.vectors) ** 2, axis=1)) == pytest.approx(1.0)
-    for word in range(book.size):
-        active = tuple(np.flatnonzero(book.vectors[word]))
-        assert active == book.antenna_sets[book.set_index[word]]
-        symbol = book.constellation.points[book.symbol_index[word]]
-        assert (book.vectors[word, list(active)] == symbol).all()
-    # The spatial bits, and they alone, choose the antenna set; the others the symbol.
+    # A word is its set and its symbol: no two words have both in common.
+    assert len(set(zip(book.set_index, book.symbol_index, strict=True))) == book.size
+    assert set(book.set_index) == set(range(len(book.antenna_sets)))
+    assert len(set(book.set_names)) == len(book.set_names) == len(book.antenna_sets)
+    if book.block == 1:
+        assert book.vectors.shape[0] == book.size
+        for word in range(book.size):
+            active = tuple(np.flatnonzero(book.vectors[word]))
+            assert active == book.antenna_sets[book.set_index[word]]
+
+
+@pytest.mark.nojit
+@pytest.mark.parametrize(("scheme", "book"), [c for c in CASES if c[0] != "vector-table"])
+def test_spatial_bits_choose_the_set_and_the_others_the_symbol(scheme: str, book: Codebook) -> None:
     bits = book.words_to_bits(np.arange(book.size)).reshape(book.size, book.bits)
     space: dict[tuple[int, ...], set[int]] = {tuple(row[book.spatial_bits]): set() for row in bits}
     signal: dict[tuple[int, ...], set[int]] = {
@@ -59,7 +58,16 @@ def test_contract_of_every_scheme(scheme: str, book: Codebook) -> None:
         space[tuple(row[book.spatial_bits])].add(int(chosen))
         signal[tuple(row[~book.spatial_bits])].add(int(symbol))
     assert sorted(map(len, space.values())) == [1] * len(book.antenna_sets)
-    assert sorted(map(len, signal.values())) == [1] * book.constellation.size
+    assert sorted(map(len, signal.values())) == [1] * (1 << int((~book.spatial_bits).sum()))
+
+
+@pytest.mark.nojit
+@pytest.mark.parametrize("book", EXAMPLES["spatial-modulation"] + EXAMPLES["space-shift-keying"])
+def test_a_lone_antenna_sends_the_point_of_the_label(book: Codebook) -> None:
+    for word in range(book.size):
+        (antenna,) = book.antenna_sets[book.set_index[word]]
+        symbol = book.constellation.points[book.symbol_index[word]]
+        assert book.vectors[word, antenna] == symbol
 
 
 def test_placing_of_bits_and_antennas() -> None:

@@ -61,7 +61,7 @@ def made_up_batch(link: Link, channels: int) -> FrameBatch:
     tables = link_tables(link)
     planes = np.zeros((2, channels, 2, 8), np.float32)
     payload = link.layout.payload_index.size
-    batch = empty_batch(planes, link.antennas, tables.active.size, payload)
+    batch = empty_batch(planes, link.antennas, tables.active.size, payload, link.words_per_frame)
     shape = batch.channel.shape
     batch.channel[:] = rng.standard_normal(shape) + 1j * rng.standard_normal(shape)
     batch.symbols[:] = rng.standard_normal(batch.symbols.shape)
@@ -77,7 +77,9 @@ def compile_measuring(link: Link, channels: int = 2) -> None:
     segment = Segment(0, 0, 1000, 0, None, None)
     recording = SimpleNamespace(sample_rate=4.0 * link.symbol_rate_hz, segments=(segment,))
     batch = made_up_batch(link, channels)
-    detection = Detection(link.codebook, find_detector(options.detector), True)
+    detection = Detection(
+        link.codebook, find_detector(options.detector), True, link.layout.payload_runs()
+    )
     Measuring(cast(Recording, recording), link, options)(detection(batch))
 
 

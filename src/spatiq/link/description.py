@@ -5,8 +5,11 @@ from __future__ import annotations
 from dataclasses import dataclass
 from pathlib import Path
 
+import numpy as np
+from numpy.typing import NDArray
+
 from spatiq.link.explain import explanation
-from spatiq.link.layout import FrameLayout
+from spatiq.link.layout import FrameLayout, words_in
 from spatiq.link.payload import PayloadFormat
 from spatiq.link.schema import LinkSpec
 from spatiq.signal.codebooks import Codebook
@@ -53,6 +56,26 @@ class Link:
     def frame_symbols(self) -> int:
         """Symbol periods per frame, K."""
         return self.layout.length
+
+    @property
+    def words_per_frame(self) -> int:
+        """Payload words per frame, Kw; as many as payload periods but in differential form."""
+        return words_in(self.layout, self.codebook)
+
+    def carried(self, words: NDArray[np.int64]) -> NDArray[np.int64]:
+        """Which of the codebook's vectors each payload period carries.
+
+        Args:
+            words: int64, shape (F, Kw); -1 where unknown.
+
+        Returns:
+            int64, shape (F, Kp); -1 where unknown.
+        """
+        if self.codebook.block == 1:
+            return words
+        runs = [n // self.codebook.block - 1 for n in self.layout.payload_runs()]
+        parts = np.split(words, np.cumsum(runs)[:-1], axis=1)
+        return np.concatenate([self.codebook.carried(p) for p in parts], axis=1)
 
     def explain(self) -> str:
         """The link in tables of plain text, at most 100 columns wide."""

@@ -5,10 +5,10 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from spatiq.link.layout import FrameLayout, Period
+from spatiq.link.layout import FrameLayout, Period, words_in
 from spatiq.link.payload import PayloadFormat
 from spatiq.link.tables_text import columns, pairs, quantity
-from spatiq.signal.codebooks import Codebook
+from spatiq.signal.codebooks import Codebook, DifferentialCodebook
 from spatiq.signal.pulses import Pulse, isi_floor
 from spatiq.signal.scramblers import (
     AdditiveScrambler,
@@ -87,13 +87,14 @@ def _rates(
 ) -> list[str]:
     spatial = int(np.sum(codebook.spatial_bits))
     signal = codebook.bits - spatial
+    gross = codebook.bits * symbol_rate_hz / codebook.block
     interspersed = int(np.sum(layout.kind == Period.KNOWN))
     entries = [
         ("bits per word", f"{codebook.bits}: {spatial} spatial, {signal} signal"),
-        ("payload words per frame", f"{layout.payload_index.size}"),
+        ("payload words per frame", f"{words_in(layout, codebook)}"),
         ("payload bits per frame", f"{payload.n_bits}"),
         ("known symbols among them", f"{interspersed} symbol periods"),
-        ("gross bit rate", f"{quantity(codebook.bits * symbol_rate_hz, 'bit/s')} during payload"),
+        ("gross bit rate", f"{quantity(gross, 'bit/s')} during payload"),
     ]
     back_to_back = period_symbols is None
     period = layout.length if period_symbols is None else period_symbols
@@ -114,26 +115,34 @@ def _symbol(value: complex) -> str:
 
 
 def _word_row(codebook: Codebook, word: int) -> list[str]:
-    antennas = codebook.antenna_sets[int(codebook.set_index[word])]
-    symbols = ", ".join(_symbol(complex(codebook.vectors[word, a])) for a in antennas)
+    chosen = int(codebook.set_index[word])
+    antennas = codebook.antenna_sets[chosen]
+    if isinstance(codebook, DifferentialCodebook):
+        turns = codebook.turns[word]
+        symbols = ", ".join(f"{360 * int(t) / codebook.roots:g}°" for t in turns)
+    else:
+        symbols = ", ".join(_symbol(complex(codebook.vectors[word, a])) for a in antennas)
     bits = format(word, f"0{codebook.bits}b")
-    return [bits, " ".join(map(str, antennas)), symbols]
+    return [bits, codebook.set_names[chosen], symbols]
 
 
 def _words(codebook: Codebook) -> list[str]:
     marks = "".join("s" if spatial else "." for spatial in codebook.spatial_bits)
+    points = codebook.constellation
+    named = f"{points.name}, {points.size} points" if points.bits else "none"
     lines = pairs(
         [
             ("scheme", codebook.scheme),
-            (
-                "constellation",
-                f"{codebook.constellation.name}, {codebook.constellation.size} points",
-            ),
-            ("word, first bit first", f"{marks}  (s chooses the antenna, . the symbol)"),
+            ("constellation", named),
+            ("word, first bit first", f"{marks}  (s chooses the antennas, . the symbol)"),
+            ("antenna sets", f"{len(codebook.antenna_sets)}"),
         ]
     )
-    count = codebook.size if codebook.size <= ALL_WORDS else FIRST_WORDS
+    listed = codebook.size <= ALL_WORDS or codebook.scheme == "vector-table"
+    count = codebook.size if listed else FIRST_WORDS
     head = ["word", "antenna", "symbol"]
+    if codebook.block > 1:
+        head = ["word", "permutation", "turn of each column"]
     lines += columns(head, [_word_row(codebook, w) for w in range(count)])
     if count < codebook.size:
         lines.append(f"  ... {codebook.size - count} more words, by this rule:")
@@ -150,19 +159,25 @@ def _rule(codebook: Codebook) -> list[str]:
     """Antennas by the spatial bits, symbol by the rest: how the table goes on."""
     spatial = codebook.spatial_bits
     sets = {
-        _pattern(codebook, w, spatial): codebook.antenna_sets[int(codebook.set_index[w])]
+        _pattern(codebook, w, spatial): codebook.set_names[int(codebook.set_index[w])]
         for w in range(codebook.size)
     }
-    chosen = [f"{bits}: {' '.join(map(str, active))}" for bits, active in sorted(sets.items())]
+    chosen = [f"{bits}: {name}" for bits, name in sorted(sets.items())]
     places = ", ".join(map(str, np.flatnonzero(~spatial)))
     name = codebook.constellation.name
     entries = []
     if spatial.any():
         where = ", ".join(map(str, np.flatnonzero(spatial)))
         text = f"by bits {where} of the word (0 = first bit): {', '.join(chosen)}"
-        entries.append(("antenna", text))
+        entries.append(("permutation" if codebook.block > 1 else "antenna", text))
     if not spatial.all():
-        entries.append(("symbol", f"the point of {name} whose label is bits {places} of the word"))
+        where = f"bits {places} of the word"
+        signal = codebook.bits - int(spatial.sum())
+        many = signal > codebook.constellation.bits
+        text = (
+            f"points of {name}: labels one behind the other" if many else f"point of {name}: label"
+        )
+        entries.append(("symbols" if many else "symbol", f"{text}, {where}"))
     return pairs(entries)
 
 

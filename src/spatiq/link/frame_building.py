@@ -24,6 +24,13 @@ class _Part:
     kind: NDArray[np.uint8]
     amplitude: float
     text: str
+    block: int = 1  # periods that a word takes; more than 1: a reference block comes first
+
+    @property
+    def carries(self) -> NDArray[np.bool_]:
+        """Periods that words, or the reference block before them, take."""
+        reference = (self.kind == Period.PILOT) & (self.block > 1)
+        return np.asarray((self.kind == Period.PAYLOAD) | reference)
 
 
 def _antennas_text(chosen: list[int]) -> str:
@@ -87,6 +94,23 @@ def _check_searchable(vectors: NDArray[np.complex128], place: Place) -> None:
             )
 
 
+def _differential_part(table: tables.PayloadSection, antennas: int, place: Place) -> _Part:
+    """A reference block, antenna j sending 1 in period j, then a block for each word."""
+    if table.known is not None:
+        raise (place / "known").fault("a table", "none: in differential form blocks follow blocks")
+    if table.symbols % antennas or table.symbols < 2 * antennas:
+        raise (place / "symbols").fault(
+            table.symbols, f"two or more blocks of {antennas}: a reference block, then the words'"
+        )
+    amplitude = 10.0 ** (table.power_db / 20.0)
+    known = np.zeros((table.symbols, antennas), np.complex128)
+    known[:antennas] = amplitude * np.eye(antennas)
+    kind = np.full(table.symbols, Period.PAYLOAD, np.uint8)
+    kind[:antennas] = Period.PILOT
+    text = f"reference block, then words of payload in blocks of {antennas}"
+    return _Part(known, kind, amplitude, text + _power_text(table.power_db), antennas)
+
+
 def _payload_part(table: tables.PayloadSection, antennas: int, place: Place) -> _Part:
     amplitude = 10.0 ** (table.power_db / 20.0)
     known = np.zeros((table.symbols, antennas), np.complex128)
@@ -113,9 +137,10 @@ def _payload_part(table: tables.PayloadSection, antennas: int, place: Place) -> 
     return _Part(known, kind, amplitude, text + _power_text(table.power_db))
 
 
-def _part(table: tables.Section, antennas: int, place: Place) -> _Part:
+def _part(table: tables.Section, antennas: int, block: int, place: Place) -> _Part:
     if isinstance(table, tables.PayloadSection):
-        return _payload_part(table, antennas, place)
+        build = _payload_part if block == 1 else _differential_part
+        return build(table, antennas, place)
     if isinstance(table, tables.SilenceSection):
         nothing = np.zeros((table.symbols, antennas), np.complex128)
         kind = np.full(table.symbols, Period.SILENCE, np.uint8)
@@ -140,12 +165,13 @@ def _check_length(frame: tables.Frame, antennas: int, place: Place) -> None:
             )
 
 
-def frame_layout(frame: tables.Frame, antennas: int, place: Place) -> FrameLayout:
+def frame_layout(frame: tables.Frame, antennas: int, place: Place, block: int = 1) -> FrameLayout:
     """Which symbol period carries what.
 
     Args:
         frame: the checked table.
         antennas: Nt.
+        block: periods that a word takes, 1 or (differential form) Nt.
         place: where it stands.
 
     Raises:
@@ -154,7 +180,7 @@ def frame_layout(frame: tables.Frame, antennas: int, place: Place) -> FrameLayou
     if not any(isinstance(s, tables.SyncSection) for s in frame.section):
         raise (place / "section").fault("no sync section", 'at least one of kind = "sync"')
     _check_length(frame, antennas, place)
-    parts = [_part(s, antennas, place / "section" / i) for i, s in enumerate(frame.section)]
+    parts = [_part(s, antennas, block, place / "section" / i) for i, s in enumerate(frame.section)]
     stops = np.cumsum([p.kind.size for p in parts])
     spans = tuple(
         SectionSpan(s.kind, int(stop) - p.kind.size, int(stop), p.text)
@@ -162,7 +188,7 @@ def frame_layout(frame: tables.Frame, antennas: int, place: Place) -> FrameLayou
     )
     kind = np.concatenate([p.kind for p in parts])
     amplitude = np.concatenate([np.full(p.kind.size, p.amplitude) for p in parts])
-    payload = np.flatnonzero(kind == Period.PAYLOAD)
+    payload = np.flatnonzero(np.concatenate([p.carries for p in parts]))
     return FrameLayout(
         known=np.concatenate([p.known for p in parts]),
         kind=kind,

@@ -8,6 +8,8 @@ from enum import IntEnum
 import numpy as np
 from numpy.typing import NDArray
 
+from spatiq.signal.codebook import Codebook
+
 
 class Period(IntEnum):
     """What a symbol period carries."""
@@ -42,8 +44,9 @@ class FrameLayout:
         known: complex128, shape (K, Nt); transmitted vectors of every period that is not payload,
             section power included; zero in payload and silence.
         kind: uint8, shape (K,); a `Period` for each symbol period.
-        payload_index: int64, shape (Kp,); symbol period of each payload word, ascending.
-        payload_amplitude: float64, shape (Kp,); amplitude factor of each payload word, from its
+        payload_index: int64, shape (Kp,); symbol periods that payload words take, ascending; in
+            differential form with the reference blocks before them (kind PILOT).
+        payload_amplitude: float64, shape (Kp,); amplitude factor of each of these, from its
             section's power.
         sections: the sections in order, as spans.
     """
@@ -64,7 +67,22 @@ class FrameLayout:
         """Number of transmit antennas, Nt."""
         return int(self.known.shape[1])
 
+    def payload_runs(self) -> tuple[int, ...]:
+        """Periods that each payload section gives to words, reference blocks included."""
+        inside = (
+            int(np.sum((self.payload_index >= s.start) & (self.payload_index < s.stop)))
+            for s in self.sections
+            if s.kind == "payload"
+        )
+        return tuple(n for n in inside if n)
+
     @property
     def sync(self) -> SectionSpan:
         """The first sync section: what the frame search looks for."""
         return next(s for s in self.sections if s.kind == "sync")
+
+
+def words_in(layout: FrameLayout, codebook: Codebook) -> int:
+    """Payload words per frame, Kw: a section's first block of several periods carries none."""
+    block = codebook.block
+    return sum(n // block - (block > 1) for n in layout.payload_runs())

@@ -9,12 +9,14 @@ from typing import Any
 from pydantic import ValidationError
 
 from spatiq.errors import InputError
-from spatiq.link import building
 from spatiq.link.description import Link
 from spatiq.link.faults import input_error
 from spatiq.link.frame_building import check_period, frame_layout, period_symbols
+from spatiq.link.layout import words_in
+from spatiq.link.modulation_building import codebook
 from spatiq.link.payload_building import payload_format
 from spatiq.link.places import Place
+from spatiq.link.pulse_building import pulse
 from spatiq.link.schema import LinkSpec
 
 MAX_BYTES = 16 << 20
@@ -88,12 +90,12 @@ def _build(text: str, source: str, folder: Path | None, path: Path | None) -> Li
         raise input_error(fault, source) from fault
     top = Place(source)
     air = spec.air
-    book = building.codebook(spec.modulation, air.antennas, top / "modulation")
-    pulse = building.pulse(spec.pulse, top / "pulse")
+    book = codebook(spec.modulation, air.antennas, top / "modulation")
+    shape = pulse(spec.pulse, top / "pulse")
     period = period_symbols(spec.frame, air.symbol_rate_hz, top / "frame")
-    layout = frame_layout(spec.frame, air.antennas, top / "frame")
+    layout = frame_layout(spec.frame, air.antennas, top / "frame", book.block)
     check_period(period, layout.length, spec.frame, top / "frame")
-    n_bits = int(layout.payload_index.size) * book.bits
+    n_bits = words_in(layout, book) * book.bits
     payload = payload_format(spec.payload, n_bits, folder, top / "payload")
     return Link(
         name=_name(spec, path),
@@ -104,7 +106,7 @@ def _build(text: str, source: str, folder: Path | None, path: Path | None) -> Li
         carrier_hz=air.carrier_hz,
         clock=air.clock,
         codebook=book,
-        pulse=pulse,
+        pulse=shape,
         layout=layout,
         payload=payload,
         period_symbols=period,

@@ -6,7 +6,7 @@ from typing import Annotated, Any, Literal
 
 from pydantic import Field, Tag
 
-from spatiq.link.schema_frame import Antenna, Frame
+from spatiq.link.schema_frame import Antenna, Antennas, Frame
 from spatiq.link.schema_payload import Payload
 from spatiq.link.values import (
     ComplexNumber,
@@ -21,12 +21,14 @@ from spatiq.link.values import (
     text_or_else,
 )
 from spatiq.signal import constellations, pulses
-from spatiq.signal.codebooks import SCHEMES
+from spatiq.signal.codebooks import MAX_SETS, SCHEMES
+from spatiq.signal.several_antennas import STREAMS
 
 FORMAT = 1
 MAX_ANTENNAS = 64
 MAX_WORD_BITS = 16
 
+BitString = Annotated[str, Text(r"^[01]{1,16}$", "a string of 1 to 16 characters 0 and 1")]
 ShortText = Annotated[str, Text(r"^[^\x00-\x1f\x7f]{1,120}$", "one line of 1 to 120 characters")]
 
 
@@ -74,25 +76,51 @@ ConstellationTable = Annotated[
 ]
 
 
+class Word(Table):
+    """One word of a vector table: what its antennas send."""
+
+    word: BitString
+    antennas: Antennas
+    symbols: Annotated[
+        list[Annotated[complex, ComplexNumber()]],
+        Field(min_length=1, max_length=MAX_ANTENNAS, description="a list of complex numbers"),
+    ]
+
+
+AntennaLists = Annotated[
+    list[Annotated[list[Antenna], Field(min_length=1, max_length=MAX_ANTENNAS)]],
+    Field(min_length=1, max_length=MAX_SETS),
+]
+
+
 class Modulation(Table):
-    """How a word of bits chooses antenna and symbol."""
+    """How a word of bits chooses antennas and symbols."""
 
     scheme: Annotated[str, OneOf(*SCHEMES)]
     constellation: ConstellationTable | None = None
-    spatial_bits: Annotated[
+    spatial_bits: (
         Annotated[
-            str, OneOf("first", "last", otherwise="a list of bit positions"), Tag(tag("text"))
+            Annotated[
+                str, OneOf("first", "last", otherwise="a list of bit positions"), Tag(tag("text"))
+            ]
+            | Annotated[
+                list[Annotated[int, Whole(0, MAX_WORD_BITS - 1)]],
+                Field(max_length=MAX_WORD_BITS),
+                Tag(tag("list")),
+            ],
+            text_or_else("list"),
         ]
-        | Annotated[
-            list[Annotated[int, Whole(0, MAX_WORD_BITS - 1)]],
-            Field(max_length=MAX_WORD_BITS),
-            Tag(tag("list")),
-        ],
-        text_or_else("list"),
-    ] = "first"
+        | None
+    ) = None
     antenna_order: Annotated[list[Antenna], Field(min_length=1, max_length=MAX_ANTENNAS)] | None = (
         None
     )
+    active_antennas: Annotated[int, Whole(1, MAX_ANTENNAS)] | None = None
+    antenna_sets: AntennaLists | None = None
+    streams: Annotated[str, OneOf(*STREAMS)] | None = None
+    permutations: AntennaLists | None = None
+    words: Annotated[list[Word], Field(min_length=2, max_length=1 << MAX_WORD_BITS)] | None = None
+    normalise: bool | None = None
 
 
 class RootRaisedCosine(Table):

@@ -90,7 +90,7 @@ def _synchronisation(columns: Columns, batch: FrameBatch, link: Link, recording:
 
 def _power(columns: Columns, batch: FrameBatch, sums: NDArray[np.float64], link: Link) -> None:
     channels = batch.channel.shape[1]
-    periods = np.maximum(_periods(sums, link), 1)
+    periods = np.maximum(_periods(sums), 1)
     gain = float(np.mean(link.layout.payload_amplitude**2))
     measured = gain * sums[:, 4].sum(axis=1) / periods / channels
     # The estimate's own error adds N0 |x_a|^2 / energy behind it to |H x|^2.
@@ -105,19 +105,17 @@ def _power(columns: Columns, batch: FrameBatch, sums: NDArray[np.float64], link:
     columns["snr_std_db"][:] = 10 / np.log(10) * spread
 
 
-def _periods(sums: NDArray[np.float64], link: Link) -> NDArray[np.float64]:
-    """Payload periods that entered the sums; a period counts once for each active antenna."""
-    active = np.mean(np.count_nonzero(link.codebook.vectors, axis=1))
-    return np.asarray(sums[:, 3].sum(axis=1) / active)
+def _periods(sums: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Payload periods that entered the sums."""
+    return np.asarray(sums[:, 3].sum(axis=1))
 
 
 def _error_vector(columns: Columns, sums: NDArray[np.float64], link: Link) -> None:
-    active = np.mean(np.count_nonzero(link.codebook.vectors, axis=1))
-    power = float(np.mean(np.abs(link.codebook.constellation.points) ** 2))
-    columns["evm_error_energy"][:] = sums[:, 0].sum(axis=1) / active
-    columns["evm_reference_energy"][:] = sums[:, 1].sum(axis=1) / active
-    columns["equalised_error_energy"][:] = sums[:, 2].sum(axis=1) / active
-    columns["equalised_reference_energy"][:] = power * _periods(sums, link)
+    power = float(np.mean(np.sum(np.abs(link.codebook.vectors) ** 2, axis=1)))
+    columns["evm_error_energy"][:] = sums[:, 0].sum(axis=1)
+    columns["evm_reference_energy"][:] = sums[:, 1].sum(axis=1)
+    columns["equalised_error_energy"][:] = sums[:, 2].sum(axis=1)
+    columns["equalised_reference_energy"][:] = power * _periods(sums)
     for kind in ("evm", "equalised"):
         error = columns[f"{kind}_error_energy"]
         ratio = np.sqrt(error / columns[f"{kind}_reference_energy"])

@@ -73,13 +73,13 @@ COLUMNS: tuple[Column, ...] = (
     Column("ber_high", "f8", "", "upper end of its interval; the figure to quote at zero errors"),
     Column("ber_spatial", "f8", "", "bit error ratio of the spatial bits"),
     Column("ber_signal", "f8", "", "bit error ratio of the signal bits"),
-    Column("periods_compared", "i8", "symbol periods", "payload periods whose word is known"),
-    Column("antenna_errors", "i8", "symbol periods", "of these, wrong antenna"),
-    Column("symbol_errors", "i8", "symbol periods", "right antenna, wrong symbol"),
+    Column("periods_compared", "i8", "words", "payload words that are known"),
+    Column("antenna_errors", "i8", "words", "of these, wrong antennas"),
+    Column("symbol_errors", "i8", "words", "right antennas, wrong symbol"),
     Column("antenna_error_ratio", "f8", "", "antenna_errors / periods_compared"),
     Column("antenna_error_ratio_low", "f8", "", "lower end of its interval"),
     Column("antenna_error_ratio_high", "f8", "", "upper end of its interval"),
-    Column("symbol_error_ratio", "f8", "", "symbol_errors / periods with the right antenna"),
+    Column("symbol_error_ratio", "f8", "", "symbol_errors / words with the right antennas"),
     Column("symbol_error_ratio_low", "f8", "", "lower end of its interval"),
     Column("symbol_error_ratio_high", "f8", "", "upper end of its interval"),
     Column("evm_data_aided", "u1", "", "1: against known symbols (of half or more); 0: decided"),
@@ -87,10 +87,10 @@ COLUMNS: tuple[Column, ...] = (
     Column("evm_db", "f8", "dB", "the same in dB"),
     Column("evm_error_energy", "f8", "", "sum of |y - h s|^2: add over frames to pool EVM"),
     Column("evm_reference_energy", "f8", "", "sum of |h s|^2"),
-    Column("equalised_evm_percent", "f8", "%", "EVM rms after projection on the antenna's channel"),
+    Column("equalised_evm_percent", "f8", "%", "EVM rms after projection on the word as received"),
     Column("equalised_evm_db", "f8", "dB", "the same in dB"),
     Column("equalised_error_energy", "f8", "", "sum of |z - s|^2: add over frames to pool"),
-    Column("equalised_reference_energy", "f8", "", "constellation power times symbol periods"),
+    Column("equalised_reference_energy", "f8", "", "mean power sent times symbol periods"),
     Column(
         "predicted_ber", "f8", "", "BER of a maximum-likelihood receiver on this channel, noise"
     ),
@@ -126,9 +126,9 @@ class MeasuredFrames:
         channel_error_variance: float64, shape (F, Nt); variance of each coefficient of `channel`.
         antenna_error_energy, antenna_reference_energy: float64, shape (F, Nt); the sums behind
             antenna_evm_percent, to be added over frames.
-        words_decided: int64, shape (F, Kp).
-        words_sent: int64, shape (F, Kp); -1 where unknown.
-        llr: float32, shape (F, Kp * b); log-likelihood ratios of the bits as sent (scrambled, where
+        words_decided: int64, shape (F, Kw).
+        words_sent: int64, shape (F, Kw); -1 where unknown.
+        llr: float32, shape (F, Kw * b); log-likelihood ratios of the bits as sent (scrambled, where
             the link scrambles), positive when 0 is likelier; or None.
     """
 

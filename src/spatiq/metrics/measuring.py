@@ -19,6 +19,7 @@ from spatiq.metrics.path_figures import path_figures
 from spatiq.metrics.reference_following import Numberer, Numbering, ReferenceFollower
 from spatiq.metrics.skipped_frames import SkippedFrames, places_in_stream
 from spatiq.receiver.chain import Progress, Stage, receive
+from spatiq.receiver.exhaustive_search import nearest_vectors
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.link_tables import sparse_vectors
 from spatiq.receiver.options import ReceiverOptions
@@ -96,7 +97,7 @@ class Measuring:
         shortest = shortest_distance(self.recording, link)
         self._skipped = SkippedFrames(link.period_symbols is not None, shortest)
         self._words = sparse_vectors(link.codebook.vectors)
-        self._spatial = np.tile(link.codebook.spatial_bits, link.layout.payload_index.size)
+        self._spatial = np.tile(link.codebook.spatial_bits, link.words_per_frame)
         payload = link.payload
         static = payload.known_mask.copy()
         for span in payload.fields:
@@ -158,13 +159,13 @@ class Measuring:
         return self.link.payload.reference(np.maximum(numbering.numbers, 0))
 
     def _sent_words(self, numbering: Numbering, reference: NDArray[np.uint8]) -> NDArray[np.int64]:
-        """Words as sent, (F, Kp); -1 where any bit of the word is unknown.
+        """Words as sent, (F, Kw); -1 where any bit of the word is unknown.
 
         Without reference bits all are: a few words of counter would pass for the whole payload.
         """
         payload, codebook = self.link.payload, self.link.codebook
         count = numbering.numbers.size
-        words = np.full((count, self.link.layout.payload_index.size), -1, np.int64)
+        words = np.full((count, self.link.words_per_frame), -1, np.int64)
         if not payload.has_reference:
             return words
         known = np.where(numbering.resolved[:, None], payload.reference_mask, self._static)
@@ -211,6 +212,7 @@ class Measuring:
         confusion = np.zeros((batch.count, sets, sets), np.int64)
         sums = np.zeros((batch.count, 6, codebook.antennas))
         counts = np.zeros(3, np.int64)
+        carried = self.link.carried(sent)
         for i in range(batch.count):
             compare_words(
                 batch.words[i],
@@ -225,7 +227,7 @@ class Measuring:
             # A few known words are no measure of a payload that is mostly unknown.
             aided = counts[0] > 0 and 2 * counts[0] >= sent.shape[1]
             columns["evm_data_aided"][i] = aided
-            reference = sent[i] if aided else batch.words[i]
+            reference = carried[i] if aided else self._decided_vectors(batch, i)
             symbols = batch.symbols[i]
             if batch.dispersive is not None:
                 symbols = batch.dispersive.symbols(i, reference, batch.channel[i])
@@ -239,6 +241,14 @@ class Measuring:
                 sums[i],
             )
         return confusion, sums
+
+    def _decided_vectors(self, batch: FrameBatch, i: int) -> NDArray[np.int64]:
+        """Which vector each payload period is taken to carry; a wrong block of the differential
+        form is no reason to misjudge all that follow: there, each period is decided by itself."""
+        if self.link.codebook.block == 1:
+            own: NDArray[np.int64] = batch.words[i]
+            return own
+        return nearest_vectors(batch.symbols[i], batch.channel[i], self.link.codebook.vectors)
 
 
 _COUNT_COLUMNS = ("periods_compared", "antenna_errors", "symbol_errors")

@@ -60,7 +60,11 @@ def error_vectors(
 ) -> None:
     """Energies of error and reference of one frame, per antenna.
 
-    A period counts for every antenna active in it.
+    A period counts for all antennas active in it, for each of n with the weight 1/n, so that sums
+    over the antennas are sums over the periods. Periods in which nothing is sent do not count.
+
+    The equalised error is that of z = (H x)^H y / ||H x||^2 against 1, times ||x||: with one active
+    antenna, that of the symbol after projection on the antenna's channel.
 
     Args:
         y: complex64 (Kp, Nr); carrier and phase removed.
@@ -74,9 +78,9 @@ def error_vectors(
     channels = y.shape[1]
     for k in range(words.size):
         c = words[k]
-        if c < 0:
+        if c < 0 or pointer[c] == pointer[c + 1]:
             continue
-        error, reference, projected, gain = 0.0, 0.0, 0j, 0.0
+        error, reference, projected, gain, sent = 0.0, 0.0, 0j, 0.0, 0.0
         first = value[pointer[c]]
         for r in range(channels):
             v = 0j
@@ -89,11 +93,17 @@ def error_vectors(
             projected += np.conj(unit) * y[k, r]
             gain += unit.real * unit.real + unit.imag * unit.imag
         deviation = projected / gain - first if gain > 0.0 else 0j
+        share = 1.0 / (pointer[c + 1] - pointer[c])
         for j in range(pointer[c], pointer[c + 1]):
             a = antenna[j]
-            sums[0, a] += error
-            sums[1, a] += reference
-            sums[2, a] += deviation.real * deviation.real + deviation.imag * deviation.imag
-            sums[3, a] += 1.0
-            sums[5, a] += value[j].real * value[j].real + value[j].imag * value[j].imag
+            power = value[j].real * value[j].real + value[j].imag * value[j].imag
+            sums[0, a] += share * error
+            sums[1, a] += share * reference
+            sums[3, a] += share
+            sums[5, a] += power
+            sent += power
+        rescaled = sent / (first.real * first.real + first.imag * first.imag)
+        equalised = deviation.real * deviation.real + deviation.imag * deviation.imag
+        for j in range(pointer[c], pointer[c + 1]):
+            sums[2, antenna[j]] += share * equalised * rescaled
         sums[4, antenna[pointer[c]]] += reference

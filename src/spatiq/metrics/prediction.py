@@ -242,6 +242,9 @@ def predict_ber(
         InputError: when shapes do not fit each other.
     """
     frames = _checked(h, n0, error_variance, codebook)
+    if codebook.block > 1:
+        nothing = np.full(frames.usable.size, np.nan)
+        return Prediction(nothing, nothing, nothing)
     plan = _plan(codebook, frames.h.shape[1])
     wrong = np.full((frames.usable.size, 2), np.nan)
     wrong[frames.usable] = _run(plan, frames, codebook.bits, np.empty((0, 0), np.float64))

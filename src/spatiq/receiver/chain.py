@@ -30,7 +30,7 @@ from spatiq.receiver.link_tables import LinkTables, link_tables
 from spatiq.receiver.matched_filter import FilterBank, filter_bank
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.refit import Refit
-from spatiq.receiver.soft_output import SoftOutput
+from spatiq.receiver.soft_output import SoftOutput, check_soft_output
 from spatiq.receiver.stretches import Stretch
 from spatiq.receiver.tracking import Tracking
 from spatiq.receiver.whitening import Whitening
@@ -134,9 +134,15 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
         *reception,
         Alignment(refit, reception),
         Whitening(refit),
-        Detection(link.codebook, find_detector(options.detector), options.compare_two_step),
+        Detection(
+            link.codebook,
+            find_detector(options.detector),
+            options.compare_two_step,
+            link.layout.payload_runs(),
+        ),
     ]
     if options.soft_output != "none":
+        check_soft_output(link.codebook)
         amplitude = link.layout.payload_amplitude
         stages.append(SoftOutput(link.codebook, amplitude, options.soft_output))
     return stages

@@ -19,15 +19,16 @@ from __future__ import annotations
 import importlib
 from collections.abc import Callable
 from dataclasses import dataclass
-from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.errors import InputError
-from spatiq.receiver.detection_kernels import detect_maximum_likelihood, detect_two_step
+from spatiq.receiver.differential_detection import detect_blocks
+from spatiq.receiver.exhaustive_search import nearest_vectors
 from spatiq.receiver.frame_batch import FrameBatch
-from spatiq.signal.codebooks import Codebook
+from spatiq.receiver.two_step import two_step
+from spatiq.signal.codebooks import Codebook, DifferentialCodebook
 
 Detector = Callable[
     [NDArray[np.complex64], NDArray[np.complex128], float, Codebook], NDArray[np.int64]
@@ -37,60 +38,13 @@ Detector = Callable[
 def maximum_likelihood(
     y: NDArray[np.complex64], channel: NDArray[np.complex128], noise: float, codebook: Codebook
 ) -> NDArray[np.int64]:
-    """Nearest received codeword: argmin over c of ||y - H x[c]||^2."""
-    received = (channel @ codebook.vectors.T).astype(np.complex64)
-    words = np.empty(y.shape[0], np.int64)
-    detect_maximum_likelihood(
-        y,
-        np.ascontiguousarray(received.real),
-        np.ascontiguousarray(received.imag),
-        np.sum(np.abs(received) ** 2, axis=0),
-        words,
-    )
-    return words
+    """Nearest received codeword: argmin over c of ||y - H x[c]||^2.
 
-
-def two_step(
-    y: NDArray[np.complex64], channel: NDArray[np.complex128], noise: float, codebook: Codebook
-) -> NDArray[np.int64]:
-    """Antenna set by maximum-ratio combining, then the symbol given the set.
-
-    Raises:
-        InputError: for codebooks in which a set has more than one active antenna.
+    In the differential form, the change of block that fits best: the channel is not used.
     """
-    plan = _two_step_plan(codebook)
-    columns = np.ascontiguousarray(channel[:, plan.antennas].T).astype(np.complex64)
-    words = np.empty(y.shape[0], np.int64)
-    detect_two_step(y, columns, plan.members, plan.counts, plan.values, words)
-    return words
-
-
-@dataclass(frozen=True, eq=False)
-class _TwoStepPlan:
-    """Words of each antenna (A, C), how many (A,), the antennas (A,), symbol of each word (C,)."""
-
-    members: NDArray[np.int64]
-    counts: NDArray[np.int64]
-    antennas: NDArray[np.int64]
-    values: NDArray[np.complex64]
-
-
-@lru_cache(maxsize=8)
-def _two_step_plan(codebook: Codebook) -> _TwoStepPlan:
-    if any(len(s) != 1 for s in codebook.antenna_sets):
-        raise InputError(
-            "receiver options", "detector", "two-step", "one active antenna per symbol period"
-        )
-    sets = len(codebook.antenna_sets)
-    members = np.full((sets, codebook.size), -1, np.int64)
-    counts = np.zeros(sets, np.int64)
-    for c in range(codebook.size):
-        s = codebook.set_index[c]
-        members[s, counts[s]] = c
-        counts[s] += 1
-    antennas = np.array([s[0] for s in codebook.antenna_sets], np.int64)
-    values = codebook.vectors[np.arange(codebook.size), antennas[codebook.set_index]]
-    return _TwoStepPlan(members, counts, antennas, values.astype(np.complex64))
+    if isinstance(codebook, DifferentialCodebook):
+        return detect_blocks(y, codebook)
+    return nearest_vectors(y, channel, codebook.vectors)
 
 
 DETECTORS: dict[str, Detector] = {
@@ -123,11 +77,19 @@ def find_detector(name: str) -> Detector:
 
 @dataclass(frozen=True, eq=False)
 class Detection:
-    """The stage: words of all payload periods by one detector, and by two-step to compare."""
+    """The stage: words of all payload periods by one detector, and by two-step to compare.
+
+    Attributes:
+        codebook: C words.
+        detector: see above.
+        compare_two_step: whether to run two-step beside it, where it applies.
+        runs: payload periods of each section; None: all in one.
+    """
 
     codebook: Codebook
     detector: Detector
     compare_two_step: bool
+    runs: tuple[int, ...] | None = None
 
     def __call__(self, batch: FrameBatch) -> FrameBatch:
         """Fill words and words_two_step.
@@ -135,17 +97,24 @@ class Detection:
         Raises:
             InputError: when a detector of one's own returns something else than words.
         """
-        compare = self.compare_two_step and all(len(s) == 1 for s in self.codebook.antenna_sets)
-        if compare:
+        if self.compare_two_step and self.codebook.single_antenna:
             batch.words_two_step = np.zeros_like(batch.words)
         for i in range(batch.count):
-            arguments = (batch.symbols[i], batch.channel[i], float(batch.noise[i]), self.codebook)
-            words = np.asarray(self.detector(*arguments))
+            words = self._frame(batch, i)
             _check_words(words, batch.words[i].shape, self.codebook.size)
             batch.words[i] = words
             if batch.words_two_step is not None:
-                batch.words_two_step[i] = two_step(*arguments)
+                arguments = (batch.symbols[i], batch.channel[i], float(batch.noise[i]))
+                batch.words_two_step[i] = two_step(*arguments, self.codebook)
         return batch
+
+    def _frame(self, batch: FrameBatch, i: int) -> NDArray[np.int64]:
+        """Words of a frame; in differential form section by section, for each has its reference."""
+        y, channel, noise = batch.symbols[i], batch.channel[i], float(batch.noise[i])
+        if self.codebook.block == 1 or self.runs is None:
+            return np.asarray(self.detector(y, channel, noise, self.codebook))
+        parts = np.split(y, np.cumsum(self.runs)[:-1])
+        return np.concatenate([self.detector(p, channel, noise, self.codebook) for p in parts])
 
 
 def _check_words(words: NDArray[np.int64], shape: tuple[int, ...], size: int) -> None:

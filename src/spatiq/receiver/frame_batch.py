@@ -66,9 +66,9 @@ class FrameBatch:
 
     Filled by symbol sampling and detection:
         symbols: complex64 (F, Kp, Nr); payload vectors, carrier phase removed.
-        words: int64 (F, Kp); decided words.
+        words: int64 (F, Kw); decided words.
         words_two_step: the same by the two-step detector, or None.
-        llr: float32 (F, Kp * b); log-likelihood ratios of the bits as sent, positive when 0 is
+        llr: float32 (F, Kw * b); log-likelihood ratios of the bits as sent, positive when 0 is
             likelier; None unless asked for.
         dispersive: the frames as they were received over a dispersive channel; `channel` and
             `symbols` then are a flat channel of the same energy (`DispersiveFrames.symbols`).
@@ -118,9 +118,12 @@ class FrameBatch:
 
 
 def empty_batch(
-    planes: NDArray[np.float32], antennas: int, active: int, payload: int
+    planes: NDArray[np.float32], antennas: int, active: int, payload: int, words: int
 ) -> FrameBatch:
-    """A batch with room for everything, nothing known yet; its samples go into `planes`."""
+    """A batch with room for everything, nothing known yet; its samples go into `planes`.
+
+    A frame has so many active periods, periods of payload, and words.
+    """
     count, channels = planes.shape[:2]
     return FrameBatch(
         planes=planes,
@@ -151,5 +154,5 @@ def empty_batch(
         antenna_delay_var=np.full((count, antennas), np.nan),
         aligned=np.zeros(count, np.uint8),
         symbols=np.zeros((count, payload, channels), np.complex64),
-        words=np.zeros((count, payload), np.int64),
+        words=np.zeros((count, words), np.int64),
     )

@@ -168,6 +168,7 @@ class Framing:
             self._link.antennas,
             self._tables.active.size,
             self._link.layout.payload_index.size,
+            self._link.words_per_frame,
         )
 
     def _missing(self, before: FoundStart | None, after: FoundStart) -> list[LostFrame]:

@@ -50,13 +50,14 @@ class LinkTables:
         header_rank: rank of X.
         header_centroid: energy-weighted mean period of the header.
         active: int64 (Ka,); all periods in which something is sent, ascending.
-        active_word: int64 (Ka,); running index of the payload word sent there, -1 for known
-            symbols.
-        payload: int64 (Kp,); indices of the payload among the active periods.
+        active_word: int64 (Ka,); running index of the payload period, -1 for known symbols.
+        payload: int64 (Kp,); indices of the payload among the active periods; in differential form
+            with its reference blocks, which are known symbols as well.
         active_vectors: known vectors of the active periods (empty rows at payload).
         known_vectors: complex64 (Ka, Nt); the known vectors of the active periods, zero at payload.
         known_gram: complex128 (Nt, Nt); sum of x x^H over all known vectors.
         active_amplitude: float32 (Ka,); amplitude factor of payload words, 1 elsewhere.
+        symbol_amplitude: float32 (Ka,); the same, reference blocks included.
         in_header: uint8 (Ka,); 1 where the active period belongs to the header.
         words: codeword vectors, sparse.
     """
@@ -73,6 +74,7 @@ class LinkTables:
     known_vectors: NDArray[np.complex64]
     known_gram: NDArray[np.complex128]
     active_amplitude: NDArray[np.float32]
+    symbol_amplitude: NDArray[np.float32]
     in_header: NDArray[np.uint8]
     words: SparseVectors
     codebook: Codebook
@@ -94,9 +96,12 @@ def link_tables(link: Link) -> LinkTables:
     energy = np.sum(np.abs(known) ** 2, axis=1)
     active = _active_periods(layout)
     word_of_period = np.full(layout.length, -1, np.int64)
-    word_of_period[layout.payload_index] = np.arange(layout.payload_index.size)
+    taken = layout.payload_index
+    words = taken[layout.kind[taken] == Period.PAYLOAD]  # without differential reference blocks
+    word_of_period[words] = np.arange(words.size)
     amplitude = np.ones(layout.length, np.float32)
-    amplitude[layout.payload_index] = layout.payload_amplitude
+    amplitude[taken] = layout.payload_amplitude
+    of_words = np.where(word_of_period >= 0, amplitude, np.float32(1.0))
     return LinkTables(
         header=header,
         header_vectors=sparse_vectors(known),
@@ -105,11 +110,12 @@ def link_tables(link: Link) -> LinkTables:
         header_centroid=float(np.sum(header * energy) / np.sum(energy)),
         active=active,
         active_word=word_of_period[active],
-        payload=np.flatnonzero(word_of_period[active] >= 0).astype(np.int64),
+        payload=np.searchsorted(active, taken).astype(np.int64),
         active_vectors=sparse_vectors(layout.known[active]),
         known_vectors=layout.known[active].astype(np.complex64),
         known_gram=layout.known.T @ layout.known.conj(),
-        active_amplitude=amplitude[active],
+        active_amplitude=of_words[active],
+        symbol_amplitude=amplitude[active],
         in_header=is_header[active].astype(np.uint8),
         words=sparse_vectors(codebook.vectors),
         codebook=codebook,

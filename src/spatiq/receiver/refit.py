@@ -93,7 +93,7 @@ class Refit:
             batch.noise[i],
             batch.residual[i],
         )
-        take_symbols(room[0], tables.payload, tables.active_amplitude, batch.symbols[i])
+        take_symbols(room[0], tables.payload, tables.symbol_amplitude, batch.symbols[i])
         slope = _mean_slope(tables.active, batch.phase[i])  # radians per symbol period
         batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
 
@@ -107,7 +107,7 @@ def _room(tables: LinkTables, channels: int, antennas: int) -> Room:
         np.empty((n, 2, channels), np.float32),
         np.empty(n, np.float32),
         np.empty((n, antennas), np.complex64),
-        np.empty(tables.codebook.size),
+        np.empty(tables.codebook.vectors.shape[0]),
         np.empty(n),
     )
 

@@ -104,6 +104,18 @@ def log_likelihood_ratios(
     return llr
 
 
+def check_soft_output(codebook: Codebook) -> None:
+    """There are no ratios for words of several periods.
+
+    Raises:
+        InputError: for the differential form.
+    """
+    if codebook.block > 1:
+        raise InputError(
+            "receiver options", "soft_output", codebook.scheme, "none with the differential form"
+        )
+
+
 @dataclass(frozen=True, eq=False)
 class SoftOutput:
     """The stage after detection.

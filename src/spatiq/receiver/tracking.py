@@ -9,8 +9,10 @@ algorithm interpretation", Proc. IEEE ICC 2003).
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
+import scipy.spatial
 from numpy.typing import NDArray
 
 from spatiq.receiver.frame_batch import FrameBatch
@@ -18,7 +20,7 @@ from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
 from spatiq.receiver.soft_kernels import floored_noise, received_codebook
 from spatiq.receiver.tracking_kernels import track_side
-from spatiq.signal.constellations import Constellation
+from spatiq.signal.codebooks import Codebook
 
 # A timing error of a symbol period's share d displaces symbols by about 1.85 d (the root of
 # 4 pi^2 xi, xi = 0.087). A quarter of the way to the nearest decision boundary is left to the
@@ -50,8 +52,8 @@ class Tracking:
         earlier = np.flatnonzero(outside & (tables.active < tables.header_centroid))[::-1]
         span = float(tables.active[-1] - tables.active[0])
         drift = _DISPLACEMENT * span * 2 * self.clock_std
-        with_timing = drift > _TOLERATED * _boundary(tables.codebook.constellation)
-        size, channels = tables.codebook.size, batch.planes.shape[1]
+        with_timing = drift > _TOLERATED * _boundary(tables.codebook)
+        size, channels = tables.codebook.vectors.shape[0], batch.planes.shape[1]
         real = np.empty((channels, size), np.float32)
         imag = np.empty((channels, size), np.float32)
         power = np.empty(size, np.float32)
@@ -107,10 +109,19 @@ class Tracking:
         batch.phase[i, inside] = track[2] + track[3] * distance
 
 
-def _boundary(constellation: Constellation) -> float:
-    """Half the smallest distance between points; the amplitude where there is only one."""
-    points = constellation.points
-    if points.size == 1:
-        return float(abs(points[0]))
-    distance = np.abs(points[:, None] - points)
-    return float(np.min(distance[distance > 0])) / 2
+@lru_cache(maxsize=8)
+def _boundary(codebook: Codebook) -> float:
+    """Half the smallest distance between vectors of the same active antennas; where each set has
+    only one, its amplitude."""
+    vectors = codebook.vectors
+    nearest = np.inf
+    patterns, group = np.unique(vectors != 0, axis=0, return_inverse=True)
+    for i in range(len(patterns)):
+        members = vectors[group.ravel() == i]
+        if len(members) == 1:
+            nearest = min(nearest, float(np.linalg.norm(members[0])))
+            continue
+        places = np.ascontiguousarray(members).view(np.float64)
+        distance = np.asarray(scipy.spatial.KDTree(places).query(places, 2)[0])
+        nearest = min(nearest, float(distance[:, 1].min()) / 2)
+    return nearest

@@ -99,16 +99,18 @@ class ResultsWriter:
         self._complete = False
         self._reasons: dict[str, int] = {}
         sets = link.codebook.antenna_sets
+        self._set_names = link.codebook.set_names
         antennas, channels = int(link.antennas), int(recording.channels)
         self._confusion = np.zeros((len(sets), len(sets)), np.int64)
         self._set_mask = np.zeros((len(sets), antennas), np.uint8)
         for row, members in enumerate(sets):
             self._set_mask[row, list(members)] = 1
         periods = int(link.layout.payload_index.size) if options.keep_symbols else 0
+        self._words = link.words_per_frame if options.keep_symbols else 0
         self._soft = options.soft_output
         self._soft_bits = 0
         if self._soft != "none":
-            self._soft_bits = int(link.layout.payload_index.size) * link.codebook.bits
+            self._soft_bits = link.words_per_frame * link.codebook.bits
         self._shapes = (len(sets), channels, antennas, periods)
 
     def __enter__(self) -> ResultsWriter:
@@ -178,8 +180,8 @@ class ResultsWriter:
                 meaning = f"{part} part of the received payload vectors, carrier removed"
                 # Noise does not shrink: compressing it would only cost time.
                 add(f"symbols/{part}", "f4", (periods, channels), meaning, compress=False)
-            add("symbols/words_decided", "i4", (periods,), "decided word of each payload period")
-            add("symbols/words_sent", "i4", (periods,), "the same as sent; -1 where unknown")
+            add("symbols/words_decided", "i4", (self._words,), "decided words of the payload")
+            add("symbols/words_sent", "i4", (self._words,), "the same as sent; -1 where unknown")
         if self._soft_bits:
             meaning = "log-likelihood ratio, natural logarithm, of each payload bit as sent"
             add("soft/llr", "f4", (self._soft_bits,), meaning, compress=False)
@@ -264,8 +266,11 @@ class ResultsWriter:
         mask.attrs["meaning"] = (
             "row = antenna set, column = transmit antenna; 1 = active in the set"
         )
-        reasons = list(self._reasons)
         text = h5py.string_dtype()
+        names = file["confusion"].create_dataset("names", data=list(self._set_names), dtype=text)
+        names.attrs["unit"] = ""
+        names.attrs["meaning"] = "name of each antenna set"
+        reasons = list(self._reasons)
         file["lost"].create_dataset("reasons", (len(reasons),), text, data=reasons or None)
         group = file.create_group("summary")
         group.create_dataset("json", data=json_text(summary), dtype=text)

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from spatiq.errors import InputError
 from spatiq.receiver.frame_batch import LostFrame
 from spatiq.results.hdf5 import FORMAT, LAYOUT_VERSION
+from spatiq.results.wording import antenna_set
 
 
 class Results:
@@ -110,6 +111,13 @@ class Results:
         return tuple(tuple(int(a) for a in np.flatnonzero(row)) for row in mask)
 
     @property
+    def set_names(self) -> tuple[str, ...]:
+        """Name of each antenna set, in the order of the confusion matrix."""
+        if "confusion/names" not in self.file:  # files of earlier versions: sets tell themselves
+            return tuple(antenna_set(s) for s in self.antenna_sets)
+        return tuple(str(name) for name in self.file["confusion/names"].asstr()[:])
+
+    @property
     def has_symbols(self) -> bool:
         """Whether received symbols and words were kept."""
         return "symbols" in self.file
@@ -126,7 +134,7 @@ class Results:
     def words(
         self, start: int = 0, stop: int | None = None
     ) -> tuple[NDArray[np.int32], NDArray[np.int32]]:
-        """Words decided and words sent (-1 where unknown), each of shape (n, Kp).
+        """Words decided and words sent (-1 where unknown), each of shape (n, Kw).
 
         Raises:
             InputError: they were not kept.
@@ -141,7 +149,7 @@ class Results:
         return str(self.file["soft/llr"].attrs["kind"]) if "soft" in self.file else "none"
 
     def llr(self, start: int = 0, stop: int | None = None) -> NDArray[np.float32]:
-        """Log-likelihood ratios of the payload bits as sent, float32, shape (n, Kp * b).
+        """Log-likelihood ratios of the payload bits as sent, float32, shape (n, Kw * b).
 
         Natural logarithm; positive when 0 is the likelier value.
 

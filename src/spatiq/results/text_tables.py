@@ -13,7 +13,6 @@ from rich.table import Table
 from spatiq.results.reader import Results
 from spatiq.results.wording import (
     DASH,
-    antenna_set,
     count,
     fixed,
     marks_text,
@@ -51,7 +50,7 @@ def confusion_table(results: Results) -> Table | None:
     matrix = results.confusion_total
     if not matrix.any():
         return None
-    names = [antenna_set(s) for s in results.antenna_sets]
+    names = list(results.set_names)
     sent = matrix.sum(axis=1)
     if len(names) > _WIDEST_MATRIX:
         return _frequent_confusions(matrix, names)

@@ -11,7 +11,7 @@ from spatiq.link.description import Link
 def frame_words(
     link: Link, frame_numbers: NDArray[np.int64], data_bits: NDArray[np.uint8] | None = None
 ) -> NDArray[np.int64]:
-    """Payload words of frames, shape (F, Kp): what selects the transmit vectors.
+    """Payload words of frames, shape (F, Kw): what selects the transmit vectors.
 
     Args:
         link: the link description.
@@ -29,7 +29,7 @@ def vectors_of_words(link: Link, words: NDArray[np.int64]) -> NDArray[np.complex
 
     Args:
         link: the link description.
-        words: int64, shape (F, Kp).
+        words: int64, shape (F, Kw).
 
     Returns:
         complex128, shape (F, K, Nt): vector of every symbol period, section power included.
@@ -37,7 +37,7 @@ def vectors_of_words(link: Link, words: NDArray[np.int64]) -> NDArray[np.complex
     layout = link.layout
     frames = np.repeat(layout.known[None], len(words), axis=0)
     amplitude = layout.payload_amplitude[:, None]
-    frames[:, layout.payload_index] = link.codebook.vectors[words] * amplitude
+    frames[:, layout.payload_index] = link.codebook.vectors[link.carried(words)] * amplitude
     return frames
 
 

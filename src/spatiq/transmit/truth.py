@@ -108,7 +108,7 @@ class Truth:
         return self.link.payload.encode(numbers, self.data_bits(first, stop))
 
     def words(self, first: int = 0, stop: int | None = None) -> NDArray[np.int64]:
-        """Payload words sent in frames first..stop-1, int64 (F, Kp)."""
+        """Payload words sent in frames first..stop-1, int64 (F, Kw)."""
         return frame_words(self.link, self.frame_numbers[first:stop], self.data_bits(first, stop))
 
     def vectors(self, first: int = 0, stop: int | None = None) -> NDArray[np.complex128]:

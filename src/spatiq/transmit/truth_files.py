@@ -24,7 +24,7 @@ def write_truth(truth: Truth, folder: Path, base: str) -> None:
     """Write both files.
 
     The npz holds, a row per frame: frame_numbers, starts (samples), cfo_hz, phase (radians at the
-    start), snr_db, H (complex, Nr x Nt, in the scale of the samples), and words (uint32, Kp) unless
+    start), snr_db, H (complex, Nr x Nt, in the scale of the samples), and words (uint32, Kw) unless
     there are more than `MOST_WORDS`. The JSON holds what is the same for all frames. Beside the
     rows there are, where they apply, the attributes of `Truth` of the same names: antenna_delays,
     receive_delays, noise_covariance, gaps; recorded_starts (sample numbers in the file, NaN for
@@ -36,7 +36,7 @@ def write_truth(truth: Truth, folder: Path, base: str) -> None:
     path_scale, path_direct, path_at_receiver, path_at_transmitter.
     """
     as_json, as_npz = truth_names(base)
-    words = truth.frames * len(truth.link.layout.payload_index)
+    words = truth.frames * truth.link.words_per_frame
     arrays: dict[str, Any] = {
         "frame_numbers": truth.frame_numbers,
         "starts": truth.starts,
