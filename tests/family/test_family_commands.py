@@ -110,3 +110,15 @@ def test_errors_are_counted_as_the_truth_says(tmp_path, name):
         spatial = np.tile(book.spatial_bits, words.shape[1]) & compared
         if spatial.any():
             assert results.summary["ber_spatial"]["errors"] == wrong[:, spatial].sum()
+
+
+@pytest.mark.parametrize("option", [("--llr", "exact"), ("--channel", "dispersive")])
+def test_what_the_differential_form_does_not_have_is_refused(tmp_path, option):
+    link = DEMO / "trolley_turns.link.toml"
+    base = tmp_path / "run"
+    program("simulate", link, "--out", base, "--frames", 2, *RATE)
+    arguments = ["measure", base.with_suffix(".sigmf-meta"), link, *option]
+    done = CliRunner().invoke(app, [str(a) for a in arguments])
+    assert done.exit_code == 2
+    assert "differential" in done.stderr and done.stderr.count("\n") == 1
+    assert not list(tmp_path.glob("*.h5"))

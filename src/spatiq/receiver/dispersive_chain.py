@@ -46,6 +46,9 @@ def dispersive_stages(
     if options.soft_output != "none":
         expected = "none on a dispersive channel"
         raise InputError("receiver options", "soft_output", options.soft_output, expected)
+    if link.codebook.block > 1:
+        expected = f"a flat channel for {link.codebook.scheme}"
+        raise InputError("receiver options", "channel", options.channel, expected)
     plan = dispersive_plan(link, options.memory)
     detect = run_detector(link, options)
     reception = DispersiveReception(
