@@ -33,7 +33,7 @@ def keys(finds):
 
 def joined(indexer, cuts):
     pieces = indexer.pieces(cuts)
-    return indexer.join(pieces, [indexer.search(piece) for piece in pieces])
+    return indexer.join(pieces, map(indexer.search, pieces)).finds()
 
 
 def with_gaps(capture):
@@ -57,10 +57,6 @@ def spoiled(capture):
     for at in np.linspace(0, samples.shape[1] - 40, 7).astype(int):
         samples[:, at : at + 25] = np.nan
     return samples
-
-
-def collect_share(recording, link, share):
-    return collect(recording, link, OPTIONS, stretch=share)
 
 
 def make(tmp_path, kind, link, seed, snr_db=12.0):
@@ -130,9 +126,13 @@ def test_frames_received_in_shares_are_those_received_in_one(
     recording = make(tmp_path, kind, link, seed=4, snr_db=15.0)
     expected = collect(recording, link, OPTIONS)
     indexer = FrameIndexer(recording, link, OPTIONS)
-    shares = indexer.share(whole(indexer), batches)
+    pieces = indexer.pieces([])
+    table = indexer.join(pieces, map(indexer.search, pieces))
+    shares = indexer.share(table, batches)
     assert len(shares) >= 2
-    parts = [collect_share(recording, link, share) for share in shares]
+    parts = [
+        collect(recording, link, OPTIONS, stretch=indexer.frames(table, *share)) for share in shares
+    ]
     assert [f for part in parts for f in part.lost] == expected.lost
     for name, values in expected.columns.items():
         got = np.concatenate([part.columns[name] for part in parts])

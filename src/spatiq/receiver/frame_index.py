@@ -9,20 +9,33 @@ nothing.
 
 from __future__ import annotations
 
-import itertools
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
+from numpy.typing import NDArray
 
 from spatiq.link.description import Link
 from spatiq.receiver.chain import chain_parts
 from spatiq.receiver.expected_frames import FoundStart
-from spatiq.receiver.frame_search import LAGS_PER_SYMBOL, last_lag
+from spatiq.receiver.frame_search import LAGS_PER_SYMBOL, Detection, last_lag
 from spatiq.receiver.framing import Framing
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.stretches import Find, ListedFrames, Place, SearchedStretch
 from spatiq.recording.recording import Recording
+
+_ROW = np.dtype(
+    [
+        ("segment", "i4"),
+        ("lag", "i8"),
+        ("carrier_bin", "i4"),
+        ("metric", "f8"),
+        ("since", "i8"),
+        ("crossed", "i8"),
+        ("entered", "?"),
+    ]
+)
 
 
 @dataclass(frozen=True)
@@ -47,6 +60,57 @@ class PieceIndex:
     finds: tuple[Find, ...]
     end: Place | None
     tails: dict[int, int]
+
+
+class FindTable:
+    """Finds of a whole recording, in order, kept as arrays: 40 bytes each."""
+
+    def __init__(self, rows: NDArray[np.void] | None = None) -> None:
+        self._rows = np.zeros(0, _ROW) if rows is None else rows
+        self._parts: list[NDArray[np.void]] = []
+
+    def add(self, finds: Sequence[Find]) -> None:
+        """Append finds."""
+        rows = [
+            (
+                f.segment,
+                f.found.lag,
+                f.found.carrier_bin,
+                f.found.metric,
+                f.since,
+                f.crossed,
+                f.entered,
+            )
+            for f in finds
+        ]
+        self._parts.append(np.array(rows, _ROW))
+
+    @property
+    def rows(self) -> NDArray[np.void]:
+        """One row for each find."""
+        if self._parts:
+            self._rows = np.concatenate([self._rows, *self._parts])
+            self._parts = []
+        return self._rows
+
+    @property
+    def count(self) -> int:
+        """Number of finds."""
+        return int(self.rows.size)
+
+    @property
+    def entered(self) -> NDArray[np.bool_]:
+        """Whether the frame of each is whole."""
+        return np.asarray(self.rows["entered"], np.bool_)
+
+    def finds(self, low: int = 0, high: int | None = None) -> list[Find]:
+        """Finds low..high-1."""
+        return [
+            Find(segment, Detection(lag, carrier_bin, metric), since, crossed, entered)
+            for segment, lag, carrier_bin, metric, since, crossed, entered in self.rows[
+                low:high
+            ].tolist()
+        ]
 
 
 class FrameIndexer:
@@ -112,43 +176,48 @@ class FrameIndexer:
         ).search()
         return PieceIndex(tuple(stretch.finds), stretch.end, stretch.tails)
 
-    def join(self, pieces: Sequence[Piece], found: Sequence[PieceIndex]) -> list[Find]:
-        """All finds, as of a single pass; searches on where two pieces do not meet."""
-        finds, end = list(found[0].finds), found[0].end
-        for piece, index in zip(pieces[1:], found[1:], strict=True):
+    def join(self, pieces: Sequence[Piece], found: Iterable[PieceIndex]) -> FindTable:
+        """All finds, as of a single pass; searches on where two pieces do not meet.
+
+        `found` holds one index for each piece, in order; only one is looked at a time.
+        """
+        table = FindTable()
+        end: Place | None = None
+        for piece, index in zip(pieces, found, strict=True):
             skipped: int | None = 0
             if end is not None:
                 skipped = _meeting(end, index)
                 if skipped is None:
                     on = self.search(_within_segment(end, piece, index))
-                    finds += on.finds
+                    table.add(on.finds)
                     end = on.end
                     skipped = _in_segment(index, piece.start.segment)
                     if end is not None and (skipped := _meeting(end, index)) is None:
                         continue  # nothing that this piece found is what the single pass finds
-            finds += index.finds[skipped:]
+            table.add(index.finds[skipped:])
             end = index.end
-        return finds
+        return table
 
-    def share(self, finds: Sequence[Find], batches: int) -> list[ListedFrames]:
-        """The finds in shares of so many whole batches of a single pass, the last with the rest."""
+    def share(self, table: FindTable, batches: int) -> list[tuple[int, int]]:
+        """Bounds of shares of so many whole batches of a single pass, the last with the rest."""
+        entered = np.flatnonzero(table.entered)
         each = batches * self.batch_size
-        bounds = [0]
-        entered = 0
-        for i, find in enumerate(finds):
-            entered += find.entered
-            if find.entered and entered % each == 0:
-                bounds.append(i + 1)
-        if not any(find.entered for find in finds[bounds[-1] :]) and len(bounds) > 1:
-            bounds.pop()  # what is left holds lost frames at most: it goes with the last batch
-        bounds.append(len(finds))
-        shares = []
-        for k, (low, high) in enumerate(itertools.pairwise(bounds)):
-            before = self._seen(finds[low - 1]) if low else None
-            read_from = 0 if before is None else self._read_from(finds[low - 1])
-            final = k == len(bounds) - 2
-            shares.append(ListedFrames(list(finds[low:high]), k == 0, final, before, read_from))
-        return shares
+        cuts = entered[each - 1 :: each] + 1
+        if cuts.size and not table.entered[cuts[-1] :].any():
+            cuts = cuts[:-1]  # what is left holds lost frames at most: it goes with the last batch
+        bounds = [0, *cuts.tolist(), table.count]
+        return list(pairwise(bounds))
+
+    def frames(self, table: FindTable, low: int, high: int) -> ListedFrames:
+        """The finds low..high-1, to be received as a share."""
+        before = None if low == 0 else table.finds(low - 1, low)[0]
+        return ListedFrames(
+            finds=table.finds(low, high),
+            first=low == 0,
+            final=high == table.count,
+            previous=None if before is None else self._seen(before),
+            read_from=0 if before is None else self._read_from(before),
+        )
 
     @property
     def batch_size(self) -> int:
