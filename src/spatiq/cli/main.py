@@ -9,6 +9,7 @@ from typing import Annotated, NoReturn
 import typer
 
 from spatiq import __version__
+from spatiq.cli.batch import batch_command
 from spatiq.cli.guard import guarded
 from spatiq.cli.link import link_app
 from spatiq.cli.measure import measure_command
@@ -47,6 +48,7 @@ def _program(
 
 app.command("measure")(guarded(measure_command))
 app.command("show")(guarded(show_command))
+app.command("batch")(guarded(batch_command))
 app.add_typer(link_app, name="link")
 app.command("waveform")(guarded(waveform_command))
 app.command("simulate")(guarded(simulate_command))

@@ -22,11 +22,16 @@ class _PipeConsole(Console):
         raise BrokenPipeError
 
 
+def wide_console() -> Console:
+    """A console on standard output that is never too narrow for a table."""
+    console = _PipeConsole(highlight=False, markup=False, emoji=False)
+    console.width = max(console.width, _LEAST_WIDTH)
+    return console
+
+
 def print_results(results: Results, *, rows: int, as_json: bool) -> None:
     """Print the tables, or the summary as JSON and nothing else."""
     if as_json:
         sys.stdout.write(json_text(results.summary) + "\n")
         return
-    console = _PipeConsole(highlight=False, markup=False, emoji=False)
-    console.width = max(console.width, _LEAST_WIDTH)
-    show_results(results, console, rows=rows)
+    show_results(results, wide_console(), rows=rows)

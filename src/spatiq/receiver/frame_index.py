@@ -71,18 +71,7 @@ class FindTable:
 
     def add(self, finds: Sequence[Find]) -> None:
         """Append finds."""
-        rows = [
-            (
-                f.segment,
-                f.found.lag,
-                f.found.carrier_bin,
-                f.found.metric,
-                f.since,
-                f.crossed,
-                f.entered,
-            )
-            for f in finds
-        ]
+        rows = [(f.segment, *_numbers(f.found), f.since, f.crossed, f.entered) for f in finds]
         self._parts.append(np.array(rows, _ROW))
 
     @property
@@ -241,6 +230,10 @@ class FrameIndexer:
         sps = self._parts.bank.samples_per_symbol
         first = self._seen(find).start + float(self._parts.tables.active[0]) * sps
         return max(int(first) - 2 * self._parts.bank.half - 8, 0)
+
+
+def _numbers(found: Detection) -> tuple[int, int, float]:
+    return found.lag, found.carrier_bin, found.metric
 
 
 def _meeting(end: Place, index: PieceIndex) -> int | None:

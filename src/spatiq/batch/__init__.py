@@ -1,0 +1,1 @@
+"""Many recordings: found, measured on all cores or a cluster, kept in a catalogue, compared."""
