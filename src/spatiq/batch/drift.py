@@ -85,6 +85,8 @@ def channel_correlation(
         time: (F,), s.
     """
     count = channel.shape[0]
+    if not count:
+        return []
     flat = channel.reshape(count, -1)
     error = np.nan_to_num(variance).sum(axis=1) * channel.shape[1]
     energy = np.maximum(np.sum(np.abs(flat) ** 2, axis=1) - error, 0.0)

@@ -43,7 +43,8 @@ def night_figures(catalogue: Catalogue) -> dict[str, Any]:
         ),
         "standouts": catalogue.rows(
             "SELECT DISTINCT name, figure, value, typical, score, reason FROM standouts "
-            "JOIN night USING (measurement) ORDER BY ABS(score) DESC, name, figure"
+            "JOIN night USING (measurement) "
+            "ORDER BY score IS NOT NULL, ABS(score) DESC, name, figure"
         ),
     }
 

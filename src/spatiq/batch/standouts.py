@@ -92,11 +92,14 @@ def find_standouts(
             name = f"power of antenna {row['antenna']}"
             power = row["power_db"]
             values[group, name][row["measurement"]] = power, power, 0.0
-    found = []
-    for (_, name), figures in sorted(values.items()):
+    found = [
+        _standout(key, "frames_found", 0.0, None, None, "no frame was found")
+        for key in sorted({r["measurement"] for r in rows if not r["frames_found"]})
+    ]
+    for (_, name), compared_figures in sorted(values.items()):
         figure = FIGURES.get(name, Figure(name, "dB", 0.2))
-        if len(figures) >= LEAST_GROUP:
-            found += _outside(name, figure, figures)
+        if len(compared_figures) >= LEAST_GROUP:
+            found += _outside(name, figure, compared_figures)
     return found
 
 
@@ -116,14 +119,23 @@ def _outside(
                 f"have {number(typical, figure.unit)} in the middle: "
                 f"{abs(score):.1f} robust deviations {'above' if score > 0 else 'below'}"
             )
-            found.append(
-                {
-                    "measurement": measurement,
-                    "figure": name,
-                    "value": shown,
-                    "typical": typical,
-                    "score": score,
-                    "reason": reason,
-                }
-            )
+            found.append(_standout(measurement, name, shown, typical, score, reason))
     return found
+
+
+def _standout(
+    measurement: str,
+    figure: str,
+    value: float,
+    typical: float | None,
+    score: float | None,
+    reason: str,
+) -> dict[str, Any]:
+    return {
+        "measurement": measurement,
+        "figure": figure,
+        "value": value,
+        "typical": typical,
+        "score": score,
+        "reason": reason,
+    }
