@@ -43,7 +43,13 @@ symbols = 120
 %s
 """
 FRAME = 63 + 2 * 16 + 120
-PRBS = '[[payload.field]]\ntype = "prbs"\nname = "PRBS15"\nbits = "rest"'
+PRBS = """
+[[payload.field]]
+type = "prbs"
+name = "PRBS15"
+bits = "rest"
+continuation = "running"
+"""
 COUNTER = '[[payload.field]]\ntype = "counter"\nbits = 8\n'
 PERIOD = f"period_symbols = {FRAME + 20.5}"
 
