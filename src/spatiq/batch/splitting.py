@@ -72,7 +72,7 @@ class Plan:
 
     def share(self, k: int, *, renumbered: bool = False) -> Path:
         """Measured frames of share k; `renumbered`: by the numbers found putting together."""
-        return self.folder / f"share-{k:05d}{'-renumbered' if renumbered else ''}.h5"
+        return self.folder / f"share-{k:05d}{'-renumbered' if renumbered else ''}.spool"
 
     def numbers(self, k: int) -> Path:
         """Right numbers of a share's frames."""
