@@ -20,7 +20,7 @@ from spatiq.errors import InputError
 from spatiq.link.description import Link
 from spatiq.receiver.acquisition import Acquisition
 from spatiq.receiver.alignment import Alignment
-from spatiq.receiver.detection import Detection, find_detector
+from spatiq.receiver.detection import Detection, check_detector_applies, find_detector
 from spatiq.receiver.dispersive_chain import dispersive_stages
 from spatiq.receiver.edge_frames import EdgeFrames
 from spatiq.receiver.frame_batch import FrameBatch, LostFrame
@@ -130,6 +130,7 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
         Tracking(parts.bank, parts.tables, clock_std, walk),
         refit,
     ]
+    check_detector_applies(options.detector, link.codebook)
     stages: list[Stage] = [
         *reception,
         Alignment(refit, reception),

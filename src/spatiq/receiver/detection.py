@@ -5,13 +5,16 @@ A detector is a function
     detect(y, channel, noise, codebook) -> words
 
 with y complex64 (K, Nr), channel complex128 (Nr, Nt), noise N0, codebook a `Codebook`, and words
-int64 (K,). To add one: enter it in `DETECTORS`. One's own from outside the package is named
-"module:function" in the receiver options.
+int64 (K,). In differential form y is a reference block and a block for each word, words int64
+(K / Nt - 1,), and the channel means nothing. What a detector cannot do it refuses with an
+`InputError`.
 
-Sources: maximum likelihood: J. Jeganathan, A. Ghrayeb, L. Szczecinski, "Spatial modulation: optimal
-detection and performance analysis", IEEE Commun. Lett. 12(8), 2008. Two-step: R. Mesleh et al.,
-"Spatial modulation", IEEE Trans. Veh. Technol. 57(4), 2008, with the metric divided by the norm of
-the channel column, as it must be when the columns differ in norm.
+To add one: a file of its own, and an entry in `DETECTORS`: the contract suite runs over them. One's
+own from outside the package is named "module:function" in the receiver options, and put through the
+same suite by
+
+    from spatiq.receiver.detector_contract import check_detector
+    print(check_detector(my_detector))
 """
 
 from __future__ import annotations
@@ -27,6 +30,8 @@ from spatiq.errors import InputError
 from spatiq.receiver.differential_detection import detect_blocks
 from spatiq.receiver.exhaustive_search import nearest_vectors
 from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.project_and_slice import project_and_slice
+from spatiq.receiver.tree_search import tree_search
 from spatiq.receiver.two_step import two_step
 from spatiq.signal.codebooks import Codebook, DifferentialCodebook
 
@@ -49,6 +54,8 @@ def maximum_likelihood(
 
 DETECTORS: dict[str, Detector] = {
     "maximum-likelihood": maximum_likelihood,
+    "project-and-slice": project_and_slice,
+    "tree-search": tree_search,
     "two-step": two_step,
 }
 
@@ -73,6 +80,19 @@ def find_detector(name: str) -> Detector:
         raise InputError("receiver options", "detector", name, "a function")
     detector: Detector = found
     return detector
+
+
+def check_detector_applies(name: str, codebook: Codebook, channels: int = 2) -> None:
+    """A registered detector that cannot decide a codebook says so before anything is received.
+
+    Raises:
+        InputError: what the detector refuses.
+    """
+    # Maximum likelihood applies to all; at first use its kernel is compiled elsewhere meanwhile.
+    if name in DETECTORS and name != "maximum-likelihood":
+        nothing = np.empty((0, channels), np.complex64)
+        flat = np.eye(channels, codebook.antennas, dtype=np.complex128)
+        DETECTORS[name](nothing, flat, 1.0, codebook)
 
 
 @dataclass(frozen=True, eq=False)

@@ -26,6 +26,14 @@ _THREE = np.array(
     ],
     np.complex128,
 )  # fmt: skip
+# One antenna at a time, with three, three and two symbols.
+_ALONE = np.array(
+    [
+        [1, 0, 0], [-1, 0, 0], [1j, 0, 0], [0, 1j, 0],
+        [0, -1j, 0], [0, -1, 0], [0, 0, 2], [0, 0, -1],
+    ],
+    np.complex128,
+)  # fmt: skip
 _UNEVEN = Constellation("two rings", np.array([1.2, 1.2j, -0.7, -0.7j]) / np.sqrt(0.965))
 
 
@@ -66,5 +74,9 @@ def scheme_examples() -> dict[str, list[Codebook]]:
             differential_spatial_modulation(3, qpsk, first_permutations(3), [6, 1]),
             differential_spatial_modulation(4, bpsk, first_permutations(4), [0, 1, 2, 3]),
         ],
-        "vector-table": [vector_table(_THREE, True), vector_table(_THREE, False, [0])],
+        "vector-table": [
+            vector_table(_THREE, True),
+            vector_table(_THREE, False, [0]),
+            vector_table(_ALONE, True),
+        ],
     }
