@@ -69,21 +69,44 @@ def test_error_is_that_of_least_squares():
 
 @pytest.mark.parametrize("window", [Window(0, 0), Window(0, 2), Window(-2, 4), Window(-1, 1)])
 def test_length_by_the_information_criterion(window):
-    """At 25 dB with taps of equal power the window is found nearly always (Schwarz 1978).
+    """At 25 dB with taps of equal power: never too short, and seldom too long.
 
-    A tap too many needs a chi-square of 2 Nr Nt = 8 degrees of freedom above 2 * 4 ln n = 35:
-    probability 3e-5 for each of a few neighbours. A tap too few needs all four coefficients of a
-    tap in deep fades at once.
+    One lag too many is taken when a chi-square of 2 Nr Nt = 8 degrees of freedom passes 16 (twice
+    their number), probability 0.042, at either end; with the corrections of a short frame less
+    often. Of 200 windows 0.92 are right or more; 0.80 is seven standard errors below. One too short
+    needs all four coefficients of a tap in deep fades at once.
     """
     plan = dispersive_plan(make_link(sections=SECTIONS), None)
     rng = np.random.default_rng(3)
     begin = window.first - plan.window.first
     part = plan.shifted[:, begin : begin + window.size]
-    for _ in range(60):
+    right = 0
+    for _ in range(200):
         taps = fading_taps(rng, window.size, 2, 2)
         y = np.einsum("kla,lra->kr", part, taps)
         fit = FirFit(plan.shifted, y + complex_noise(rng, y.shape, 10**-2.5), plan.window)
-        assert fit.best(plan.windows) == window
+        found = fit.best(plan.windows)
+        assert found.first <= window.first
+        assert found.last >= window.last
+        right += found == window
+    assert right > 160
+
+
+@pytest.mark.nojit
+def test_fit_without_some_rows():
+    """Taking rows out is fitting the others."""
+    rng = np.random.default_rng(6)
+    shifted = complex_noise(rng, (60, 3, 2), 1.0)
+    received = complex_noise(rng, (60, 2), 1.0)
+    window = Window(-1, 1)
+    rest = FirFit(shifted, received, window).without(shifted[20:35], received[20:35])
+    chosen = np.r_[0:20, 35:60]
+    alone = FirFit(shifted[chosen], received[chosen], window)
+    for inner in (window, Window(0, 1)):
+        one, other = rest.solve(inner), alone.solve(inner)
+        np.testing.assert_allclose(one.taps, other.taps, atol=1e-9)
+        assert one.noise == pytest.approx(other.noise)
+        assert one.freedom == other.freedom
 
 
 def test_carrier_with_an_unknown_dispersive_channel():

@@ -4,6 +4,12 @@ Known symbols give carrier and impulse responses (`dispersive_acquisition`), a f
 words and phase (`dispersive_tracking`); then, in rounds, all symbols of the frame give phase,
 symbol clock, impulse responses, their length and N0 anew, and the words are decided again.
 
+The words of a part of the frame are decided with the impulse responses that all the rest of it
+gives. Fitted to its own words as well they would be drawn towards these, wrong ones included: with
+many taps that costs as much as the estimate's error itself. (Leaving a part out is how such bias is
+avoided elsewhere, e.g. M. Stone, "Cross-validatory choice and assessment of statistical
+predictions", J. R. Statist. Soc. B 36(2), 1974, from memory.)
+
 Noise is taken to be white and equal over the receive channels, the channel to stand still within a
 frame but for its common phase, and the frame to be alone: nothing else within the channel's memory
 before and behind it. Wrong words make N0 a little small (as they are the words that fit best).
@@ -11,7 +17,7 @@ before and behind it. Wrong words make N0 a little small (as they are the words 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -33,6 +39,8 @@ from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.matched_filter import FilterBank, derotate
 from spatiq.receiver.refit_kernels import refit_phase
 
+# Parts of a frame that are decided with the channel of the rest, and words in one at least.
+PARTS, LEAST_PART = 8, 32
 _WIDE = (10.0, 1.0)  # prior variances of phase and carrier left: nothing is assumed
 
 
@@ -44,6 +52,7 @@ class _Frame:
     channel: FirChannel
     words: NDArray[np.int64]
     phase: NDArray[np.float32]
+    parts: list[tuple[int, int, FirChannel]] = field(default_factory=list)
 
 
 @dataclass(frozen=True, eq=False)
@@ -159,7 +168,16 @@ class DispersiveReception:
         )
         frame.received = turned * np.exp(-1j * (frame.phase - before))[:, None]
         fit = FirFit(shifted, frame.received[rows], WIDEST)
-        frame.channel = fit.solve(fit.best(_identified(WIDEST, self.memory, rows.size)))
+        window = fit.best(_identified(WIDEST, self.memory, rows.size))
+        frame.channel = fit.solve(window)
+        frame.parts = []
+        parts = _parts(plan)
+        for begin, end in parts:
+            inside = (rows >= begin) & (rows < end)
+            rest = fit.without(shifted[inside], frame.received[rows[inside]])
+            # One part alone would leave the known symbols only.
+            channel = rest.solve(window) if len(parts) > 1 else frame.channel
+            frame.parts.append((begin, end, channel))
 
     def _refit_clock(
         self,
@@ -200,20 +218,35 @@ class DispersiveReception:
         batch.timing_var[i] = np.nan
 
     def _decide(self, frame: _Frame) -> None:
-        plan, channel = self.plan, frame.channel
-        around = convolved(plan.known, channel.taps, channel.window)
-        frame.words = self.detect(
-            frame.received - around,
-            channel.taps,
-            channel.window,
-            channel.noise,
-            plan.amplitude,
-            None,
-        )
+        """Words of each part, together with some around it that are decided with their own."""
+        plan, periods = self.plan, self.plan.amplitude.size
+        before = plan.vectors(frame.words[plan.payload])
+        words = np.full(periods, -1, np.int64)
+        for begin, end, channel in frame.parts:
+            window = channel.window
+            margin = 2 * window.memory + 8
+            run = np.arange(max(begin - margin, 0), min(end + margin, periods))
+            amplitude = plan.amplitude[run]
+            around = before.copy()
+            around[run] = plan.known[run]
+            left = frame.received - convolved(around, channel.taps, window)
+            arguments = (channel.taps, window, frame.channel.noise, amplitude, None)
+            found = self.detect(left[run], *arguments)
+            inside = (run >= begin) & (run < end)
+            words[run[inside]] = found[inside]
+        frame.words = words
 
 
 def _identified(widest: Window, memory: int | None, rows: int) -> list[Window]:
     return [w for w in widest.inside(memory) if w.size < rows] or [Window(0, 0)]
+
+
+def _parts(plan: DispersivePlan) -> list[tuple[int, int]]:
+    """Periods that hold payload, in up to `PARTS` stretches of about as many words."""
+    count = int(np.clip(plan.payload.size // LEAST_PART, 1, PARTS))
+    ends = plan.payload[[(plan.payload.size * (p + 1)) // count - 1 for p in range(count)]] + 1
+    begins = [int(plan.payload[0]), *(int(end) for end in ends[:-1])]
+    return list(zip(begins, (int(end) for end in ends), strict=True))
 
 
 def _planes(values: Complex) -> NDArray[np.float32]:
