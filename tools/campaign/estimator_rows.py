@@ -12,7 +12,11 @@ from campaign.captures import Samples, matched, recorded
 from campaign.links import campaign_link
 from campaign.sections import Row, Section
 from spatiq.link.loading import Link
-from spatiq.metrics.estimator_bounds import rrc_mean_square_bandwidth
+from spatiq.metrics.estimator_bounds import (
+    known_vectors_offset,
+    known_vectors_timing,
+    rrc_mean_square_bandwidth,
+)
 from spatiq.receiver.chain import chain_parts, receive, standard_stages
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.recording.recording import Recording
@@ -49,9 +53,9 @@ class Estimates:
 
 @dataclass(frozen=True, eq=False)
 class Errors:
-    """Squared errors of some frames, times the information where there is a bound.
+    """Squared errors of some frames, over their bounds where there are bounds.
 
-    carrier, timing: times the information of the known symbols; `_all`: of all symbols;
+    carrier, timing: over the bound of the known symbols; `_all`: of all symbols;
     channel: sum over coefficients, per N0.
     """
 
@@ -61,28 +65,6 @@ class Errors:
     timing_all: Floats
     timing_symbols: Floats
     channel: Floats
-
-
-def carrier_information(x: NDArray[np.complex128], channel: NDArray[np.complex128]) -> float:
-    """Information about the carrier, (radians per symbol)^-2, times N0, channel unknown.
-
-    D. C. Rife, R. R. Boorstyn, IEEE Trans. Inf. Theory 20(5), 1974, for one antenna; for several,
-    what of k X H^T lies outside the column space of X.
-    """
-    sent = np.flatnonzero(np.any(x != 0, axis=1))
-    rows = x[sent]
-    slope = sent[:, None] * (rows @ channel.T)
-    fitted = rows @ np.linalg.lstsq(rows, slope, rcond=None)[0]
-    return float(2 * np.sum(np.abs(slope - fitted) ** 2))
-
-
-def timing_information(x: NDArray[np.complex128], channel: NDArray[np.complex128]) -> float:
-    """Information about timing, (symbol periods)^-2, times N0: 8 pi^2 xi sum |H x|^2.
-
-    Modified bound: A. N. D'Andrea, U. Mengali, R. Reggiannini, IEEE Trans. Commun. 42, 1994.
-    """
-    energy = np.sum(np.abs(x @ channel.T) ** 2)
-    return float(8 * np.pi**2 * rrc_mean_square_bandwidth(_ROLLOFF) * energy)
 
 
 def _estimates(recording: Recording, link: Link, acquired_only: bool) -> Estimates:
@@ -119,10 +101,10 @@ def _errors(truth: Truth, found: Estimates, centre: float) -> Errors:
         known = layout.known
         rows.append(
             (
-                turn**2 * carrier_information(known, h) / truth.N0,
-                turn**2 * carrier_information(everything, h) / truth.N0,
-                late**2 * timing_information(known, h) / truth.N0,
-                late**2 * timing_information(everything, h) / truth.N0,
+                turn**2 / known_vectors_offset(known, h, truth.N0),
+                turn**2 / known_vectors_offset(everything, h, truth.N0),
+                late**2 / known_vectors_timing(known, h, truth.N0, _ROLLOFF),
+                late**2 / known_vectors_timing(everything, h, truth.N0, _ROLLOFF),
                 late**2,
                 _aligned_error(found.channel[i], h) / truth.N0,
             )

@@ -54,7 +54,7 @@ def run(names: Sequence[str], quick: bool, only: str = "") -> int:
     # A fresh interpreter for each worker: what threads a library holds is not copied half-way.
     context = multiprocessing.get_context("spawn")
     missed: list[str] = []
-    worst = 0.0
+    worst, bare = 0.0, 0
     with ProcessPoolExecutor(min(2, os.cpu_count() or 1), mp_context=context) as pool:
         waiting = {
             (name, key): pool.submit(_measure, name, key, quick)
@@ -74,9 +74,12 @@ def run(names: Sequence[str], quick: bool, only: str = "") -> int:
                 print(row.line(), flush=True)
                 missed += [f"{section.name}: {key}"] if row.faults else []
                 worst = max(worst, row.ber_ratio or 0.0)
+                bare += row.compares and row.ber_ratio is None
             print()
     print(f"{time.monotonic() - began:.0f} s; rows with a bar missed: {len(missed)}")
     for name in missed:
         print(f"    {name}")
+    if bare:
+        print(f"rows in which nothing could be compared with the genie: {bare}")
     print(f"worst BER over genie's: {worst:.4f}" if worst else "worst BER over genie's: none")
     return 1 if missed else 0

@@ -45,7 +45,8 @@ class Counts:
     elsewhere: int
 
 
-def _link(row: Impairment) -> Link:
+def link_of(row: Impairment) -> Link:
+    """The link description of a row."""
     antennas, constellation, choices = impaired_link_text(row.link)
     return campaign_link(antennas, constellation, **choices)
 
@@ -114,7 +115,7 @@ def _keys(quick: bool) -> tuple[str, ...]:
 
 def _measured(key: str, quick: bool) -> Row:
     row = IMPAIRMENTS[key]
-    link = _link(row)
+    link = link_of(row)
     snr_db = operating_snr(link, row.receivers, row.ber) if row.snr_db is None else row.snr_db
     frames = row.quick if quick else row.frames
     seed = 51_000_000 + 10_000 * list(IMPAIRMENTS).index(key)
@@ -122,10 +123,11 @@ def _measured(key: str, quick: bool) -> Row:
         _trial(row, link, snr_db, min(_FRAMES_AT_ONCE, frames - first), seed + first)
         for first in range(0, frames, _FRAMES_AT_ONCE)
     ]
-    return _row(key, row, snr_db, link.layout.payload_index.size * link.codebook.bits, parts)
+    return judged(key, row, snr_db, link.layout.payload_index.size * link.codebook.bits, parts)
 
 
-def _row(key: str, row: Impairment, snr_db: float, frame_bits: int, parts: list[Counts]) -> Row:
+def judged(key: str, row: Impairment, snr_db: float, frame_bits: int, parts: list[Counts]) -> Row:
+    """The row's text and what it misses."""
     found, bits, errors = (_joined(parts, name) for name in ("found", "bits", "errors"))
     genie, predicted = _joined(parts, "genie"), _joined(parts, "predicted")
     elsewhere = sum(part.elsewhere for part in parts)
@@ -135,7 +137,7 @@ def _row(key: str, row: Impairment, snr_db: float, frame_bits: int, parts: list[
     text = f"{key:<70} {snr_db:5.1f} {found.size:>5} {lost:>5} {elsewhere:>5} {unknown:>5}"
     faults = [] if row.lossy or lost <= LOST_BAR * found.size else ["frames"]
     if not known.any() or not genie[known].sum():
-        return Row(f"{text}  nothing to compare", (*faults, "BER"))
+        return Row(f"{text}  nothing to compare", (*faults, "BER"), compares=True)
     share = bits[known] / frame_bits  # of a frame that counts
     fair = genie[known] * share
     over = ratio(errors[known], fair)
@@ -148,7 +150,7 @@ def _row(key: str, row: Impairment, snr_db: float, frame_bits: int, parts: list[
     text += f"  {over.value:7.3f} +- {over.error:.3f}  {rest:6.3f}  {foretold:6.3f}"
     if not over.value <= BER_BAR:
         faults.append("BER")
-    return Row(text, tuple(faults), over.value)
+    return Row(text, tuple(faults), over.value, compares=True)
 
 
 SECTION = Section(
@@ -164,7 +166,7 @@ SECTION = Section(
         "'elsewhere': found where none was sent; 'unkn.': place in the reference not known;\n"
         f"'astray': more than {_ASTRAY[0]:g} times the genie's errors and {_ASTRAY[1]} beyond;"
         " 'others': BER over genie\nwithout those. 'predicted': the receiver's predicted BER over"
-        " the genie's.\n"
+        " the genie's\n(it allows for the channel estimate's error: metrics/prediction.py).\n"
         f"{'':<70} {'SNR':>5} {'sent':>5} {'lost':>5} {'elsew':>5} {'unkn.':>5} {'astray':>6}"
         f" {'genie BER':>9}  {'BER over genie':>16}  {'others':>6} {'predicted':>9}"
     ),

@@ -17,12 +17,14 @@ class Row:
     Attributes:
         text: what is printed, one line or more.
         faults: bars that it misses.
-        ber_ratio: BER over the genie's, where that is what the row measures.
+        ber_ratio: BER over the genie's, where that is what the row measures and could be measured.
+        compares: whether that is what the row measures.
     """
 
     text: str
     faults: tuple[str, ...] = field(default=())
     ber_ratio: float | None = None
+    compares: bool = False
 
     def line(self) -> str:
         """The text, and what is missed."""

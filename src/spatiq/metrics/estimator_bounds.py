@@ -70,6 +70,38 @@ def two_block_offset(block: int, snr: ArrayLike) -> Bound:
     return 1.0 / (4.0 * math.pi**2 * float(block) ** 3 * np.asarray(snr, dtype=np.float64))
 
 
+def known_vectors_offset(vectors: ArrayLike, channel: ArrayLike, n0: float) -> float:
+    """Cramer-Rao bound of the carrier offset, (radians per symbol)^2, from known vectors.
+
+    The flat channel is unknown, and so costs what of k X H^T its column space explains. One antenna
+    sending without a pause gives `tone_frequency`, in radians (after D. C. Rife and R. R. Boorstyn,
+    1974).
+
+    Args:
+        vectors: complex (K, Nt); transmit vectors of consecutive symbol periods, 0 where nothing is
+            known.
+        channel: complex (Nr, Nt).
+        n0: noise variance per received symbol.
+    """
+    x = np.asarray(vectors, dtype=np.complex128)
+    periods = np.flatnonzero(np.any(x != 0, axis=1))
+    rows = x[periods]
+    slope = periods[:, None] * (rows @ np.asarray(channel, dtype=np.complex128).T)
+    fitted = rows @ np.linalg.lstsq(rows, slope, rcond=None)[0]
+    return float(n0 / (2.0 * np.sum(np.abs(slope - fitted) ** 2)))
+
+
+def known_vectors_timing(
+    vectors: ArrayLike, channel: ArrayLike, n0: float, rolloff: float
+) -> float:
+    """Modified bound of the timing over the symbol period from known vectors: `modified_timing`.
+
+    Arguments as for `known_vectors_offset`; L Es is the energy received in all channels.
+    """
+    received = np.asarray(vectors, np.complex128) @ np.asarray(channel, np.complex128).T
+    return float(modified_timing(1, np.sum(np.abs(received) ** 2) / n0, rolloff))
+
+
 def least_squares_channel(pilots: ArrayLike, n0: float) -> Bound:
     """Error variance of each entry of the least-squares channel, per transmit antenna, (Nt,).
 
