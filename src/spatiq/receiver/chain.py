@@ -20,6 +20,7 @@ from spatiq.errors import InputError
 from spatiq.link.description import Link
 from spatiq.receiver.acquisition import Acquisition
 from spatiq.receiver.alignment import Alignment
+from spatiq.receiver.channel_following import channel_following
 from spatiq.receiver.detection import Detection, check_detector_applies, find_detector
 from spatiq.receiver.dispersive_chain import dispersive_stages
 from spatiq.receiver.edge_frames import EdgeFrames
@@ -125,6 +126,7 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     if options.channel == "dispersive":
         return dispersive_stages(link, options, acquisition, clock_std, walk)
     refit = Refit(parts.bank, parts.tables, clock_std, walk)
+    following = channel_following(refit, link.layout.payload_index.size)
     reception: list[Stage] = [
         acquisition,
         Tracking(parts.bank, parts.tables, clock_std, walk),
@@ -134,7 +136,8 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     stages: list[Stage] = [
         *reception,
         Alignment(refit, reception),
-        Whitening(refit),
+        following,
+        Whitening(following),
         Detection(
             link.codebook,
             find_detector(options.detector),

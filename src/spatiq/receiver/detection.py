@@ -124,17 +124,25 @@ class Detection:
             _check_words(words, batch.words[i].shape, self.codebook.size)
             batch.words[i] = words
             if batch.words_two_step is not None:
-                arguments = (batch.symbols[i], batch.channel[i], float(batch.noise[i]))
-                batch.words_two_step[i] = two_step(*arguments, self.codebook)
+                batch.words_two_step[i] = self._along(batch, i, two_step)
         return batch
 
     def _frame(self, batch: FrameBatch, i: int) -> NDArray[np.int64]:
         """Words of a frame; in differential form section by section, for each has its reference."""
-        y, channel, noise = batch.symbols[i], batch.channel[i], float(batch.noise[i])
         if self.codebook.block == 1 or self.runs is None:
-            return np.asarray(self.detector(y, channel, noise, self.codebook))
+            return self._along(batch, i, self.detector)
+        y, channel, noise = batch.symbols[i], batch.channel[i], float(batch.noise[i])
         parts = np.split(y, np.cumsum(self.runs)[:-1])
         return np.concatenate([self.detector(p, channel, noise, self.codebook) for p in parts])
+
+    def _along(self, batch: FrameBatch, i: int, detector: Detector) -> NDArray[np.int64]:
+        """Words of a frame, run by run of the channel where it moves."""
+        noise = float(batch.noise[i])
+        parts = [
+            np.asarray(detector(batch.symbols[i, run], channel, noise, self.codebook))
+            for run, channel in batch.channel_runs(i)
+        ]
+        return parts[0] if len(parts) == 1 else np.concatenate(parts)
 
 
 def _check_words(words: NDArray[np.int64], shape: tuple[int, ...], size: int) -> None:

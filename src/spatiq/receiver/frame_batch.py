@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.receiver.dispersive_frames import DispersiveFrames
+from spatiq.receiver.moving_channel import MovingChannel
 
 
 @dataclass(frozen=True)
@@ -21,8 +23,19 @@ class LostFrame:
 
 
 RECEIVE_ALIGNED, ANTENNAS_ALIGNED = 1, 2
+MOTION_PARTS = 16  # parts of a frame over which the motion test adds up residuals
 NOT_FOUND = "not found"
 NOT_FINITE = "samples not finite"
+
+
+@dataclass(frozen=True, eq=False)
+class Acquired:
+    """What the known symbols at one place of each frame told, kept for those that lose track."""
+
+    t0: NDArray[np.float64]
+    step: NDArray[np.float64]
+    channel: NDArray[np.complex128]
+    noise: NDArray[np.float64]
 
 
 @dataclass
@@ -63,6 +76,10 @@ class FrameBatch:
         receive_delay, receive_delay_var: float64 (F, Nr); samples.
         antenna_delay, antenna_delay_var: float64 (F, Nt); symbol periods.
         aligned: uint8 (F,); which delays were taken out: `RECEIVE_ALIGNED`, `ANTENNAS_ALIGNED`.
+        motion_scores, motion_energy, motion_reference: sums along each frame, see `motion_sums`.
+        moving: what moved within each frame, None where nothing did; empty when nothing did in any.
+            `channel` is then that in the middle of the payload.
+        acquired: t0, step, channel and noise as acquisition left them.
 
     Filled by symbol sampling and detection:
         symbols: complex64 (F, Kp, Nr); payload vectors, carrier phase removed.
@@ -102,12 +119,17 @@ class FrameBatch:
     antenna_delay: NDArray[np.float64]
     antenna_delay_var: NDArray[np.float64]
     aligned: NDArray[np.uint8]
+    motion_scores: NDArray[np.complex128]
+    motion_energy: NDArray[np.float64]
+    motion_reference: NDArray[np.float64]
     symbols: NDArray[np.complex64]
     words: NDArray[np.int64]
     header_freedom: int = 0
     words_two_step: NDArray[np.int64] | None = None
     llr: NDArray[np.float32] | None = None
     dispersive: DispersiveFrames | None = None
+    moving: list[MovingChannel | None] = field(default_factory=list)
+    acquired: Acquired | None = None
     lost: list[LostFrame] = field(default_factory=list)
     final: bool = False
 
@@ -115,6 +137,14 @@ class FrameBatch:
     def count(self) -> int:
         """Number of frames, F."""
         return int(self.first_sample.size)
+
+    def channel_runs(self, i: int) -> Iterator[tuple[slice, NDArray[np.complex128]]]:
+        """Runs of payload periods of frame i and their channel (Nr, Nt); one where it is still."""
+        moving = self.moving[i] if self.moving else None
+        if moving is None:
+            yield slice(0, self.symbols.shape[1]), self.channel[i]
+        else:
+            yield from moving.runs()
 
 
 def empty_batch(
@@ -153,6 +183,9 @@ def empty_batch(
         antenna_delay=np.full((count, antennas), np.nan),
         antenna_delay_var=np.full((count, antennas), np.nan),
         aligned=np.zeros(count, np.uint8),
+        motion_scores=np.zeros((count, MOTION_PARTS, channels, antennas), np.complex128),
+        motion_energy=np.zeros((count, MOTION_PARTS, antennas)),
+        motion_reference=np.zeros((count, MOTION_PARTS)),
         symbols=np.zeros((count, payload, channels), np.complex64),
         words=np.zeros((count, words), np.int64),
     )

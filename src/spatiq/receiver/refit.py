@@ -18,6 +18,7 @@ from spatiq.receiver.alignment_kernels import delay_scores
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
+from spatiq.receiver.motion_kernels import motion_sums
 from spatiq.receiver.refit_kernels import refit_round, residual_covariance, take_symbols
 
 Room = tuple[F32, F32, F32, F32, C64, F64, F64]
@@ -92,6 +93,14 @@ class Refit:
             batch.channel[i],
             batch.noise[i],
             batch.residual[i],
+        )
+        motion_sums(
+            room[0],
+            room[4],
+            batch.channel[i],
+            batch.motion_scores[i],
+            batch.motion_energy[i],
+            batch.motion_reference[i],
         )
         take_symbols(room[0], tables.payload, tables.symbol_amplitude, batch.symbols[i])
         slope = _mean_slope(tables.active, batch.phase[i])  # radians per symbol period

@@ -18,7 +18,7 @@ import scipy.stats
 from numpy.typing import NDArray
 
 from spatiq.receiver.frame_batch import FrameBatch
-from spatiq.receiver.refit import Refit
+from spatiq.receiver.channel_following import ChannelFollowing
 
 _CHANCE = 1e-6  # that white noise is taken for coloured, per frame
 _ROUNDS = 3  # decisions improve with whitening, and the estimate of the noise with them
@@ -27,9 +27,9 @@ _DEAD = 1e-9  # share of the largest noise below which a direction carries nothi
 
 @dataclass(frozen=True, eq=False)
 class Whitening:
-    """The stage; `refit` is run again on frames that were whitened."""
+    """The stage; `following` refits frames that were whitened, moving ones and others."""
 
-    refit: Refit
+    following: ChannelFollowing
 
     def __call__(self, batch: FrameBatch) -> FrameBatch:
         """Whiten what is not white; fill whitener and coloured."""
@@ -38,7 +38,7 @@ class Whitening:
             return batch
         limit = float(scipy.stats.chi2.isf(_CHANCE, channels * channels - 1))
         for i in range(batch.count):
-            periods = self.refit.tables.active.size - np.count_nonzero(batch.antenna_energy[i])
+            periods = self.following.refit.tables.active.size - np.count_nonzero(batch.antenna_energy[i])
             for _ in range(_ROUNDS):
                 if unevenness(batch.residual[i], int(periods)) <= limit:
                     break
@@ -51,8 +51,10 @@ class Whitening:
         turned = whitener.astype(np.complex64) @ (real + 1j * imag)
         batch.planes[i, :, 0], batch.planes[i, :, 1] = turned.real, turned.imag
         batch.channel[i] = whitener @ batch.channel[i]
+        if batch.moving and (moving := batch.moving[i]) is not None:
+            batch.moving[i] = moving.through(whitener)
         batch.whitener[i], batch.coloured[i] = whitener @ batch.whitener[i], True
-        self.refit.refit_frame(batch, i)
+        self.following.refit_frame(batch, i)
         if alive < batch.channel.shape[1]:
             # Directions without any noise or signal are no degrees of freedom.
             batch.noise[i] *= batch.channel.shape[1] / alive

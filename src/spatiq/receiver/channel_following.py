@@ -1,0 +1,164 @@
+"""Channel following: the third look, at frames in which channel or phase moved.
+
+Only where the motion test finds evidence after the refit. Such a frame is fitted anew with a
+channel and a phase that move (`frame_fit`): from the refit's decisions where these hold, else from
+a first look of its own (`first_look`). Kept only when the evidence for motion is beyond `_BAYES`;
+otherwise the frame stays as the refit left it, bit for bit.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spatiq.receiver.first_look import follow, interpolate
+from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.frame_fit import FittingPlan, FrameFit, fitting_plan
+from spatiq.receiver.motion_test import MotionTest
+from spatiq.receiver.moving_channel import Following, MovingChannel
+from spatiq.receiver.refit import Refit
+
+_BAYES = float(np.log(1e4))  # evidence for motion over evidence for standing still
+_SOUND = 1.5  # payload noise over that of the known symbols up to which decisions are trusted
+_FIRST_ROUNDS, _LAST_ROUNDS = 4, 6
+# Doppler spread and phase walk (radians^2 per period) supposed at the first look.
+_BANDWIDTH, _WALK = 2e-4, 2 * np.pi * 1e-4
+
+
+def channel_following(refit: Refit, payload: int) -> ChannelFollowing:
+    """The stage after a refit, for frames of so many payload periods."""
+    plan = fitting_plan(refit.tables, refit.bank, refit.clock_std)
+    return ChannelFollowing(refit, plan, MotionTest(refit.tables.codebook, payload))
+
+
+@dataclass(frozen=True, eq=False)
+class ChannelFollowing:
+    """The stage.
+
+    Attributes:
+        refit: stage before; refits frames that stand still.
+        plan: blocks and bases.
+        test: motion test.
+    """
+
+    refit: Refit
+    plan: FittingPlan
+    test: MotionTest
+
+    def __call__(self, batch: FrameBatch) -> FrameBatch:
+        """Fit what moved; fill moving."""
+        suspects = np.flatnonzero(self.test(batch))
+        if suspects.size:
+            batch.moving = [None] * batch.count
+            for i in suspects:
+                self._look_closer(batch, int(i))
+            if not any(batch.moving):
+                batch.moving = []
+        return batch
+
+    def refit_frame(self, batch: FrameBatch, i: int) -> None:
+        """Refit a frame whose samples and channel were changed alike."""
+        moving = batch.moving[i] if batch.moving else None
+        if moving is None:
+            self.refit.refit_frame(batch, i)
+            return
+        fit = self._fit(batch, i)
+        fit.channels = self.plan.spread(moving.channels)
+        fit.bandwidth, fit.walk = moving.bandwidth, moving.walk
+        fit.refine(_LAST_ROUNDS)
+        self._enter(batch, i, fit, moving.following)
+
+    def _fit(self, batch: FrameBatch, i: int) -> FrameFit:
+        """A fit that begins where the refit ended."""
+        channels = np.repeat(batch.channel[i][None], self.plan.blocks.count, axis=0)
+        return FrameFit(
+            plan=self.plan,
+            planes=batch.planes[i],
+            timing=np.array([batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i]]),
+            phase=batch.phase[i].astype(np.float64),
+            channels=channels,
+            noise=float(batch.noise[i]),
+        )
+
+    def _start(self, batch: FrameBatch, i: int, sound: bool) -> FrameFit:
+        """A fit that begins where the refit ended; where it lost track, where acquisition did."""
+        fit = self._fit(batch, i)
+        acquired = batch.acquired
+        if not sound and acquired is not None:
+            fit.timing = np.array([acquired.t0[i], acquired.step[i], 0.0, 0.0])
+            fit.channels = np.repeat(acquired.channel[i][None], self.plan.blocks.count, axis=0)
+            fit.phase = np.zeros(self.plan.tables.active.size)
+            fit.noise = float(acquired.noise[i])
+            fit.sample()
+        return fit
+
+    def _look_closer(self, batch: FrameBatch, i: int) -> None:
+        """Fit the frame with a channel that moves, with a phase that walks, and with both."""
+        limit = _SOUND * float(batch.header_noise[i])
+        sound = bool(batch.noise[i] <= limit)
+        moving, following = self._moving(batch, i, sound)
+        walking = self._start(batch, i, sound)
+        walking.may_move = False
+        if not sound:
+            follow(walking, 0.0, _WALK)
+        walking.refine(_FIRST_ROUNDS)
+        best = moving
+        if walking.score > moving.score:
+            best, following = walking, Following.DECISIONS
+        if best.noise > limit:
+            both = self._start(batch, i, sound)
+            follow(both, _BANDWIDTH, 0.1 * _WALK)
+            both.refine(_FIRST_ROUNDS)
+            if both.score > best.score:
+                best, following = both, Following.DECISIONS
+        both = best.copy()
+        both.may_move = both.may_walk = True
+        both.refine(_LAST_ROUNDS)
+        best.refine(_LAST_ROUNDS)
+            for f in (moving,walking,best,both): print(i,f.noise/batch.header_noise[i],f.score,f.bandwidth,f.walk/2/np.pi,f.evidence_gain)
+        if both.score > best.score:
+            best = both
+        if best.evidence_gain > _BAYES:
+            self._enter(batch, i, best, following)
+
+    def _moving(self, batch: FrameBatch, i: int, sound: bool) -> tuple[FrameFit, Following]:
+        """Fit with a channel that moves, and how it was had."""
+        tables = self.plan.tables
+        fit = self._start(batch, i, sound)
+        fit.may_walk = False
+        following = Following.DECISIONS
+        if not sound and np.any((tables.active_word < 0) & (tables.in_header == 0)):
+            interpolate(fit)
+            following = Following.INTERPOLATED
+        elif not sound:
+            follow(fit, _BANDWIDTH, 0.0)
+        fit.refine(_FIRST_ROUNDS)
+        return fit, following
+
+    def _enter(self, batch: FrameBatch, i: int, fit: FrameFit, following: Following) -> None:
+        """Hand a frame's estimates to the batch."""
+        tables = self.plan.tables
+        batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = fit.timing
+        batch.phase[i], batch.noise[i] = fit.phase, fit.noise
+        batch.antenna_energy[i] = fit.antenna_energy
+        straight = fit.straightened()
+        sent = straight[tables.payload] / tables.active_amplitude[tables.payload][:, None]
+        batch.symbols[i] = sent
+        batch.residual[i] = _residual(fit, straight)
+        block = self.plan.blocks.block[tables.payload]
+        moving = MovingChannel(fit.channels, block, following, fit.bandwidth, fit.walk)
+        batch.moving[i] = moving
+        batch.channel[i] = fit.channels[block[block.size // 2]]
+        slope = float(np.polyfit(tables.active, fit.phase, 1)[0])
+        batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
+
+
+def _residual(fit: FrameFit, straight: NDArray[np.complex128]) -> NDArray[np.complex128]:
+    """Covariance of y - H E[x] over the channels, (Nr, Nr), trace Nr N0."""
+    error = straight - fit.references()
+    covariance = error.T @ error.conj()
+    trace = float(np.trace(covariance).real)
+    scale = len(covariance) * fit.noise / trace if trace > 0 else 0.0
+    return np.asarray(covariance * scale, np.complex128)
