@@ -193,6 +193,7 @@ def test_two_step_refuses_more_than_one_active_antenna():
 def batch_of(book, receive=2, count=20):
     _, y, channel = case(book, receive, 0.1, count, 6)
     return SimpleNamespace(
+        moving=[],
         count=1,
         symbols=y[None],
         channel=channel[None],

@@ -58,6 +58,7 @@ def frames_with_estimated_channels(book, noise, seed, fading):
     y = np.einsum("frt,fkt->fkr", channel, book.vectors[sent])
     y += complex_noise(rng, y.shape, noise) / amplitude[:, None]
     batch = SimpleNamespace(
+        moving=[],
         count=FRAMES,
         symbols=y.astype(np.complex64),
         channel=estimate,

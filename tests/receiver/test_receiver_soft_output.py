@@ -162,6 +162,7 @@ def test_the_stage_takes_its_frames_noise_variance_and_amplitude(kind):
     channel = np.stack([rayleigh(rng, 2, 3) for _ in range(2)])
     channel[:, :, 1] = 0
     batch = SimpleNamespace(
+        moving=[],
         count=2,
         symbols=complex_noise(rng, (2, 12, 2), 1.0).astype(np.complex64),
         channel=channel,

@@ -13,6 +13,7 @@ from spatiq.link.description import Link
 from spatiq.metrics.frame_table import Mark
 from spatiq.metrics.intervals import clopper_pearson
 from spatiq.metrics.loss import local_loss
+from spatiq.metrics.moving_figures import fill_motion, predict_moved
 from spatiq.metrics.prediction import predict_ber
 from spatiq.metrics.reference_following import Numbering
 from spatiq.receiver.frame_batch import ANTENNAS_ALIGNED, RECEIVE_ALIGNED, FrameBatch
@@ -34,11 +35,14 @@ def as_received(batch: FrameBatch) -> FrameBatch:
         symbols=batch.symbols.copy(),
         channel=batch.channel.copy(),
         noise=batch.noise.copy(),
+        moving=list(batch.moving),
     )
     for i in coloured:
         back = np.linalg.pinv(batch.whitener[i])
         seen.symbols[i] = batch.symbols[i] @ back.T
         seen.channel[i] = back @ batch.channel[i]
+        if seen.moving and (moving := seen.moving[i]) is not None:
+            seen.moving[i] = moving.through(back)
         seen.noise[i] *= np.mean(np.sum(np.abs(back) ** 2, axis=1))
     return seen
 
@@ -65,6 +69,7 @@ def fill_figures(
     """
     with np.errstate(divide="ignore", invalid="ignore"):
         _synchronisation(columns, batch, link, recording)
+        fill_motion(columns, batch, link)
         _power(columns, batch, sums, link)
         _error_vector(columns, sums, link)
         _ratios(columns, options.confidence)
@@ -174,6 +179,7 @@ def _prediction(columns: Columns, batch: FrameBatch, link: Link) -> None:
             columns["bits_compared"][some],
             predicted.ber[some],
         )
+    predict_moved(columns, batch, variance, link)
 
 
 def _marks(columns: Columns, batch: FrameBatch, numbering: Numbering, link: Link) -> None:

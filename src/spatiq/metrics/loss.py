@@ -167,12 +167,16 @@ def local_loss(
     errors: ArrayLike,
     bits: ArrayLike,
     predicted: ArrayLike | None = None,
+    together: bool = False,
 ) -> NDArray[np.float64]:
     """Loss of each frame from the local slope of its predicted curve, dB.
 
     Two predictions a frame, or one when `predicted`, the BER of `predict_ber`, is given; the second
     lies 1 dB away on the side of the measured ratio. Good within some 2 dB; farther out log BER is
     extrapolated along a straight line in dB, which overstates the size of a gain and of a loss.
+
+    With `together`, the rows are instants of one frame, whose counts they all hold: the loss is
+    that of their mean, the same in each row.
 
     Returns:
         float64 (F,); NaN where no bit was wrong, none was compared, or the prediction has no slope.
@@ -184,12 +188,16 @@ def local_loss(
     if predicted is None:
         predicted = predict_ber(h, noise, error_variance, codebook).ber
     at = np.asarray(predicted, dtype=np.float64)
+    if together:
+        at = np.full(at.shape, np.mean(at))
     wrong = np.asarray(errors, dtype=np.float64)
     compared = np.asarray(bits, dtype=np.float64)
     some = (wrong > 0) & (compared > 0)
     measured = np.where(some, wrong, np.nan) / np.where(some, compared, 1.0)
     step = np.where(measured < at, -SLOPE_STEP_DB, SLOPE_STEP_DB)
     beside = predict_ber(h, noise * 10.0 ** (step / 10.0), error_variance, codebook).ber
+    if together:
+        beside = np.full(at.shape, np.mean(beside))
     usable = some & (at > 0) & (beside > 0) & ((beside - at) * step > 0)
     loss = np.full(at.shape, np.nan)
     slope = np.log(beside[usable] / at[usable]) / step[usable]

@@ -20,7 +20,7 @@ from spatiq.metrics.reference_following import Numberer, Numbering, ReferenceFol
 from spatiq.metrics.skipped_frames import SkippedFrames, places_in_stream
 from spatiq.receiver.chain import Progress, Stage, receive
 from spatiq.receiver.exhaustive_search import nearest_vectors
-from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.frame_batch import FrameBatch, channel_runs
 from spatiq.receiver.link_tables import sparse_vectors
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.recording.recording import Recording
@@ -211,7 +211,7 @@ class Measuring:
         sets = len(codebook.antenna_sets)
         confusion = np.zeros((batch.count, sets, sets), np.int64)
         sums = np.zeros((batch.count, 6, codebook.antennas))
-        counts = np.zeros(3, np.int64)
+        counts, part = np.zeros(3, np.int64), np.zeros((6, codebook.antennas))
         carried = self.link.carried(sent)
         for i in range(batch.count):
             compare_words(
@@ -231,15 +231,17 @@ class Measuring:
             symbols = batch.symbols[i]
             if batch.dispersive is not None:
                 symbols = batch.dispersive.symbols(i, reference, batch.channel[i])
-            error_vectors(
-                symbols,
-                batch.channel[i],
-                reference,
-                self._words.pointer,
-                self._words.antenna,
-                self._words.value,
-                sums[i],
-            )
+            for run, channel in channel_runs(batch, i):
+                error_vectors(
+                    symbols[run],
+                    channel,
+                    reference[run],
+                    self._words.pointer,
+                    self._words.antenna,
+                    self._words.value,
+                    part,
+                )
+                sums[i] += part
         return confusion, sums
 
     def _decided_vectors(self, batch: FrameBatch, i: int) -> NDArray[np.int64]:
@@ -248,7 +250,12 @@ class Measuring:
         if self.link.codebook.block == 1:
             own: NDArray[np.int64] = batch.words[i]
             return own
-        return nearest_vectors(batch.symbols[i], batch.channel[i], self.link.codebook.vectors)
+        vectors = self.link.codebook.vectors
+        parts = [
+            nearest_vectors(batch.symbols[i, run], channel, vectors)
+            for run, channel in channel_runs(batch, i)
+        ]
+        return np.concatenate(parts)
 
 
 _COUNT_COLUMNS = ("periods_compared", "antenna_errors", "symbol_errors")

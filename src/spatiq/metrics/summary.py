@@ -14,9 +14,10 @@ from spatiq.metrics.frame_table import Mark, MeasuredFrames
 from spatiq.metrics.intervals import clopper_pearson
 from spatiq.metrics.loss import pooled_loss
 from spatiq.metrics.path_summary import NO_DELAY, PathSummary
+from spatiq.receiver.moving_channel import Following
 
 _KEPT_FRAMES = 64  # channels kept for the implementation loss, spread over the recording
-_SPREAD = ("cfo_hz", "cfo_ppm", "clock_ppm", "snr_db")
+_SPREAD = ("cfo_hz", "cfo_ppm", "clock_ppm", "snr_db", "doppler_spread_hz", "linewidth_hz")
 _COUNTS = (
     "bits_compared",
     "bit_errors",
@@ -84,6 +85,7 @@ class Summary:
     lost: Counter[str] = field(default_factory=Counter)
     marks: Counter[str] = field(default_factory=Counter)
     crc: Counter[int] = field(default_factory=Counter)
+    channel_models: Counter[str] = field(default_factory=Counter)
     _sums: Counter[str] = field(default_factory=Counter)
     _energies: dict[str, float] = field(default_factory=lambda: dict.fromkeys(_ENERGIES, 0.0))
     _spreads: dict[str, Spread] = field(default_factory=dict)
@@ -116,6 +118,9 @@ class Summary:
             spread.add(columns[name])
         for mark in Mark:
             self.marks[mark.name or ""] += int(np.count_nonzero(columns["marks"] & mark.value))
+        for model in Following:
+            share = np.count_nonzero(columns["channel_model"] == model)
+            self.channel_models[model.name.lower()] += int(share)
         for value, count in zip(*np.unique(columns["crc_ok"], return_counts=True), strict=True):
             self.crc[int(value)] += int(count)
         run = columns["two_step_bit_errors"] >= 0
@@ -199,6 +204,7 @@ class Summary:
             "antennas": self._antennas(),
             "receive_channels": self._paths.receive_channels(),
             **{name: spread.as_dict() for name, spread in self._spreads.items()},
+            "channel_models": {name: n for name, n in self.channel_models.items() if n},
             "crc": {"passed": passed, "failed": failed} if passed + failed else None,
             "marks": {name: n for name, n in self.marks.items() if n},
             "antenna_sets": [list(a) for a in self.link.codebook.antenna_sets],

@@ -106,18 +106,17 @@ class ChannelFollowing:
         walking.refine(_FIRST_ROUNDS)
         best = moving
         if walking.score > moving.score:
-            best, following = walking, Following.DECISIONS
+            best, following = walking, Following.FOLLOWED
         if best.noise > limit:
             both = self._start(batch, i, sound)
             follow(both, _BANDWIDTH, 0.1 * _WALK)
             both.refine(_FIRST_ROUNDS)
             if both.score > best.score:
-                best, following = both, Following.DECISIONS
+                best, following = both, Following.FOLLOWED
         both = best.copy()
         both.may_move = both.may_walk = True
         both.refine(_LAST_ROUNDS)
         best.refine(_LAST_ROUNDS)
-            for f in (moving,walking,best,both): print(i,f.noise/batch.header_noise[i],f.score,f.bandwidth,f.walk/2/np.pi,f.evidence_gain)
         if both.score > best.score:
             best = both
         if best.evidence_gain > _BAYES:
@@ -128,7 +127,7 @@ class ChannelFollowing:
         tables = self.plan.tables
         fit = self._start(batch, i, sound)
         fit.may_walk = False
-        following = Following.DECISIONS
+        following = Following.FOLLOWED
         if not sound and np.any((tables.active_word < 0) & (tables.in_header == 0)):
             interpolate(fit)
             following = Following.INTERPOLATED

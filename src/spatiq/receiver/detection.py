@@ -29,7 +29,7 @@ from numpy.typing import NDArray
 from spatiq.errors import InputError
 from spatiq.receiver.differential_detection import detect_blocks
 from spatiq.receiver.exhaustive_search import nearest_vectors
-from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.frame_batch import FrameBatch, channel_runs
 from spatiq.receiver.project_and_slice import project_and_slice
 from spatiq.receiver.tree_search import tree_search
 from spatiq.receiver.two_step import two_step
@@ -140,7 +140,7 @@ class Detection:
         noise = float(batch.noise[i])
         parts = [
             np.asarray(detector(batch.symbols[i, run], channel, noise, self.codebook))
-            for run, channel in batch.channel_runs(i)
+            for run, channel in channel_runs(batch, i)
         ]
         return parts[0] if len(parts) == 1 else np.concatenate(parts)
 

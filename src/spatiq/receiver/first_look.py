@@ -60,7 +60,9 @@ class _Track:
         plan = fit.plan
         self._factor = plan.factor(bandwidth)
         sent = plan.tables.known_vectors[header]
-        energy = float(np.sum(np.abs(fit.y[header]) ** 2)) - header.size * fit.noise * fit.y.shape[1]
+        energy = (
+            float(np.sum(np.abs(fit.y[header]) ** 2)) - header.size * fit.noise * fit.y.shape[1]
+        )
         scale = max(float(np.sum(np.abs(sent) ** 2)) * fit.y.shape[1], 1e-300)
         power = max(energy, 0.1 * float(np.sum(np.abs(fit.y[header]) ** 2))) / scale
         self._basis = plan.basis(bandwidth).values * np.sqrt(power)

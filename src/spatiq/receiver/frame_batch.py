@@ -138,13 +138,14 @@ class FrameBatch:
         """Number of frames, F."""
         return int(self.first_sample.size)
 
-    def channel_runs(self, i: int) -> Iterator[tuple[slice, NDArray[np.complex128]]]:
-        """Runs of payload periods of frame i and their channel (Nr, Nt); one where it is still."""
-        moving = self.moving[i] if self.moving else None
-        if moving is None:
-            yield slice(0, self.symbols.shape[1]), self.channel[i]
-        else:
-            yield from moving.runs()
+
+def channel_runs(batch: FrameBatch, i: int) -> Iterator[tuple[slice, NDArray[np.complex128]]]:
+    """Runs of payload periods of frame i and their channel (Nr, Nt); one where it is still."""
+    moving = batch.moving[i] if batch.moving else None
+    if moving is None:
+        yield slice(0, batch.symbols.shape[1]), batch.channel[i]
+    else:
+        yield from moving.runs()
 
 
 def empty_batch(

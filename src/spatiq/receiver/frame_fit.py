@@ -168,7 +168,7 @@ class FrameFit:
 
     def straightened(self) -> Complex:
         """y with the present phase removed."""
-        return self.y * np.exp(-1j * self.phase)[:, None]
+        return np.asarray(self.y * np.exp(-1j * self.phase)[:, None], np.complex128)
 
     def refine(self, rounds: int) -> None:
         """Rounds of expectation-maximisation."""

@@ -57,12 +57,13 @@ class MotionTest:
     ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Chi-square statistic (F,) of channel coefficients that move, and its freedom (F,)."""
         frames, parts, channels, antennas = batch.motion_scores.shape
-        scores = batch.motion_scores.reshape(frames, parts, channels * antennas)
-        projected = _POLYNOMIALS[:, :_CHANNEL_ORDERS].T @ scores
+        along = batch.motion_scores.reshape(frames, parts, channels * antennas)
+        projected = _POLYNOMIALS[:, :_CHANNEL_ORDERS].T @ along
         projected = projected.reshape(frames, _CHANNEL_ORDERS, channels, antennas)
         lower = _roots(batch.motion_energy, _CHANNEL_ORDERS)
-        white = np.linalg.solve(lower, projected.transpose(0, 3, 1, 2))[:, :, 1:]
-        white = self._uncorrelated(white.reshape(frames, antennas, -1))
+        solved = np.linalg.solve(lower, projected.transpose(0, 3, 1, 2))[:, :, 1:]
+        scores = np.asarray(solved.reshape(frames, antennas, -1), np.complex128)
+        white = self._uncorrelated(scores)
         noise = np.maximum(batch.noise, _floored(batch))
         used = np.count_nonzero(batch.motion_energy.sum(axis=1) > 0, axis=1)
         freedom = 2.0 * channels * (_CHANNEL_ORDERS - 1) * used
@@ -103,7 +104,7 @@ def _floored(batch: FrameBatch) -> NDArray[np.float64]:
 def _polynomials() -> NDArray[np.float64]:
     """Legendre polynomials at the parts' centres, (J, orders)."""
     centres = (2.0 * np.arange(MOTION_PARTS) + 1.0) / MOTION_PARTS - 1.0
-    return legendre.legvander(centres, _PHASE_ORDERS - 1)
+    return np.asarray(legendre.legvander(centres, _PHASE_ORDERS - 1), np.float64)
 
 
 _POLYNOMIALS = _polynomials()
@@ -117,4 +118,5 @@ def _roots(weight: NDArray[np.float64], orders: int) -> NDArray[np.float64]:
     grams = (pairs.T @ weight).transpose(0, 2, 1).reshape(frames, count, orders, orders)
     # An antenna that few parts hear leaves directions without energy.
     ridge = 1e-9 * grams[:, :, 0, 0] + 1e-30
-    return np.linalg.cholesky(grams + ridge[:, :, None, None] * np.eye(orders))
+    roots = np.linalg.cholesky(grams + ridge[:, :, None, None] * np.eye(orders))
+    return np.asarray(roots, np.float64)

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from enum import IntEnum
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,8 +14,8 @@ from numpy.typing import NDArray
 class Following(IntEnum):
     """How a frame's channel and phase were had."""
 
-    STATIC = 0  # one channel, phase on a straight line
-    DECISIONS = 1  # followed from the known symbols on by decisions
+    STILL = 0  # one channel, phase on a straight line
+    FOLLOWED = 1  # from the known symbols on, by decisions
     INTERPOLATED = 2  # interpolated between known symbols in the payload, refined by decisions
 
 
@@ -43,7 +44,7 @@ class MovingChannel:
             return
         edges = np.flatnonzero(np.diff(self.block)) + 1
         bounds = np.concatenate([[0], edges, [self.block.size]])
-        for first, stop in zip(bounds[:-1], bounds[1:], strict=True):
+        for first, stop in pairwise(bounds):
             yield slice(int(first), int(stop)), self.channels[self.block[first]]
 
     def instants(self, count: int) -> NDArray[np.complex128]:

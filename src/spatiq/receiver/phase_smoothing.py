@@ -23,8 +23,8 @@ class SmoothedPhase:
     Attributes:
         mean: (n,).
         evidence: log marginal likelihood, up to what does not depend on the walk's variance.
-        prior: log density of the mean as a path, times the volume that the posterior leaves it: what
-            the path costs before it is held against what was observed.
+        prior: log density of the mean as a path, times the volume that the posterior leaves it:
+            what the path costs before it is held against what was observed.
         freedom: effective number of parameters.
     """
 

@@ -42,7 +42,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.errors import InputError
-from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.frame_batch import FrameBatch, channel_runs
 from spatiq.receiver.options import SOFT_OUTPUTS
 from spatiq.receiver.soft_output_kernels import likelihood_ratios
 from spatiq.signal.codebooks import Codebook
@@ -137,14 +137,16 @@ class SoftOutput:
         energy = batch.antenna_energy
         # Antennas that the link never uses have no energy, and no part in any word.
         share = np.divide(1.0, energy, out=np.zeros_like(energy), where=energy > 0)
+        width = self.codebook.bits
         for i in range(batch.count):
-            batch.llr[i] = log_likelihood_ratios(
-                batch.symbols[i],
-                batch.channel[i],
-                float(batch.noise[i]),
-                self.codebook,
-                kind=self.kind,
-                variance=batch.noise[i] * share[i],
-                amplitude=self.amplitude,
-            )
+            for run, channel in channel_runs(batch, i):
+                batch.llr[i, run.start * width : run.stop * width] = log_likelihood_ratios(
+                    batch.symbols[i, run],
+                    channel,
+                    float(batch.noise[i]),
+                    self.codebook,
+                    kind=self.kind,
+                    variance=batch.noise[i] * share[i],
+                    amplitude=self.amplitude[run],
+                )
         return batch

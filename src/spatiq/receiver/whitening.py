@@ -17,8 +17,8 @@ import numpy as np
 import scipy.stats
 from numpy.typing import NDArray
 
-from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.channel_following import ChannelFollowing
+from spatiq.receiver.frame_batch import FrameBatch
 
 _CHANCE = 1e-6  # that white noise is taken for coloured, per frame
 _ROUNDS = 3  # decisions improve with whitening, and the estimate of the noise with them
@@ -38,7 +38,9 @@ class Whitening:
             return batch
         limit = float(scipy.stats.chi2.isf(_CHANCE, channels * channels - 1))
         for i in range(batch.count):
-            periods = self.following.refit.tables.active.size - np.count_nonzero(batch.antenna_energy[i])
+            periods = self.following.refit.tables.active.size - np.count_nonzero(
+                batch.antenna_energy[i]
+            )
             for _ in range(_ROUNDS):
                 if unevenness(batch.residual[i], int(periods)) <= limit:
                     break

@@ -140,6 +140,18 @@ def _signal(summary: dict[str, Any]) -> Iterator[Line]:
     ppm = pick(summary, "cfo_ppm", "mean")
     yield (*cfo[:3], "" if ppm is None else number(ppm, "ppm of the carrier"))
     yield _spread_line("clock offset", summary.get("clock_ppm"), "ppm")
+    yield from _motion(summary)
+
+
+def _motion(summary: dict[str, Any]) -> Iterator[Line]:
+    """How the channel was had, where it or the phase moved within frames."""
+    models = summary.get("channel_models") or {}
+    if not any(n for name, n in models.items() if name != "still"):
+        return
+    yield "channel within frames", listing(models), "", "frames, by how it was estimated"
+    for label, name in (("Doppler spread", "doppler_spread_hz"), ("linewidth", "linewidth_hz")):
+        if summary.get(name):
+            yield (*_spread_line(label, summary[name], "Hz")[:3], "of frames that showed any")
 
 
 def _spread_line(label: str, figures: Any, unit: str) -> Line:
