@@ -17,14 +17,18 @@ from spatiq.receiver.first_look import follow, interpolate
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.frame_fit import FittingPlan, FrameFit, fitting_plan
 from spatiq.receiver.motion_test import MotionTest
-from spatiq.receiver.moving_channel import Following, MovingChannel
+from spatiq.receiver.moving_channel import MovingChannel
 from spatiq.receiver.refit import Refit
 
 _BAYES = float(np.log(1e4))  # evidence for motion over evidence for standing still
-_SOUND = 1.5  # payload noise over that of the known symbols up to which decisions are trusted
+# Payload noise over that of the known symbols: up to the first, the refit's decisions are trusted;
+# beyond the second, they are of no use.
+_SOUND, _HOPELESS = 1.2, 3.0
 _FIRST_ROUNDS, _LAST_ROUNDS = 4, 6
-# Doppler spread and phase walk (radians^2 per period) supposed at the first look.
-_BANDWIDTH, _WALK = 2e-4, 2 * np.pi * 1e-4
+# Doppler spreads and phase walk (radians^2 per period) supposed at the first look.
+_BANDWIDTH, _LITTLE, _WALK = 2e-4, 2e-5, 2 * np.pi * 1e-4
+# What is free: the channel to move, the phase to walk.
+_MOVES, _WALKS, _BOTH = (True, False), (False, True), (True, True)
 
 
 def channel_following(refit: Refit, payload: int) -> ChannelFollowing:
@@ -68,7 +72,8 @@ class ChannelFollowing:
         fit.channels = self.plan.spread(moving.channels)
         fit.bandwidth, fit.walk = moving.bandwidth, moving.walk
         fit.refine(_LAST_ROUNDS)
-        self._enter(batch, i, fit, moving.following)
+        fit.following = moving.following
+        self._enter(batch, i, fit)
 
     def _fit(self, batch: FrameBatch, i: int) -> FrameFit:
         """A fit that begins where the refit ended."""
@@ -82,11 +87,11 @@ class ChannelFollowing:
             noise=float(batch.noise[i]),
         )
 
-    def _start(self, batch: FrameBatch, i: int, sound: bool) -> FrameFit:
-        """A fit that begins where the refit ended; where it lost track, where acquisition did."""
+    def _fresh(self, batch: FrameBatch, i: int) -> FrameFit:
+        """A fit that begins where acquisition ended."""
         fit = self._fit(batch, i)
         acquired = batch.acquired
-        if not sound and acquired is not None:
+        if acquired is not None:
             fit.timing = np.array([acquired.t0[i], acquired.step[i], 0.0, 0.0])
             fit.channels = np.repeat(acquired.channel[i][None], self.plan.blocks.count, axis=0)
             fit.phase = np.zeros(self.plan.tables.active.size)
@@ -95,48 +100,43 @@ class ChannelFollowing:
         return fit
 
     def _look_closer(self, batch: FrameBatch, i: int) -> None:
-        """Fit the frame with a channel that moves, with a phase that walks, and with both."""
-        limit = _SOUND * float(batch.header_noise[i])
-        sound = bool(batch.noise[i] <= limit)
-        moving, following = self._moving(batch, i, sound)
-        walking = self._start(batch, i, sound)
-        walking.may_move = False
-        if not sound:
-            follow(walking, 0.0, _WALK)
-        walking.refine(_FIRST_ROUNDS)
-        best = moving
-        if walking.score > moving.score:
-            best, following = walking, Following.FOLLOWED
-        if best.noise > limit:
-            both = self._start(batch, i, sound)
-            follow(both, _BANDWIDTH, 0.1 * _WALK)
-            both.refine(_FIRST_ROUNDS)
-            if both.score > best.score:
-                best, following = both, Following.FOLLOWED
-        both = best.copy()
-        both.may_move = both.may_walk = True
-        both.refine(_LAST_ROUNDS)
+        """Fit the frame from several starts; keep the best if it beats standing still."""
+        excess = float(batch.noise[i] / batch.header_noise[i])
+        fits = []
+        if excess <= _HOPELESS:
+            fits += [_refined(self._fit(batch, i), *free) for free in (_MOVES, _WALKS)]
+        if excess > _SOUND:
+            fits += [
+                _refined(self._glimpse(batch, i), *_MOVES),
+                _refined(self._followed(batch, i), *_BOTH),
+            ]
+        best = max(fits, key=lambda fit: fit.score)
+        others = [free for free in (_MOVES, _WALKS, _BOTH) if free != best.freedoms]
+        trials = [best.copy(), *(best.copy() for _ in others)]
+        for fit, free in zip(trials, [best.freedoms, *others], strict=True):
+            _refined(fit, *free)
+        best = max(trials, key=lambda fit: fit.score)
         best.refine(_LAST_ROUNDS)
-        if both.score > best.score:
-            best = both
         if best.evidence_gain > _BAYES:
-            self._enter(batch, i, best, following)
+            self._enter(batch, i, best)
 
-    def _moving(self, batch: FrameBatch, i: int, sound: bool) -> tuple[FrameFit, Following]:
-        """Fit with a channel that moves, and how it was had."""
+    def _glimpse(self, batch: FrameBatch, i: int) -> FrameFit:
+        """First look at a channel that moves: interpolated where known symbols allow it."""
         tables = self.plan.tables
-        fit = self._start(batch, i, sound)
-        fit.may_walk = False
-        following = Following.FOLLOWED
-        if not sound and np.any((tables.active_word < 0) & (tables.in_header == 0)):
+        fit = self._fresh(batch, i)
+        if np.any((tables.active_word < 0) & (tables.in_header == 0)):
             interpolate(fit)
-            following = Following.INTERPOLATED
-        elif not sound:
+        else:
             follow(fit, _BANDWIDTH, 0.0)
-        fit.refine(_FIRST_ROUNDS)
-        return fit, following
+        return fit
 
-    def _enter(self, batch: FrameBatch, i: int, fit: FrameFit, following: Following) -> None:
+    def _followed(self, batch: FrameBatch, i: int) -> FrameFit:
+        """First look at a phase that walks, on a channel that may move."""
+        fit = self._fresh(batch, i)
+        follow(fit, _LITTLE, _WALK)
+        return fit
+
+    def _enter(self, batch: FrameBatch, i: int, fit: FrameFit) -> None:
         """Hand a frame's estimates to the batch."""
         tables = self.plan.tables
         batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = fit.timing
@@ -146,12 +146,23 @@ class ChannelFollowing:
         sent = straight[tables.payload] / tables.active_amplitude[tables.payload][:, None]
         batch.symbols[i] = sent
         batch.residual[i] = _residual(fit, straight)
-        block = self.plan.blocks.block[tables.payload]
-        moving = MovingChannel(fit.channels, block, following, fit.bandwidth, fit.walk)
+        factor = self.plan.factor(fit.bandwidth)
+        block = self.plan.blocks.block[tables.payload] // factor
+        channels = fit.channels[::factor]
+        moving = MovingChannel(channels, block, fit.following, fit.bandwidth, fit.walk)
         batch.moving[i] = moving
-        batch.channel[i] = fit.channels[block[block.size // 2]]
+        batch.channel[i] = channels[block[block.size // 2]]
         slope = float(np.polyfit(tables.active, fit.phase, 1)[0])
         batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
+
+
+def _refined(
+    fit: FrameFit, may_move: bool, may_walk: bool, rounds: int = _FIRST_ROUNDS
+) -> FrameFit:
+    """The fit after some rounds with what is free."""
+    fit.may_move, fit.may_walk = may_move, may_walk
+    fit.refine(rounds)
+    return fit
 
 
 def _residual(fit: FrameFit, straight: NDArray[np.complex128]) -> NDArray[np.complex128]:

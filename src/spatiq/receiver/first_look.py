@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from spatiq.receiver.channel_smoothing import Complex, Moments, information, projection, synthesis
 from spatiq.receiver.frame_fit import FrameFit
 from spatiq.receiver.frame_posterior import Posterior, moments, posterior
+from spatiq.receiver.moving_channel import Following
 
 _PIECE = 16  # symbol periods decided at a time
 
@@ -31,6 +32,7 @@ def interpolate(fit: FrameFit) -> None:
     before_after = ((low, blocks.count - high), (0, 0), (0, 0))
     gram, cross = np.pad(part.gram, before_after), np.pad(part.cross, before_after)
     fit.fit_channel(Moments(gram, cross, part.energy, part.periods))
+    fit.following = Following.INTERPOLATED
 
 
 def follow(fit: FrameFit, bandwidth: float, walk: float) -> None:

@@ -21,15 +21,17 @@ from spatiq.receiver.channel_smoothing import Complex, Moments, SmoothedChannel,
 from spatiq.receiver.frame_posterior import FrameBlocks, frame_blocks, moments, posterior
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank, sample_periods
+from spatiq.receiver.moving_channel import Following
 from spatiq.receiver.phase_smoothing import SmoothedPhase, smooth_walk
 from spatiq.receiver.slow_basis import SlowBasis, longest_block, slow_basis
 from spatiq.receiver.timing_kernels import refit_timing, timing_density
 
 _SLOWEST = 0.02  # Doppler spread times frame length below which nothing can be told from standing
-_FASTEST = 4e-3  # Doppler spread, cycles per symbol period: pilots cannot be denser than needed
+_FASTEST = 2.5e-3  # Doppler spread, cycles per symbol period: pilots cannot be denser than needed
 _LARGEST = 1024  # unknowns in one system of equations
 _FINEST_ENTRIES = 1 << 22  # of Gram matrices: bounds memory
 _STILL = 1e-6  # variance over the frame of a phase that does not walk
+_SETTLED = 0.1  # change of the score below which another round is not worth its time
 _WALKS = 0.03  # largest walk, radians^2 per period
 
 
@@ -119,6 +121,7 @@ class FrameFit:
         noise: N0.
         may_move, may_walk: whether the channel may move, and the phase walk.
         bandwidth, walk: as chosen.
+        following: how it was had.
         evidence_gain: log evidence of what was chosen over a frame that stands still.
         score: log likelihood of the frame with the paths of channel and phase, to compare fits: a
             cycle slip leaves no noise behind, but is a path that costs.
@@ -136,6 +139,7 @@ class FrameFit:
     may_walk: bool = True
     bandwidth: float = 0.0
     walk: float = 0.0
+    following: Following = Following.FOLLOWED
     evidence_gain: float = 0.0
     antenna_energy: NDArray[np.float64] = field(default_factory=lambda: np.zeros(0))
     mean: Complex = field(default_factory=lambda: np.zeros((0, 0), np.complex128))
@@ -148,6 +152,11 @@ class FrameFit:
     def __post_init__(self) -> None:
         """Take the symbols at the present timing."""
         self.sample()
+
+    @property
+    def freedoms(self) -> tuple[bool, bool]:
+        """Whether the channel may move, and the phase walk."""
+        return self.may_move, self.may_walk
 
     def copy(self) -> FrameFit:
         """A fit of its own that begins where this one is."""
@@ -173,7 +182,11 @@ class FrameFit:
     def refine(self, rounds: int) -> None:
         """Rounds of expectation-maximisation."""
         every = np.arange(self.plan.tables.active.size)
+        before = -np.inf
         for turn in range(rounds):
+            if turn > 1 and abs(self.score - before) < _SETTLED:
+                break
+            before = self.score
             straight = self.straightened()
             known = posterior(
                 straight, every, self.plan.blocks, self.channels, self.noise, self.plan.tables
