@@ -90,13 +90,11 @@ class ChannelFollowing:
     def _fresh(self, batch: FrameBatch, i: int) -> FrameFit:
         """A fit that begins where acquisition ended."""
         fit = self._fit(batch, i)
-        acquired = batch.acquired
-        if acquired is not None:
-            fit.timing = np.array([acquired.t0[i], acquired.step[i], 0.0, 0.0])
-            fit.channels = np.repeat(acquired.channel[i][None], self.plan.blocks.count, axis=0)
-            fit.phase = np.zeros(self.plan.tables.active.size)
-            fit.noise = float(acquired.noise[i])
-            fit.sample()
+        fit.timing = np.array([*batch.acquired_timing[i], 0.0, 0.0])
+        fit.channels = np.repeat(batch.acquired_channel[i][None], self.plan.blocks.count, axis=0)
+        fit.phase = np.zeros(self.plan.tables.active.size)
+        fit.noise = float(batch.header_noise[i])
+        fit.sample()
         return fit
 
     def _look_closer(self, batch: FrameBatch, i: int) -> None:
@@ -143,7 +141,7 @@ class ChannelFollowing:
         batch.phase[i], batch.noise[i] = fit.phase, fit.noise
         batch.antenna_energy[i] = fit.antenna_energy
         straight = fit.straightened()
-        sent = straight[tables.payload] / tables.active_amplitude[tables.payload][:, None]
+        sent = straight[tables.payload] / tables.symbol_amplitude[tables.payload][:, None]
         batch.symbols[i] = sent
         batch.residual[i] = _residual(fit, straight)
         factor = self.plan.factor(fit.bandwidth)

@@ -28,16 +28,6 @@ NOT_FOUND = "not found"
 NOT_FINITE = "samples not finite"
 
 
-@dataclass(frozen=True, eq=False)
-class Acquired:
-    """What the known symbols at one place of each frame told, kept for those that lose track."""
-
-    t0: NDArray[np.float64]
-    step: NDArray[np.float64]
-    channel: NDArray[np.complex128]
-    noise: NDArray[np.float64]
-
-
 @dataclass
 class FrameBatch:
     """F frames cut out of the recording, and what is known of them so far.
@@ -79,7 +69,8 @@ class FrameBatch:
         motion_scores, motion_energy, motion_reference: sums along each frame, see `motion_sums`.
         moving: what moved within each frame, None where nothing did; empty when nothing did in any.
             `channel` is then that in the middle of the payload.
-        acquired: t0, step, channel and noise as acquisition left them.
+        acquired_timing: float64 (F, 2); t0 and step as acquisition left them.
+        acquired_channel: complex128 (F, Nr, Nt); the same of the channel.
 
     Filled by symbol sampling and detection:
         symbols: complex64 (F, Kp, Nr); payload vectors, carrier phase removed.
@@ -119,6 +110,8 @@ class FrameBatch:
     antenna_delay: NDArray[np.float64]
     antenna_delay_var: NDArray[np.float64]
     aligned: NDArray[np.uint8]
+    acquired_timing: NDArray[np.float64]
+    acquired_channel: NDArray[np.complex128]
     motion_scores: NDArray[np.complex128]
     motion_energy: NDArray[np.float64]
     motion_reference: NDArray[np.float64]
@@ -129,7 +122,6 @@ class FrameBatch:
     llr: NDArray[np.float32] | None = None
     dispersive: DispersiveFrames | None = None
     moving: list[MovingChannel | None] = field(default_factory=list)
-    acquired: Acquired | None = None
     lost: list[LostFrame] = field(default_factory=list)
     final: bool = False
 
@@ -184,6 +176,8 @@ def empty_batch(
         antenna_delay=np.full((count, antennas), np.nan),
         antenna_delay_var=np.full((count, antennas), np.nan),
         aligned=np.zeros(count, np.uint8),
+        acquired_timing=np.zeros((count, 2)),
+        acquired_channel=np.zeros((count, channels, antennas), np.complex128),
         motion_scores=np.zeros((count, MOTION_PARTS, channels, antennas), np.complex128),
         motion_energy=np.zeros((count, MOTION_PARTS, antennas)),
         motion_reference=np.zeros((count, MOTION_PARTS)),

@@ -74,13 +74,21 @@ class Refit:
                 batch.antenna_energy[i],
             )
         batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = timing
+        self._residuals(batch, i, room)
+        take_symbols(room[0], tables.payload, tables.symbol_amplitude, batch.symbols[i])
+        slope = _mean_slope(tables.active, batch.phase[i])  # radians per symbol period
+        batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
+
+    def _residuals(self, batch: FrameBatch, i: int, room: Room) -> None:
+        """What the residuals of frame i say of delays, noise and motion."""
+        tables = self.tables
         delay_scores(
             room[0],
             room[1],
             room[4],
             batch.channel[i],
             tables.active,
-            bank.correlation.slope_at(1.0),
+            self.bank.correlation.slope_at(1.0),
             batch.delay_score[i],
             batch.delay_energy[i],
         )
@@ -102,9 +110,6 @@ class Refit:
             batch.motion_energy[i],
             batch.motion_reference[i],
         )
-        take_symbols(room[0], tables.payload, tables.symbol_amplitude, batch.symbols[i])
-        slope = _mean_slope(tables.active, batch.phase[i])  # radians per symbol period
-        batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
 
 
 def _room(tables: LinkTables, channels: int, antennas: int) -> Room:

@@ -15,7 +15,7 @@ import numpy as np
 import scipy.spatial
 from numpy.typing import NDArray
 
-from spatiq.receiver.frame_batch import Acquired, FrameBatch
+from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
 from spatiq.receiver.soft_kernels import floored_noise, received_codebook
@@ -47,9 +47,8 @@ class Tracking:
     def __call__(self, batch: FrameBatch) -> FrameBatch:
         """Fill phase; correct t0 and step."""
         tables = self.tables
-        batch.acquired = Acquired(
-            batch.t0.copy(), batch.step.copy(), batch.channel.copy(), batch.noise.copy()
-        )
+        batch.acquired_timing[:, 0], batch.acquired_timing[:, 1] = batch.t0, batch.step
+        batch.acquired_channel[:] = batch.channel
         outside = tables.in_header == 0
         later = np.flatnonzero(outside & (tables.active > tables.header_centroid))
         earlier = np.flatnonzero(outside & (tables.active < tables.header_centroid))[::-1]
