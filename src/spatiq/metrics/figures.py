@@ -187,6 +187,8 @@ def _marks(columns: Columns, batch: FrameBatch, numbering: Numbering, link: Link
     marks[batch.clipped > 0] |= np.uint32(Mark.CLIPPED)
     marks[~numbering.resolved] |= np.uint32(Mark.REFERENCE_UNKNOWN)
     marks[batch.coloured] |= np.uint32(Mark.COLOURED_NOISE)
+    if batch.echoes is not None:
+        marks[batch.echoes] |= np.uint32(Mark.ECHOES)
     marks[(batch.aligned & RECEIVE_ALIGNED) > 0] |= np.uint32(Mark.RECEIVE_DELAYS)
     marks[(batch.aligned & ANTENNAS_ALIGNED) > 0] |= np.uint32(Mark.ANTENNA_DELAYS)
     marks[columns["crc_ok"] == 0] |= np.uint32(Mark.CRC_FAILED)

@@ -26,6 +26,7 @@ class Mark(IntFlag):
     CRC_FAILED = 4
     TRACKING_LOST = 8  # the carrier-phase or timing track left its expected error
     COLOURED_NOISE = 16  # noise differs between receive channels or is correlated: whitened
+    ECHOES = 1024  # symbols reach into their neighbours on a channel taken for flat
     RECEIVE_DELAYS = 4096  # receive channels differ in delay: taken out
     ANTENNA_DELAYS = 8192  # transmit antennas differ in delay: taken into account
 

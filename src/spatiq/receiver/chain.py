@@ -23,6 +23,7 @@ from spatiq.receiver.alignment import Alignment
 from spatiq.receiver.channel_following import channel_following
 from spatiq.receiver.detection import Detection, check_detector_applies, find_detector
 from spatiq.receiver.dispersive_chain import dispersive_stages
+from spatiq.receiver.echo_test import echo_test
 from spatiq.receiver.edge_frames import EdgeFrames
 from spatiq.receiver.frame_batch import FrameBatch, LostFrame
 from spatiq.receiver.frame_search import SyncPattern, sync_pattern
@@ -145,6 +146,8 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
             link.layout.payload_runs(),
         ),
     ]
+    if link.codebook.block == 1:
+        stages.append(echo_test(link, parts.bank.samples_per_symbol))
     if options.soft_output != "none":
         check_soft_output(link.codebook)
         amplitude = link.layout.payload_amplitude

@@ -78,6 +78,7 @@ class FrameBatch:
         words_two_step: the same by the two-step detector, or None.
         llr: float32 (F, Kw * b); log-likelihood ratios of the bits as sent, positive when 0 is
             likelier; None unless asked for.
+        echoes: bool (F,); whether symbols reach into their neighbours, see `EchoTest`; or None.
         dispersive: the frames as they were received over a dispersive channel; `channel` and
             `symbols` then are a flat channel of the same energy (`DispersiveFrames.symbols`).
             None on a flat channel.
@@ -120,6 +121,7 @@ class FrameBatch:
     header_freedom: int = 0
     words_two_step: NDArray[np.int64] | None = None
     llr: NDArray[np.float32] | None = None
+    echoes: NDArray[np.bool_] | None = None
     dispersive: DispersiveFrames | None = None
     moving: list[MovingChannel | None] = field(default_factory=list)
     lost: list[LostFrame] = field(default_factory=list)

@@ -168,7 +168,8 @@ def _frames(summary: dict[str, Any]) -> Iterator[Line]:
     yield "frames found", f"{count(found)}{of}", losses, listing(pick(frames, "lost_by_reason"))
     marks = {name.lower().replace("_", " "): n for name, n in (summary.get("marks") or {}).items()}
     if any(marks.values()):
-        yield "frames marked", listing(marks), "", ""
+        hint = "echoes: see --channel dispersive" if marks.get("echoes") else ""
+        yield "frames marked", listing(marks), "", hint
     silent = [c for c in summary.get("receive_channels") or [] if c["state"] in SILENT]
     if silent:
         told = ", ".join(f"{c['channel']} carried {c['state']}" for c in silent)
