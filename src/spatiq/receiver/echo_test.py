@@ -29,6 +29,8 @@ from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.link_tables import SparseVectors, sparse_vectors
 from spatiq.signal.pulses import isi_floor
 
+# Payload periods looked at: enough to tell a tenth of the noise, that is S + 51 Nr.
+TESTED = 256
 CHANCE = 1e-6  # that a flat channel is taken for a dispersive one, per frame
 SHARE_OF_NOISE = 0.1
 # Rounding and timing of a capture without noise leave as much of the signal: -50 dB.
@@ -43,7 +45,7 @@ class EchoTest:
         words: codeword vectors.
         inverse: complex128 (Nt, Nt); pseudo-inverse of G.
         rank: of G.
-        follows: uint8 (Kp,); 1 where a payload period follows another at once.
+        follows: uint8 (n,); 1 where a payload period follows another at once; n of them.
         floor: share of the signal that counts as the pulse's own.
     """
 
@@ -55,47 +57,55 @@ class EchoTest:
 
     def __call__(self, batch: FrameBatch) -> FrameBatch:
         """Fill `echoes`."""
-        channels, antennas = batch.channel.shape[1:]
-        limit = float(scipy.stats.chi2.isf(CHANCE, 4 * channels * self.rank))
-        before = np.empty((channels, antennas), np.complex128)
-        behind = np.empty_like(before)
-        sums = np.empty(3)
-        found = np.zeros(batch.count, np.bool_)
+        shape = (batch.count, *batch.channel.shape[1:])
+        before, behind = np.empty(shape, np.complex128), np.empty(shape, np.complex128)
+        sums = np.empty((batch.count, 3))
+        count = self.follows.size
         for i in range(batch.count):
             neighbour_sums(
-                batch.symbols[i],
+                batch.symbols[i, :count],
                 batch.channel[i],
-                batch.words[i],
+                batch.words[i, :count],
                 self.words.parts,
                 self.follows,
-                before,
-                behind,
-                sums,
+                before[i],
+                behind[i],
+                sums[i],
             )
-            statistic, leak = self._judge(before, behind, sums)
-            noise = sums[1] / batch.words.shape[1]
-            least = max(SHARE_OF_NOISE * noise, self.floor * sums[2] / batch.words.shape[1])
-            found[i] = statistic > limit and leak > least
-        batch.echoes = found
+        batch.echoes = self.judge(before, behind, sums)
         return batch
 
-    def _judge(
+    def judge(
         self,
         before: NDArray[np.complex128],
         behind: NDArray[np.complex128],
         sums: NDArray[np.float64],
-    ) -> tuple[float, float]:
-        """S, and the neighbours' energy in a received vector, less what noise alone shows."""
-        pairs, error, _ = sums
-        channels, periods = before.shape[0], self.follows.size
-        power = error / (periods * channels)
-        if not (pairs > 0 and power > 0):
-            return 0.0, 0.0
-        explained = 0.0
+    ) -> NDArray[np.bool_]:
+        """Which of F frames are marked; arrays of `neighbour_sums`, frames first."""
+        channels, periods = before.shape[1], self.follows.size
+        statistic, explained = self.statistic(before, behind, sums)
+        noise = sums[:, 1] / periods
+        # What noise alone explains is no leak.
+        leak = explained / np.maximum(sums[:, 0], 1) - 2 * self.rank * noise / periods
+        least = np.maximum(SHARE_OF_NOISE * noise, self.floor * sums[:, 2] / periods)
+        limit = float(scipy.stats.chi2.isf(CHANCE, 4 * channels * self.rank))
+        return np.asarray((statistic > limit) & (leak > least), np.bool_)
+
+    def statistic(
+        self,
+        before: NDArray[np.complex128],
+        behind: NDArray[np.complex128],
+        sums: NDArray[np.float64],
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """S, and the energy that the neighbours explain; (F,), 0 where there is nothing to tell."""
+        power = sums[:, 1] / (self.follows.size * before.shape[1])
+        known = (sums[:, 0] > 0) & (power > 0)
+        explained = np.zeros(len(sums))
         for crossed in (before, behind):
-            explained += float(np.sum((crossed @ self.inverse) * crossed.conj()).real) / pairs
-        chance = 2 * channels * self.rank * power
-        return 2.0 * explained / power, (explained - chance) / pairs
+            energy = np.sum((crossed @ self.inverse) * crossed.conj(), axis=(1, 2)).real
+            explained += energy / np.maximum(sums[:, 0], 1)
+        explained = np.where(known, explained, 0.0)
+        return 2.0 * explained / np.where(known, power, 1.0), explained
 
 
 def echo_test(link: Link, samples_per_symbol: float) -> EchoTest:
@@ -106,6 +116,7 @@ def echo_test(link: Link, samples_per_symbol: float) -> EchoTest:
     payload = link.layout.payload_index
     follows = np.zeros(payload.size, np.uint8)
     follows[1:] = np.diff(payload) == 1
+    follows = follows[:TESTED]
     # Where a pulse is cut off, its floor moves with the instants: the worst, and twice that.
     floors = [isi_floor(link.pulse, samples_per_symbol, t) for t in (0.0, 0.25, 0.5)]
     return EchoTest(
