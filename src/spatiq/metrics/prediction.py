@@ -45,8 +45,9 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from spatiq.errors import InputError
+from spatiq.metrics.differential_prediction import predict_wrong_bits
 from spatiq.metrics.prediction_kernels import predict_frames
-from spatiq.signal.codebooks import Codebook
+from spatiq.signal.codebooks import Codebook, DifferentialCodebook
 
 DRAWS = 256
 MOST_ROWS = 1024
@@ -242,12 +243,14 @@ def predict_ber(
         InputError: when shapes do not fit each other.
     """
     frames = _checked(h, n0, error_variance, codebook)
-    if codebook.block > 1:
-        nothing = np.full(frames.usable.size, np.nan)
-        return Prediction(nothing, nothing, nothing)
-    plan = _plan(codebook, frames.h.shape[1])
     wrong = np.full((frames.usable.size, 2), np.nan)
-    wrong[frames.usable] = _run(plan, frames, codebook.bits, np.empty((0, 0), np.float64))
+    if isinstance(codebook, DifferentialCodebook):
+        used = zip(frames.h.astype(np.complex128), frames.table.tolist(), strict=True)
+        rows = [predict_wrong_bits(channel, table, codebook) for channel, table in used]
+        wrong[frames.usable] = np.reshape(rows, (-1, 2))
+    else:
+        plan = _plan(codebook, frames.h.shape[1])
+        wrong[frames.usable] = _run(plan, frames, codebook.bits, np.empty((0, 0), np.float64))
     spatial = int(codebook.spatial_bits.sum())
     return Prediction(
         ber=_ratio(wrong.sum(axis=1), codebook.bits),
@@ -271,6 +274,8 @@ def predicted_confusion(
     """
     sets = len(codebook.antenna_sets)
     frames = _checked(h, n0, error_variance, codebook)
+    if codebook.block > 1:
+        raise InputError("prediction", "confusion", codebook.scheme, "words of one symbol period")
     if not frames.usable.any():
         return np.full((sets, sets), np.nan)
     plan = _plan(codebook, frames.h.shape[1])

@@ -129,6 +129,8 @@ def differential_spatial_modulation(
     Raises:
         InputError: a constellation that is no M-PSK, too many permutations.
     """
+    if antennas < 2:
+        raise InputError("codebook", "", f"{antennas} antenna", "at least 2 in differential form")
     turn_of = _turns(constellation)
     size, count = constellation.size, len(antenna_permutations)
     if count > MAX_SETS:
