@@ -5,8 +5,8 @@
     python3 tools/fidelity.py --section impairments --section floor [--row "IQ"]
 
 Prints a table for each section: misses, false alarms, estimators against their bounds, the floor of
-the chain, impairments and plain links against a genie. The last line is the worst ratio of the
-measured BER to the genie's. Ends with 1 when a bar is missed. Progress goes to standard error.
+the chain, impairments, plain links and all schemes against a genie. The last line is the worst
+ratio of the measured BER to the genie's. Ends with 1 when a bar is missed. Progress goes to standard error.
 """
 
 from __future__ import annotations
@@ -17,7 +17,7 @@ import sys
 
 from campaign.environment import enter_environment
 
-SECTIONS = ("misses", "false-alarms", "estimators", "floor", "impairments", "links")
+SECTIONS = ("misses", "false-alarms", "estimators", "floor", "impairments", "links", "family")
 
 
 def main() -> int:

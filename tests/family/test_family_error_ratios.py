@@ -14,7 +14,6 @@ from fading_links import error_ratio, normal, wrong_bits
 from scipy.optimize import brentq
 
 from spatiq.metrics.differential_theory import (
-    differential_rayleigh_bound,
     fading_pairs,
     fixed_pairs,
 )
@@ -23,7 +22,6 @@ from spatiq.metrics.union_bound import rayleigh_union_bound
 from spatiq.receiver.detection import maximum_likelihood
 from spatiq.receiver.tree_search import tree_search
 from spatiq.signal.codebooks import (
-    DifferentialCodebook,
     differential_spatial_modulation,
     generalised_spatial_modulation,
     quadrature_spatial_modulation,
@@ -88,8 +86,6 @@ CASES = {name: books[0] for name, books in scheme_examples().items()} | {
 
 
 def bound_of(book, receivers, ratio):
-    if isinstance(book, DifferentialCodebook):
-        return float(differential_rayleigh_bound(book, receivers, ratio))
     return float(rayleigh_union_bound(book, receivers, ratio))
 
 

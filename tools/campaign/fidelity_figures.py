@@ -89,8 +89,8 @@ class PointFigures:
 
 def point_figures(setting: Setting, outcome: Outcome) -> PointFigures:
     """Pool the frames of a point."""
-    codebook, layout = setting.link.codebook, setting.link.layout
-    frame_bits = layout.payload_index.size * codebook.bits
+    codebook = setting.link.codebook
+    frame_bits = setting.link.words_per_frame * codebook.bits
     sent, found = outcome.all_genie_errors.size, outcome.errors.size
     bound = float(rayleigh_union_bound(codebook, setting.receivers, 10 ** (setting.snr_db / 10)))
     each = outcome.all_genie_errors / frame_bits

@@ -12,6 +12,7 @@ from concurrent.futures import ProcessPoolExecutor
 from campaign import (
     estimator_rows,
     false_alarm_rows,
+    family_rows,
     fidelity_table,
     floor_rows,
     impairment_rows,
@@ -28,6 +29,7 @@ SECTIONS: dict[str, Section] = {
         floor_rows,
         impairment_rows,
         fidelity_table,
+        family_rows,
     )
 }
 

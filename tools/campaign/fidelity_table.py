@@ -114,7 +114,7 @@ def _measured(key: str, quick: bool) -> Row:
     link = campaign_link(point.antennas, point.constellation)
     snr_db = operating_snr(link, point.receivers, point.ber)
     setting = Setting(link, point.receivers, point.samples_per_symbol, snr_db)
-    frame_bits = link.layout.payload_index.size * link.codebook.bits
+    frame_bits = link.words_per_frame * link.codebook.bits
     outcome = _measure(setting, extent.frames(point.ber, frame_bits), point.seed)
     figures = point_figures(setting, outcome)
     name = f"{point.antennas} x {point.receivers}    {point.constellation}"

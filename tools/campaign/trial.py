@@ -168,7 +168,8 @@ class _Comparison:
         turn = np.vdot(estimate, truth.H[f])
         turn /= abs(turn)
         symbols = batch.symbols[i] * np.complex64(turn)
-        vectors = self._codebook.vectors[self._words[f]]
+        carried = truth.link.carried(self._words[f : f + 1])[0]
+        vectors = self._codebook.vectors[carried]
         errors = self._wrong_bits(words, f)
         resolved = bool(columns["bits_compared"][i])
         return {

@@ -14,8 +14,9 @@ from numpy.typing import ArrayLike, NDArray
 
 from spatiq.errors import InputError
 from spatiq.metrics.awgn import gaussian_tail
+from spatiq.metrics.differential_theory import differential_rayleigh_bound
 from spatiq.metrics.fading import rayleigh_tail
-from spatiq.signal.codebooks import Codebook
+from spatiq.signal.codebooks import Codebook, DifferentialCodebook
 
 
 def _bound(
@@ -49,8 +50,11 @@ def rayleigh_union_bound(
         es_n0: rho = 1/N0 for E|h|^2 = 1, as a ratio; any shape.
 
     Returns:
-        float64, shape of `es_n0`; may exceed 1/2 at low ratios.
+        float64, shape of `es_n0`; may exceed 1/2 at low ratios. Of the differential form, for
+        detection without channel knowledge.
     """
+    if isinstance(codebook, DifferentialCodebook):
+        return differential_rayleigh_bound(codebook, receivers, es_n0)
     rho = np.asarray(es_n0, dtype=np.float64)
 
     def pairwise(squared: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -75,8 +79,10 @@ def fixed_channel_union_bound(
         float64, shape of `n0`.
 
     Raises:
-        InputError: h of another shape.
+        InputError: h of another shape, or a codebook of the differential form.
     """
+    if codebook.block > 1:
+        raise InputError("union bound", "codebook", codebook.scheme, "words of one symbol period")
     channel = np.asarray(h, dtype=np.complex128)
     if channel.ndim != 2 or channel.shape[1] != codebook.antennas:
         raise InputError("union bound", "H", f"shape {channel.shape}", f"(Nr, {codebook.antennas})")
