@@ -6,7 +6,8 @@
 
 Prints a table for each section: misses, false alarms, estimators against their bounds, the floor of
 the chain, impairments, plain links and all schemes against a genie. The last line is the worst
-ratio of the measured BER to the genie's. Ends with 1 when a bar is missed. Progress goes to standard error.
+ratio of the measured BER to the genie's. Ends with 1 when a bar is missed. Progress goes to
+standard error.
 """
 
 from __future__ import annotations
