@@ -8,17 +8,20 @@ otherwise the frame stays as the refit left it, bit for bit.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from spatiq.receiver.alignment import kept, one_frame, restore
 from spatiq.receiver.first_look import follow, interpolate
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.frame_fit import FittingPlan, FrameFit, fitting_plan
 from spatiq.receiver.motion_test import MotionTest
 from spatiq.receiver.moving_channel import MovingChannel
 from spatiq.receiver.refit import Refit
+from spatiq.receiver.tracking import Tracking
 
 _BAYES = float(np.log(1e4))  # evidence for motion over evidence for standing still
 # Payload noise over that of the known symbols: up to the first, the refit's decisions are trusted;
@@ -34,7 +37,9 @@ _MOVES, _WALKS, _BOTH = (True, False), (False, True), (True, True)
 def channel_following(refit: Refit, payload: int) -> ChannelFollowing:
     """The stage after a refit, for frames of so many payload periods."""
     plan = fitting_plan(refit.tables, refit.bank, refit.clock_std)
-    return ChannelFollowing(refit, plan, MotionTest(refit.tables.codebook, payload))
+    common = (refit.bank, refit.tables, refit.clock_std, _WALK / 2)
+    walking = (Tracking(*common), Refit(*common))
+    return ChannelFollowing(refit, plan, MotionTest(refit.tables.codebook, payload), walking)
 
 
 @dataclass(frozen=True, eq=False)
@@ -45,11 +50,13 @@ class ChannelFollowing:
         refit: stage before; refits frames that stand still.
         plan: blocks and bases.
         test: motion test.
+        walking: tracking and refit that take the phase for walking.
     """
 
     refit: Refit
     plan: FittingPlan
     test: MotionTest
+    walking: tuple[Callable[[FrameBatch], FrameBatch], ...]
 
     def __call__(self, batch: FrameBatch) -> FrameBatch:
         """Fit what moved; fill moving."""
@@ -104,10 +111,10 @@ class ChannelFollowing:
         if excess <= _HOPELESS:
             fits += [_refined(self._fit(batch, i), *free) for free in (_MOVES, _WALKS)]
         if excess > _SOUND:
-            fits += [
-                _refined(self._glimpse(batch, i), *_MOVES),
-                _refined(self._followed(batch, i), *_BOTH),
-            ]
+            fits.append(_refined(self._tracked(batch, i), *_WALKS))
+            if fits[-1].noise > _SOUND * batch.header_noise[i]:
+                fits.append(_refined(self._glimpse(batch, i), *_MOVES))
+                fits.append(_refined(self._followed(batch, i), *_BOTH))
         best = max(fits, key=lambda fit: fit.score)
         others = [free for free in (_MOVES, _WALKS, _BOTH) if free != best.freedoms]
         trials = [best.copy(), *(best.copy() for _ in others)]
@@ -126,6 +133,19 @@ class ChannelFollowing:
             interpolate(fit)
         else:
             follow(fit, _BANDWIDTH, 0.0)
+        return fit
+
+    def _tracked(self, batch: FrameBatch, i: int) -> FrameFit:
+        """First look by the ordinary track and refit, told that the phase walks."""
+        frame = one_frame(batch, i)
+        before = kept(frame)
+        frame.t0[0], frame.step[0] = batch.acquired_timing[i]
+        frame.channel[0], frame.noise[0] = batch.acquired_channel[i], batch.header_noise[i]
+        frame.phase[0] = 0.0
+        for stage in self.walking:
+            frame = stage(frame)
+        fit = self._fit(batch, i)
+        restore(frame, before)
         return fit
 
     def _followed(self, batch: FrameBatch, i: int) -> FrameFit:

@@ -285,7 +285,8 @@ def _parts(values: Complex) -> NDArray[np.float32]:
 
 
 def _climb(grid: tuple[float, ...], start: float, score: Callable[[float], float]) -> float:
-    """The grid's value of the largest score, uphill from `start`, two steps looked ahead."""
+    """The grid's value of the largest score, uphill from `start`; from the grid's first value, for
+    which the others may be much too small a step, some way ahead."""
     here = max((i for i, value in enumerate(grid) if value <= start), default=0)
     scores: dict[int, float] = {}
 
@@ -295,7 +296,8 @@ def _climb(grid: tuple[float, ...], start: float, score: Callable[[float], float
         return scores[i]
 
     while True:
-        near = [i for i in range(here - 2, here + 3) if 0 <= i < len(grid)]
+        ahead = 4 if here == 0 else 1
+        near = [i for i in range(here - 1, here + ahead + 1) if 0 <= i < len(grid)]
         best = max(near, key=at)
         if best == here:
             return grid[here]
