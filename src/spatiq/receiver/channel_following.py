@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.receiver.alignment import kept, one_frame, restore
+from spatiq.receiver.column_phase import turn_columns
 from spatiq.receiver.first_look import follow, interpolate
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.frame_fit import FittingPlan, FrameFit, fitting_plan
@@ -27,6 +28,7 @@ _BAYES = float(np.log(1e4))  # evidence for motion over evidence for standing st
 # Payload noise over that of the known symbols: up to the first, the refit's decisions are trusted;
 # beyond the second, they are of no use.
 _SOUND, _HOPELESS = 1.2, 3.0
+_TURNS = 3
 _FIRST_ROUNDS, _LAST_ROUNDS = 4, 6
 # Doppler spreads and phase walk (radians^2 per period) supposed at the first look.
 _BANDWIDTH, _LITTLE, _WALK = 2e-4, 2e-5, 2 * np.pi * 1e-4
@@ -115,6 +117,7 @@ class ChannelFollowing:
             if fits[-1].noise > _SOUND * batch.header_noise[i]:
                 fits.append(_refined(self._glimpse(batch, i), *_MOVES))
                 fits.append(_refined(self._followed(batch, i), *_BOTH))
+                fits += self._turned(fits[-1], _SOUND * float(batch.header_noise[i]))
         best = max(fits, key=lambda fit: fit.score)
         others = [free for free in (_MOVES, _WALKS, _BOTH) if free != best.freedoms]
         trials = [best.copy(), *(best.copy() for _ in others)]
@@ -147,6 +150,15 @@ class ChannelFollowing:
         fit = self._fit(batch, i)
         restore(frame, before)
         return fit
+
+    def _turned(self, fit: FrameFit, limit: float) -> list[FrameFit]:
+        """The same with columns turned that were locked to a wrong angle; none if all was well."""
+        other = fit.copy()
+        for _ in range(_TURNS):
+            if other.noise <= limit or not turn_columns(other):
+                break
+            other = _refined(other, *_WALKS)
+        return [other] if other.score > fit.score else []
 
     def _followed(self, batch: FrameBatch, i: int) -> FrameFit:
         """First look at a phase that walks, on a channel that may move."""

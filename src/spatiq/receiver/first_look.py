@@ -18,7 +18,8 @@ from spatiq.receiver.frame_fit import FrameFit
 from spatiq.receiver.frame_posterior import Posterior, moments, posterior
 from spatiq.receiver.moving_channel import Following
 
-_PIECE = 16  # symbol periods decided at a time
+_KEPT = 0.1  # of the information, when a frame is gone through again
+_PIECE, _WALKING_PIECE = 16, 8  # symbol periods decided at a time: the phase is one in them
 
 
 def interpolate(fit: FrameFit) -> None:
@@ -46,8 +47,15 @@ def follow(fit: FrameFit, bandwidth: float, walk: float) -> None:
         np.flatnonzero(outside & (tables.active < tables.header_centroid))[::-1],
     ):
         track.restart()
-        for first in range(0, order.size, _PIECE):
-            track.take(np.sort(order[first : first + _PIECE]))
+        piece = _PIECE if walk == 0.0 else _WALKING_PIECE
+        for first in range(0, order.size, piece):
+            track.take(np.sort(order[first : first + piece]))
+    if walk > 0.0:
+        # With columns that the payload has put right, from the first symbol on.
+        track.forget()
+        every = np.arange(tables.active.size)
+        for first in range(0, every.size, piece):
+            track.take(every[first : first + piece])
     fit.channels = fit.plan.spread(track.channels())
     fit.bandwidth, fit.walk = bandwidth, walk
 
@@ -74,11 +82,21 @@ class _Track:
         self._projection = np.zeros((size, fit.y.shape[1]), np.complex128)
         self._angle = self._start = 0.0
         low, high = plan.blocks.block[header[0]], plan.blocks.block[header[-1]] + 1
+        self._variance_of = np.zeros(self._antennas)
         self._enter(header, fit.channels[low:high])
+        self._doubt_phases(header)
 
     def restart(self) -> None:
         """Begin at the header again."""
         self._angle, self._variance = self._start, 0.0
+
+    def forget(self) -> None:
+        """Keep what has been learnt as a mean, hardly as information; the phase is open again."""
+        noise = self._fit.noise * np.eye(len(self._information))
+        said, _ = self._solved()
+        self._information = _KEPT * (self._information - noise) + noise
+        self._projection = self._information @ said
+        self._angle, self._variance = 0.0, np.pi**2 / 3
 
     def _enter(self, periods: NDArray[np.int64], channels: Complex) -> None:
         """Add what the periods' expected words say."""
@@ -99,26 +117,57 @@ class _Track:
     ) -> Posterior:
         fit = self._fit
         plan = fit.plan
-        return posterior(straight, periods, plan.blocks, channels, fit.noise, plan.tables)
+        return posterior(
+            straight, periods, plan.blocks, channels, fit.noise, plan.tables, self._variance_of
+        )
 
     def _rows(self, periods: NDArray[np.int64]) -> NDArray[np.int64]:
         """Rows of the basis for each finest block from the first period's to the last one's."""
         block = self._fit.plan.blocks.block
         return np.arange(block[periods[0]], block[periods[-1]] + 1) // self._factor
 
-    def _solved(self) -> Complex:
-        """Coefficients, (Nt Q, Nr)."""
+    def _doubt_phases(self, header: NDArray[np.int64]) -> None:
+        """Antennas heard at different times: between them the phase has walked, unseen.
+
+        Their information is taken down to what that leaves; what it says stays.
+        """
+        plan = self._fit.plan
+        energy = np.abs(plan.tables.known_vectors[header].astype(np.complex128)) ** 2
+        total = energy.sum(axis=0)
+        place = plan.tables.active[header] @ energy / np.maximum(total, 1e-300)
+        away = np.abs(place - place[total > 0].max())
+        channel = np.mean(np.abs(self._fit.channels[0]) ** 2, axis=0)
+        walked = self._walk * away * channel * total / self._fit.noise
+        share = np.repeat(1.0 / np.sqrt(1.0 + walked), self._basis.shape[1])
+        said, _ = self._solved()
+        fresh = self._information - self._fit.noise * np.eye(len(share))
+        self._information = fresh * np.outer(share, share) + self._fit.noise * np.eye(len(share))
+        self._projection = self._information @ said
+
+    def _solved(self) -> tuple[Complex, Complex]:
+        """Coefficients (Nt Q, Nr), and the inverse of their information."""
+        size = len(self._information)
         factor = scipy.linalg.cho_factor(self._information, lower=True)
-        return np.asarray(scipy.linalg.cho_solve(factor, self._projection), np.complex128)
+        inverse = scipy.linalg.cho_solve(factor, np.eye(size))
+        return np.asarray(inverse @ self._projection, np.complex128), inverse
+
+    def _predicted(self, part: NDArray[np.float64]) -> Complex:
+        """Channels of some blocks, rows of the basis; their variance is kept."""
+        found, inverse = self._solved()
+        size, row = part.shape[1], part[len(part) // 2]
+        each = inverse.reshape(self._antennas, size, self._antennas, size)
+        own = np.einsum("amab,m,b->a", each, row, row).real
+        self._variance_of = self._fit.noise * own
+        return synthesis(found, part, self._antennas)
 
     def channels(self) -> Complex:
         """Channels over the basis' blocks, (B, Nr, Nt)."""
-        return synthesis(self._solved(), self._basis, self._antennas)
+        return synthesis(self._solved()[0], self._basis, self._antennas)
 
     def take(self, periods: NDArray[np.int64]) -> None:
         """Decide a piece: phase first, then what it says of the channel."""
         part = self._basis[self._rows(periods)]
-        channels = synthesis(self._solved(), part, self._antennas)
+        channels = self._predicted(part)
         if self._walk > 0.0:
             self._follow_phase(periods, channels)
         self._enter(periods, channels)

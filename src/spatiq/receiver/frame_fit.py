@@ -162,6 +162,7 @@ class FrameFit:
         """A fit of its own that begins where this one is."""
         other = copy.copy(self)
         other.timing, other.phase = self.timing.copy(), self.phase.copy()
+        other.channels = self.channels.copy()
         return other
 
     def sample(self) -> None:

@@ -73,6 +73,7 @@ def posterior(
     channels: Complex,
     noise: float,
     tables: LinkTables,
+    variance: NDArray[np.float64] | None = None,
 ) -> Posterior:
     """E[x] and E[conj(x) x^T] of some active periods; known vectors where they are known.
 
@@ -83,6 +84,8 @@ def posterior(
         channels: (b, Nr, Nt); from the first period's block to the last one's.
         noise: N0.
         tables: link tables.
+        variance: (Nt,); of the error of each coefficient of `channels`, which makes words less sure
+            (as in `soft_output`); None: none.
     """
     vectors = tables.codebook.vectors
     size, antennas = vectors.shape
@@ -90,6 +93,7 @@ def posterior(
     mean = tables.known_vectors[periods].astype(np.complex128)
     gram = _known_gram(periods, blocks, low, len(channels), antennas)
     sent = np.flatnonzero(tables.active_word[periods] >= 0)
+    excess = None if variance is None else np.abs(vectors) ** 2 @ variance
     pairs = (vectors.conj()[:, :, None] * vectors[:, None, :]).reshape(size, antennas * antennas)
     step = max(1, _AT_ONCE // (size * y.shape[1]))
     for first in range(0, sent.size, step):
@@ -100,7 +104,7 @@ def posterior(
         received = (channels[begin:end] @ vectors.T).astype(np.complex64)
         amplitude = tables.active_amplitude[at].astype(np.float64)
         z = (y[chosen] / amplitude[:, None]).astype(np.complex64)
-        weight = _weights(z, received, block - begin, amplitude**2 / noise)
+        weight = _weights(z, received, block - begin, noise / amplitude**2, excess)
         mean[chosen] = amplitude[:, None] * (weight @ vectors)
         starts = np.flatnonzero(np.diff(block, prepend=-1))
         uses = np.add.reduceat(weight * amplitude[:, None] ** 2, starts, axis=0)
@@ -127,15 +131,21 @@ def _weights(
     z: NDArray[np.complex64],
     received: NDArray[np.complex64],
     block: NDArray[np.int64],
-    inverse_noise: NDArray[np.floating],
+    noise: NDArray[np.float64],
+    excess: NDArray[np.float64] | None,
 ) -> NDArray[np.float64]:
     """Probability of each word, (n, C), given z (n, Nr) and received words (B, Nr, C)."""
     distance = np.zeros((len(z), received.shape[2]), np.float32)
     for r in range(z.shape[1]):
         error = z[:, r, None] - received[block, r]
         distance += error.real**2 + error.imag**2
-    distance -= distance.min(axis=1, keepdims=True)
-    weight = np.exp(-distance.astype(np.float64) * inverse_noise[:, None])
+    if excess is None:
+        distance -= distance.min(axis=1, keepdims=True)
+        weight = np.exp(-distance.astype(np.float64) / noise[:, None])
+    else:
+        total = noise[:, None] + excess
+        exponent = distance / total + z.shape[1] * np.log(total)
+        weight = np.exp(exponent.min(axis=1, keepdims=True) - exponent)
     return np.asarray(weight / weight.sum(axis=1, keepdims=True), np.float64)
 
 
