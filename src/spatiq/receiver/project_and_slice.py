@@ -110,8 +110,7 @@ def detect_by_slicing(
             h = columns[a, r]
             norm[a] += float(h.real) * float(h.real) + float(h.imag) * float(h.imag)
     for k in range(y.shape[0]):
-        best = np.inf
-        words[k] = 0
+        best, antenna, place = np.inf, 0, 0
         for a in range(antennas):
             re, im = 0.0, 0.0
             for r in range(channels):
@@ -126,6 +125,6 @@ def detect_by_slicing(
                 s = points[a, m]
                 metric = norm[a] * (float(s.real) ** 2 + float(s.imag) ** 2)
                 metric -= 2.0 * (s.real * re + s.imag * im)
-                if metric < best or (metric == best and words_of[a, m] < words[k]):
-                    best = metric
-                    words[k] = words_of[a, m]
+                if metric < best:
+                    best, antenna, place = metric, a, m
+        words[k] = words_of[antenna, place]

@@ -89,10 +89,9 @@ def _circle(points: NDArray[np.complex128]) -> Slicer | None:
 def sliced(re: float, im: float, kind: int, places: F64, counts: I64, labels: I64) -> int:
     """Label of the point nearest to re + j im; kind `GRID` or `CIRCLE`."""
     if kind == GRID:
-        i = int(np.rint((re - places[0]) * places[1]))
-        q = int(np.rint((im - places[2]) * places[3]))
-        i = min(max(i, 0), counts[0] - 1)
-        q = min(max(q, 0), counts[1] - 1)
-        return int(labels[i * counts[1] + q])
+        # Limited before they are whole: without branches, which no processor could foresee.
+        i = min(max((re - places[0]) * places[1] + 0.5, 0.0), counts[0] - 0.5)
+        q = min(max((im - places[2]) * places[3] + 0.5, 0.0), counts[1] - 0.5)
+        return int(labels[int(i) * counts[1] + int(q)])
     turn = int(np.rint((np.arctan2(im, re) - places[0]) * places[1])) % counts[0]
     return int(labels[turn])
