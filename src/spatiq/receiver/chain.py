@@ -126,7 +126,9 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     acquisition = Acquisition(parts.bank, parts.tables, reach, link.symbol_rate_hz, locked)
     if options.channel == "dispersive":
         return dispersive_stages(link, options, acquisition, clock_std, walk)
-    refit = Refit(parts.bank, parts.tables, clock_std, walk)
+    # In differential form the channel may start from one known symbol an antenna.
+    rounds = 2 if link.codebook.block == 1 else 4
+    refit = Refit(parts.bank, parts.tables, clock_std, walk, rounds)
     following = channel_following(refit, link.layout.payload_index.size)
     reception: list[Stage] = [
         acquisition,
