@@ -5,6 +5,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -144,8 +145,7 @@ def _row(case: Case) -> str:
     cells = []
     for name in ("maximum-likelihood", "project-and-slice", "tree-search", "two-step"):
         if name in counts:
-            detect = DETECTORS[name]
-            took = nanoseconds(lambda d=detect: d(y, channel, 0.1, case.book))  # type: ignore[misc]
+            took = nanoseconds(partial(DETECTORS[name], y, channel, 0.1, case.book))
             cells.append(f"{counts[name]:>9.0f} {took:>8.0f}")
         else:
             cells.append(f"{'-':>9} {'-':>8}")
