@@ -6,9 +6,20 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from receiver_cases import MemoryRecording, complex_noise, make_link, rayleigh, waveform
+from received_frames import record
+from receiver_cases import (
+    IN_TURN,
+    SYNC,
+    MemoryRecording,
+    complex_noise,
+    make_link,
+    payload_section,
+    rayleigh,
+    waveform,
+)
 
 from spatiq.receiver.chain import chain_parts
+from spatiq.receiver.frame_index import FrameIndexer
 from spatiq.receiver.frame_search import Detection, FrameSearch, threshold
 from spatiq.receiver.frame_search_kernels import metric_at
 from spatiq.receiver.frame_search_law import noise_powers, tail_probability
@@ -155,3 +166,26 @@ def test_strong_frames_take_no_second_look(monkeypatch):
     monkeypatch.setattr("spatiq.receiver.frame_search.noise_powers", refuse)
     place = search.scan(0)
     assert place is not None and place.metric >= pattern.certain
+
+
+def test_refused_peaks_do_not_make_a_search_depend_on_where_it_begins(tmp_path, monkeypatch):
+    """Noise on one of three channels, found at 3e-4: refused now and then, and the pieces of a cut
+    recording give what a single pass gives."""
+    link = make_link(sections=SYNC + IN_TURN + payload_section(150))
+    choices = {"receive_channels": 3, "samples_per_symbol": 4.0, "snr_db": 12.0, "seed": 6}
+    choices |= {"frames": 12, "spacing": (100.0, 3000.0), "noise_db": (0.0, -25.0, -25.0)}
+    recording, _ = record(tmp_path, link, **choices)
+    answers = []
+    passes = FrameSearch.passes
+    monkeypatch.setattr(
+        FrameSearch, "passes", lambda self, at: answers.append(passes(self, at)) or answers[-1]
+    )
+    indexer = FrameIndexer(recording, link, ReceiverOptions(block_size=4096, false_alarm=3e-4))
+    (piece,) = indexer.pieces([])
+    expected = [find.key for find in indexer.search(piece).finds]
+    assert answers.count(False) > 3 * len(expected) > 36
+    rng = np.random.default_rng(19)
+    for _ in range(8):
+        pieces = indexer.pieces(np.sort(rng.integers(0, recording.n_samples, 5)).tolist())
+        joined = indexer.join(pieces, map(indexer.search, pieces)).finds()
+        assert [find.key for find in joined] == expected
