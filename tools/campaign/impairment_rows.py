@@ -18,12 +18,12 @@ from spatiq.link.loading import Link
 from spatiq.metrics.measuring import measure
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.transmit.losses import spread
-from spatiq.transmit.simulation import simulate
-from spatiq.transmit.truth import Truth
+from spatiq.transmit.simulation import SimulatedCapture, simulate
 
 BER_BAR = 1.15  # measured over genie
 LOST_BAR = 0.01  # frames, where no samples are lost
 _FRAMES_AT_ONCE = 75
+_PULSES = 40  # reach of two frames' pulses, symbol periods
 _ASTRAY = 2.0, 20  # errors of a frame that went astray: over genie's by a factor, and a few
 
 Floats = NDArray[np.float64]
@@ -52,16 +52,23 @@ def link_of(row: Impairment) -> Link:
 
 
 def _counted(
-    truth: Truth, columns: dict[str, NDArray[np.generic]], genie: NDArray[np.int64]
+    capture: SimulatedCapture, columns: dict[str, NDArray[np.generic]], genie: NDArray[np.int64]
 ) -> Counts:
-    """What the receiver counted in the frames that it found."""
+    """What the receiver counted in the frames that it found and that no other transmitter hit."""
+    truth = capture.truth
     hits = matched(truth, columns["start_sample"].astype(np.float64), 2 * truth.spacing)
+    clear = np.ones(truth.frames, np.bool_)
+    for other in capture.others:
+        nearest = np.abs(truth.starts[:, None] - other.starts[None]).min(axis=1)
+        clear &= nearest > (truth.link.layout.length + _PULSES) * truth.spacing
+    elsewhere = int(columns["start_sample"].size - np.sum(hits >= 0))
+    hits, genie = hits[clear], genie[clear]
     found = hits >= 0
     at = np.where(found, hits, 0)
 
     def of(name: str) -> Floats:
         if not columns[name].size:
-            return np.zeros(truth.frames)
+            return np.zeros(hits.size)
         values = columns[name][at].astype(np.float64)
         return np.where(found, values, 0.0)
 
@@ -72,7 +79,7 @@ def _counted(
         bits=of("bits_compared"),
         genie=np.where(found, genie, 0).astype(np.float64),
         predicted=predicted,
-        elsewhere=int(columns["start_sample"].size - found.sum()),
+        elsewhere=elsewhere,
     )
 
 
@@ -102,7 +109,7 @@ def _trial(row: Impairment, link: Link, snr_db: float, frames: int, seed: int) -
     seen = spread(seen, ideal.truth.gaps, ideal.n_clock)
     words = genie_words(ideal.truth, seen, whiten=row.whiten, dead=row.dead)
     genie = wrong_bits(words, ideal.truth.words())
-    return _counted(capture.truth, columns, genie)
+    return _counted(capture, columns, genie)
 
 
 def _joined(parts: list[Counts], name: str) -> Floats:

@@ -209,6 +209,20 @@ IMPAIRMENTS: dict[str, Impairment] = {
             "spacing": _WIDE,
         },
     ),
+    "another transmitter over some frames, +3 dB: the other frames": Impairment(
+        scenario={
+            "others": (
+                OtherTransmitter(
+                    seed=9,
+                    delay=2000.0,
+                    power_db=3.0,
+                    spacing=(2000.0, 6000.0),
+                    cfo_hz=(-0.02 * RATE, 0.02 * RATE),
+                    first_frame=700,
+                ),
+            ),
+        },
+    ),
     "Doppler 1e-4, pilots in front": Impairment(
         scenario={"channels": Doppler(1e-4)}, frames=200, quick=40
     ),
