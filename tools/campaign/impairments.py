@@ -232,8 +232,8 @@ IMPAIRMENTS: dict[str, Impairment] = {
     "16 x 64 QPSK": Impairment(
         link={"antennas": 64}, receivers=16, frames=24, samples_per_symbol=2.0
     ),
-    # Frames of 1000 words tell an antenna's channel by 32 symbols: least squares from all of them, as
-    # if all were known, with an error independent of the noise, would lose 1.26.
+    # Frames of 1000 words tell an antenna's channel by 32 symbols: least squares from all of them,
+    # as if all were known, with an error independent of the noise, would lose 1.26.
     "16 x 64 QPSK, 5000 payload words": Impairment(
         link={"antennas": 64, "payload": 5000}, receivers=16, frames=8, samples_per_symbol=2.0
     ),
