@@ -159,6 +159,9 @@ class PlainTransmitter:
             elif s["kind"] == "payload":
                 g = 10 ** (s.get("power_db", 0) / 20)
                 section = [("word", g)] * s["symbols"]
+                if "blocks" in s:
+                    count = s["symbols"] // s["blocks"]["length"]
+                    section = [("block", (g, s["blocks"], self.antennas))] * count
                 if self.scheme.differential:
                     blocks = s["symbols"] // self.antennas - 1
                     section = [("reference", g)] + [("word", g)] * blocks
@@ -178,7 +181,7 @@ class PlainTransmitter:
     # Chapters 7 and 8
 
     def plain_bits(self, n, data):
-        total = self.word_bits * sum(kind == "word" for kind, _ in self.periods())
+        total = self.word_bits * sum(words_of(*period) for period in self.periods())
         fields = self.file["payload"]["field"]
         widths = [self.field_width(f) for f in fields]
         rest = total - sum(w for w in widths if w is not None)
@@ -263,6 +266,19 @@ class PlainTransmitter:
             past[k] = fed if table["type"] == "additive" else sent[-1]
         return sent
 
+    def block(self, what, bits):
+        amplitude, table, antennas = what
+        form, length, guard = table["form"], table["length"], table["guard"]
+        used = used_subcarriers(table)
+        words = []
+        for _ in range(words_of("block", what)):
+            word, bits = bits[: self.word_bits], bits[self.word_bits :]
+            words += [[amplitude * x for x in row] for row in self.scheme.vectors(word)]
+        body = body_of(words, form, length, used)
+        if form == "zero-padding":
+            return body + [[0j] * antennas] * guard, bits
+        return body[length - guard :] + body, bits
+
     def frame(self, n, data=()):
         """Symbols of every period and antenna: complex, shape (K, Nt)."""
         bits = self.sent_bits(n, data) if "payload" in self.file else []
@@ -270,6 +286,9 @@ class PlainTransmitter:
         for kind, what in self.periods():
             if kind == "known":
                 rows.append(what)
+            elif kind == "block":
+                made, bits = self.block(what, bits)
+                rows += made
             elif kind == "reference":
                 rows += [[what * x for x in row] for row in self.scheme.start()]
             else:
@@ -277,6 +296,34 @@ class PlainTransmitter:
                 rows += [[what * x for x in row] for row in self.scheme.vectors(word)]
         assert not bits
         return np.array(rows)
+
+
+def used_subcarriers(table):
+    return table.get("subcarriers", list(range(1, table["length"])))
+
+
+def words_of(kind, what):
+    if kind == "block":
+        multicarrier = what[1]["form"] == "multicarrier"
+        return len(used_subcarriers(what[1])) if multicarrier else what[1]["length"]
+    return int(kind == "word")
+
+
+def body_of(words, form, length, subcarriers):
+    if form != "multicarrier":
+        return words
+    antennas = len(words[0])
+    spectrum = [[0j] * antennas for _ in range(length)]
+    for f, vector in zip(subcarriers, words, strict=True):
+        spectrum[f] = vector
+    turns = [cmath.exp(2j * math.pi * k / length) for k in range(length)]
+    return [
+        [
+            sum(spectrum[f][a] * turns[f * n % length] for f in range(length)) / math.sqrt(length)
+            for a in range(antennas)
+        ]
+        for n in range(length)
+    ]
 
 
 def as_complex(value):

@@ -71,7 +71,8 @@ _Memory = Annotated[
 _Equaliser = Annotated[
     str,
     typer.Option(
-        metavar="sequence|mmse", help="Dispersive: decide whole sequences, or equalise linearly."
+        metavar="auto|sequence|mmse",
+        help="Dispersive: decide whole sequences, or equalise linearly.",
     ),
 ]
 _Survivors = Annotated[int, typer.Option(help="Dispersive: sequences kept by the search.")]

@@ -88,6 +88,9 @@ def _rates(
     spatial = int(np.sum(codebook.spatial_bits))
     signal = codebook.bits - spatial
     gross = codebook.bits * symbol_rate_hz / codebook.block
+    if layout.blocks:  # guards, and subcarriers that carry nothing
+        sections = sum(s.length for s in layout.sections if s.kind == "payload")
+        gross *= layout.payload_index.size / sections
     interspersed = int(np.sum(layout.kind == Period.KNOWN))
     entries = [
         ("bits per word", f"{codebook.bits}: {spatial} spatial, {signal} signal"),

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.link import schema_frame as tables
+from spatiq.link.block_building import block_run, blocks_text
+from spatiq.link.blocks import BlockRun
 from spatiq.link.known_symbols import checked_antennas, section_length, section_vectors, sequence
 from spatiq.link.layout import FrameLayout, Period, SectionSpan
 from spatiq.link.places import Place
@@ -25,6 +27,7 @@ class _Part:
     amplitude: float
     text: str
     block: int = 1  # periods that a word takes; more than 1: a reference block comes first
+    run: BlockRun | None = None  # blocks, as if the section were the frame's first
 
     @property
     def carries(self) -> NDArray[np.bool_]:
@@ -137,8 +140,23 @@ def _payload_part(table: tables.PayloadSection, antennas: int, place: Place) -> 
     return _Part(known, kind, amplitude, text + _power_text(table.power_db))
 
 
+def _part_in_blocks(table: tables.PayloadSection, antennas: int, block: int, place: Place) -> _Part:
+    run = block_run(table, block, place)
+    periods = run.count * (run.length + run.guard)
+    kind = np.full(periods, Period.SILENCE, np.uint8)
+    if run.has_prefix:
+        kind[:] = Period.PREFIX
+        kind[run.periods] = Period.BODY
+    kind[run.payload] = Period.PAYLOAD
+    amplitude = 10.0 ** (table.power_db / 20.0)
+    text = f"{blocks_text(run)}{_power_text(table.power_db)}"
+    return _Part(np.zeros((periods, antennas), np.complex128), kind, amplitude, text, run=run)
+
+
 def _part(table: tables.Section, antennas: int, block: int, place: Place) -> _Part:
     if isinstance(table, tables.PayloadSection):
+        if table.blocks is not None:
+            return _part_in_blocks(table, antennas, block, place)
         build = _payload_part if block == 1 else _differential_part
         return build(table, antennas, place)
     if isinstance(table, tables.SilenceSection):
@@ -156,6 +174,9 @@ def _check_length(frame: tables.Frame, antennas: int, place: Place) -> None:
         inside = place / "section" / i
         if isinstance(table, tables.SyncSection | tables.PilotSection):
             total += section_length(table, antennas, inside)
+        elif isinstance(table, tables.PayloadSection) and table.blocks is not None:
+            blocks = table.blocks
+            total += table.symbols // blocks.length * (blocks.length + blocks.guard)
         else:
             total += table.symbols
         if total > limit:
@@ -195,6 +216,11 @@ def frame_layout(frame: tables.Frame, antennas: int, place: Place, block: int = 
         payload_index=payload.astype(np.int64),
         payload_amplitude=amplitude[payload],
         sections=spans,
+        blocks=tuple(
+            replace(part.run, start=span.start)
+            for part, span in zip(parts, spans, strict=True)
+            if part.run is not None
+        ),
     )
 
 

@@ -8,6 +8,7 @@ from enum import IntEnum
 import numpy as np
 from numpy.typing import NDArray
 
+from spatiq.link.blocks import MULTICARRIER, BlockRun
 from spatiq.signal.codebook import Codebook
 
 
@@ -19,6 +20,8 @@ class Period(IntEnum):
     PILOT = 2
     KNOWN = 3  # a known symbol interspersed in a payload section
     PAYLOAD = 4
+    PREFIX = 5  # repeats payload that follows
+    BODY = 6  # of a multicarrier block: no word's own place
 
 
 @dataclass(frozen=True)
@@ -45,10 +48,12 @@ class FrameLayout:
             section power included; zero in payload and silence.
         kind: uint8, shape (K,); a `Period` for each symbol period.
         payload_index: int64, shape (Kp,); symbol periods that payload words take, ascending; in
-            differential form with the reference blocks before them (kind PILOT).
+            differential form with the reference blocks before them (kind PILOT). A word on
+            subcarrier f of a multicarrier block takes the f-th period of the block's body.
         payload_amplitude: float64, shape (Kp,); amplitude factor of each of these, from its
             section's power.
         sections: the sections in order, as spans.
+        blocks: payload sections sent in blocks with a guard each.
     """
 
     known: NDArray[np.complex128]
@@ -56,6 +61,7 @@ class FrameLayout:
     payload_index: NDArray[np.int64]
     payload_amplitude: NDArray[np.float64]
     sections: tuple[SectionSpan, ...]
+    blocks: tuple[BlockRun, ...] = ()
 
     @property
     def length(self) -> int:
@@ -66,6 +72,11 @@ class FrameLayout:
     def antennas(self) -> int:
         """Number of transmit antennas, Nt."""
         return int(self.known.shape[1])
+
+    @property
+    def multicarrier(self) -> bool:
+        """Whether words take subcarriers anywhere."""
+        return any(run.form == MULTICARRIER for run in self.blocks)
 
     def payload_runs(self) -> tuple[int, ...]:
         """Periods that each payload section gives to words, reference blocks included."""

@@ -11,6 +11,7 @@ from typing import Annotated, Literal
 
 from pydantic import Field, Tag
 
+from spatiq.link.blocks import FORMS
 from spatiq.link.values import (
     ComplexNumber,
     Number,
@@ -25,6 +26,7 @@ MAX_SYMBOLS = 1_000_000
 MAX_SECTIONS = 1000
 MAX_REPEAT = 10_000
 MAX_POWER_DB = 60.0
+MAX_BLOCK = 65_536
 
 Antenna = Annotated[int, Whole(0, 63)]
 Antennas = Annotated[
@@ -143,6 +145,21 @@ class Interspersed(Table):
     antennas: Antennas | None = None
 
 
+class Blocks(Table):
+    """Payload in blocks, with a guard each against echoes."""
+
+    form: Annotated[str, OneOf(*FORMS)]
+    length: Annotated[int, Whole(2, MAX_BLOCK)]
+    guard: Annotated[int, Whole(0, MAX_BLOCK)]
+    subcarriers: (
+        Annotated[
+            list[Annotated[int, Whole(0, MAX_BLOCK - 1)]],
+            Field(min_length=1, max_length=MAX_BLOCK, description="a list of subcarrier numbers"),
+        ]
+        | None
+    ) = None
+
+
 class PayloadSection(Table):
     """Words of payload bits."""
 
@@ -150,6 +167,7 @@ class PayloadSection(Table):
     symbols: Symbols
     power_db: Power = 0.0
     known: Interspersed | None = None
+    blocks: Blocks | None = None
 
 
 class SilenceSection(Table):

@@ -124,7 +124,8 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     spacing = float(steps[1] - steps[0]) if steps.size > 1 else 1.0
     reach = spacing / parts.pattern.transform_size
     acquisition = Acquisition(parts.bank, parts.tables, reach, link.symbol_rate_hz, locked)
-    if options.channel == "dispersive":
+    # Subcarriers overlap in time: only these stages know them.
+    if options.channel == "dispersive" or link.layout.multicarrier:
         return dispersive_stages(link, options, acquisition, clock_std, walk)
     # In differential form the channel may start from one known symbol an antenna.
     rounds = 2 if link.codebook.block == 1 else 4

@@ -33,13 +33,14 @@ class DispersiveFrames:
         """Payload vectors of frame i as a flat channel would have given them, (Kp, Nr).
 
         That is H x of each word and what the words do not explain of the vector received in its
-        period: y[k] - sum over l of G[l] x[k - l]. Words of -1 are taken as decided.
+        period, y[k] - sum over l of G[l] x[k - l], or at its subcarrier. Words of -1 are taken as
+        decided.
         """
         plan = self.plan
         words = np.where(words < 0, self.decided[i], words)
         expected = convolved(plan.vectors(words), self.taps[i], self.window)
-        left = self.received[i] - expected
-        scaled = left[plan.payload] / plan.amplitude[plan.payload, None]
+        left = np.asarray(self.received[i] - expected, np.complex128)
+        scaled = plan.at_words(left) / plan.amplitude[plan.payload, None]
         flat = scaled + plan.codebook.vectors[words] @ channel.T
         return np.asarray(flat, np.complex64)
 

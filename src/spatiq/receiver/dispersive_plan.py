@@ -8,9 +8,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.errors import InputError
+from spatiq.link.blocks import MULTICARRIER, BlockRun, fill_blocks, take_subcarriers
 from spatiq.link.description import Link
 from spatiq.link.layout import Period
-from spatiq.receiver.fir_channel import Complex, Window, shifted_vectors, supported_rows
+from spatiq.receiver.fir_channel import (
+    Complex,
+    Window,
+    shifted_vectors,
+    subcarrier_channels,
+    supported_rows,
+)
 from spatiq.signal.codebooks import Codebook
 
 # Lags that are looked at: the flanks of a pulse ahead of the strongest path, and echoes behind it.
@@ -33,6 +40,7 @@ class DispersivePlan:
         rows: int64 (n,); periods whose received vector depends on known symbols alone.
         shifted: complex128 (n, L, Nt); what they depend on.
         windows: what the information criterion may choose from.
+        blocks: payload sections sent in blocks.
     """
 
     codebook: Codebook
@@ -44,6 +52,7 @@ class DispersivePlan:
     rows: NDArray[np.int64]
     shifted: Complex
     windows: list[Window]
+    blocks: tuple[BlockRun, ...]
 
     @property
     def centre(self) -> float:
@@ -56,7 +65,22 @@ class DispersivePlan:
         out = self.known.copy()
         sent = self.codebook.vectors[np.maximum(words, 0)] * (words >= 0)[:, None]
         out[self.payload] = sent * self.amplitude[self.payload, None]
+        fill_blocks(out, self.blocks)
         return out
+
+    def at_words(self, received: Complex) -> Complex:
+        """Vectors received in all periods (K, Nr), as they are at each word's place, (Kp, Nr)."""
+        return take_subcarriers(received, self.blocks)[self.payload]
+
+    def channels_of_words(self, taps: Complex, window: Window) -> Complex | None:
+        """Channel at each word's subcarrier, (Kp, Nr, Nt); None unless all take subcarriers."""
+        if not self.blocks or any(run.form != MULTICARRIER for run in self.blocks):
+            return None
+        responses = [
+            np.tile(subcarrier_channels(taps, window, run.length)[run.slots], (run.count, 1, 1))
+            for run in self.blocks
+        ]
+        return np.concatenate(responses)
 
 
 def dispersive_plan(link: Link, memory: int | None) -> DispersivePlan:
@@ -70,7 +94,8 @@ def dispersive_plan(link: Link, memory: int | None) -> DispersivePlan:
         InputError: the known symbols cannot tell a channel of such a memory.
     """
     layout = link.layout
-    is_known = layout.kind != Period.PAYLOAD
+    unknown = (Period.PAYLOAD, Period.PREFIX, Period.BODY)
+    is_known = ~np.isin(layout.kind, unknown)
     amplitude = np.zeros(layout.length)
     amplitude[layout.payload_index] = layout.payload_amplitude
     used = np.any(link.codebook.vectors != 0, axis=0) | np.any(layout.known != 0, axis=0)
@@ -94,6 +119,7 @@ def dispersive_plan(link: Link, memory: int | None) -> DispersivePlan:
         rows=rows,
         shifted=shifted_vectors(layout.known, rows, window),
         windows=window.inside(memory),
+        blocks=layout.blocks,
     )
 
 

@@ -26,7 +26,6 @@ from spatiq.receiver.acquisition import Acquisition
 from spatiq.receiver.dispersive_acquisition import KnownSymbols, sampled
 from spatiq.receiver.dispersive_frames import DispersiveFrames, flat_equivalent
 from spatiq.receiver.dispersive_plan import WIDEST, DispersivePlan
-from spatiq.receiver.dispersive_tracking import RunDetector, track_frame
 from spatiq.receiver.fir_channel import (
     Complex,
     FirChannel,
@@ -36,6 +35,7 @@ from spatiq.receiver.fir_channel import (
     shifted_vectors,
 )
 from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.frame_deciders import FrameDecider, Part
 from spatiq.receiver.matched_filter import FilterBank, derotate
 from spatiq.receiver.refit_kernels import refit_phase
 
@@ -52,7 +52,7 @@ class _Frame:
     channel: FirChannel
     words: NDArray[np.int64]
     phase: NDArray[np.float32]
-    parts: list[tuple[int, int, FirChannel]] = field(default_factory=list)
+    parts: list[Part] = field(default_factory=list)
 
 
 @dataclass(frozen=True, eq=False)
@@ -62,7 +62,7 @@ class DispersiveReception:
     Attributes:
         plan: the link.
         bank: filter bank.
-        detect: decides runs of words.
+        decider: decides the words of a frame.
         memory: lags less one; None: chosen by frame.
         acquisition: how carrier and clock hang together.
         clock_std: standard deviation of the clock offset expected, as a ratio.
@@ -72,7 +72,7 @@ class DispersiveReception:
 
     plan: DispersivePlan
     bank: FilterBank
-    detect: RunDetector
+    decider: FrameDecider
     memory: int | None
     acquisition: Acquisition
     clock_std: float
@@ -92,7 +92,7 @@ class DispersiveReception:
             window = frame.channel.window
             begin = window.first - WIDEST.first
             taps[i, begin : begin + window.size] = frame.channel.taps
-            batch.words[i] = frame.words[plan.payload]
+            batch.words[i] = frame.words
         frames = DispersiveFrames(plan, received, taps, WIDEST, batch.words)
         for i in range(batch.count):
             batch.channel[i] = flat_equivalent(taps[i])
@@ -108,12 +108,13 @@ class DispersiveReception:
         self._derotate(batch, i, found.carrier)
         received = self._sampled(batch, i)
         batch.header_noise[i] = found.channel.noise
-        words, phase = track_frame(received, found, plan, self.detect, self.walk)
+        words, phase = self.decider.track(received, found)
         frame = _Frame(received, found.channel, words, phase.astype(np.float32))
         for _ in range(self.rounds):
             self._refit(batch, i, frame)
-            self._decide(frame)
-        energy = np.sum(np.abs(plan.vectors(frame.words[plan.payload])) ** 2, axis=0)
+            noise = frame.channel.noise
+            frame.words = self.decider.decide(frame.received, frame.parts, noise, frame.words)
+        energy = np.sum(np.abs(plan.vectors(frame.words)) ** 2, axis=0)
         lags = frame.channel.window.size
         batch.noise[i] = frame.channel.noise
         batch.residual[i] = frame.channel.noise * np.eye(batch.channel.shape[1])
@@ -147,7 +148,7 @@ class DispersiveReception:
         Clock first: it moves the instants. Then phase, then the channel's least squares.
         """
         plan, periods = self.plan, self.plan.amplitude.size
-        vectors = plan.vectors(frame.words[plan.payload])
+        vectors = plan.vectors(frame.words)
         turned = self._sampled(batch, i) * np.exp(-1j * frame.phase)[:, None]
         rows = np.arange(WIDEST.last, max(periods + WIDEST.first, WIDEST.last + 1))
         rows = rows[rows < periods]
@@ -216,25 +217,6 @@ class DispersiveReception:
         # Start and channel cannot be told apart: how late the first symbol is has no error of
         # its own.
         batch.timing_var[i] = np.nan
-
-    def _decide(self, frame: _Frame) -> None:
-        """Words of each part, together with some around it that are decided with their own."""
-        plan, periods = self.plan, self.plan.amplitude.size
-        before = plan.vectors(frame.words[plan.payload])
-        words = np.full(periods, -1, np.int64)
-        for begin, end, channel in frame.parts:
-            window = channel.window
-            margin = 2 * window.memory + 8
-            run = np.arange(max(begin - margin, 0), min(end + margin, periods))
-            amplitude = plan.amplitude[run]
-            around = before.copy()
-            around[run] = plan.known[run]
-            left = frame.received - convolved(around, channel.taps, window)
-            arguments = (channel.taps, window, frame.channel.noise, amplitude, None)
-            found = self.detect(left[run], *arguments)
-            inside = (run >= begin) & (run < end)
-            words[run[inside]] = found[inside]
-        frame.words = words
 
 
 def _identified(widest: Window, memory: int | None, rows: int) -> list[Window]:

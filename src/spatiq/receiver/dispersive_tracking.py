@@ -27,13 +27,21 @@ RunDetector = Callable[
 
 
 @dataclass
-class _Carrier:
+class CarrierTrack:
     """Phase (radians) and carrier (radians per period) at a period, and their covariance."""
 
     at: float
     state: NDArray[np.float64]
     covariance: NDArray[np.float64]
     walk: float
+
+    @classmethod
+    def begin(cls, fit: KnownSymbolFit, plan: DispersivePlan, walk: float) -> CarrierTrack:
+        """As the known symbols leave it; walk: variance of the phase's walk per period."""
+        energy = float(np.sum(np.abs(fit.channel.taps) ** 2)) * plan.rows.size
+        noise = fit.channel.noise
+        start = np.diag([noise / max(2 * energy, noise * 1e-6), fit.variance])
+        return cls(plan.centre, np.zeros(2), start, walk)
 
     def advance(self, to: float) -> None:
         """Predict."""
@@ -87,9 +95,7 @@ def track_frame(
     """
     channel, periods = fit.channel, plan.amplitude.size
     window, noise = channel.window, channel.noise
-    energy = float(np.sum(np.abs(channel.taps) ** 2)) * plan.rows.size
-    start = np.diag([noise / max(2 * energy, noise * 1e-6), fit.variance])
-    carrier = _Carrier(plan.centre, np.zeros(2), start, walk)
+    carrier = CarrierTrack.begin(fit, plan, walk)
     words = np.full(periods, -1, np.int64)
     phase = carrier.phases(np.arange(periods))
     vectors = plan.known.copy()

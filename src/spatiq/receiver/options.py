@@ -11,7 +11,7 @@ from spatiq.errors import InputError
 SOFT_OUTPUTS = ("none", "exact", "max-log")
 # Of symbols that reach into their neighbours: see receiver/dispersive_chain.py.
 CHANNELS = ("flat", "dispersive")
-EQUALISERS = ("sequence", "mmse")
+EQUALISERS = ("auto", "sequence", "mmse")
 LARGEST_MEMORY = 12
 
 
@@ -35,7 +35,8 @@ class ReceiverOptions:
         memory: on a dispersive channel, how many earlier symbols a received vector depends on;
             None: chosen by frame.
         equaliser: on a dispersive channel, "sequence" decides whole sequences, "mmse" equalises
-            linearly and decides word by word.
+            linearly and decides word by word; "auto": "mmse" where blocks have a cyclic prefix,
+            else "sequence". Subcarriers are always decided one by one.
         survivors: sequences kept by the sequence detector from one symbol period to the next.
         block_size: samples read at a time; never changes a figure.
     """
@@ -52,7 +53,7 @@ class ReceiverOptions:
     soft_output: str = "none"
     channel: str = "flat"
     memory: int | None = None
-    equaliser: str = "sequence"
+    equaliser: str = "auto"
     survivors: int = 64
 
     def __post_init__(self) -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from spatiq.link.blocks import fill_blocks
 from spatiq.link.description import Link
 
 
@@ -38,6 +39,7 @@ def vectors_of_words(link: Link, words: NDArray[np.int64]) -> NDArray[np.complex
     frames = np.repeat(layout.known[None], len(words), axis=0)
     amplitude = layout.payload_amplitude[:, None]
     frames[:, layout.payload_index] = link.codebook.vectors[link.carried(words)] * amplitude
+    fill_blocks(frames, layout.blocks)
     return frames
 
 
