@@ -110,6 +110,7 @@ class BlockDecider:
         periods = plan.amplitude.size
         track = CarrierTrack.begin(fit, plan, self.walk)
         words = np.full(plan.payload.size, -1, np.int64)
+        known = self._known(channel)
         phase = track.phases(np.arange(periods))
         for block in self._blocks():
             body = block.body
@@ -118,7 +119,7 @@ class BlockDecider:
                 ahead = np.arange(max(body + channel.window.first, 0), periods)
                 phase[ahead] = track.phases(ahead)
             turned = received * np.exp(-1j * phase)[:, None]
-            words[block.slots] = self._words(turned, channel, block)
+            words[block.slots] = self._words(turned - known, channel, block)
             if body > plan.rows[0]:
                 seen = np.arange(body, body + block.run.length)
                 reference = convolved(plan.vectors(words), channel.taps, channel.window)
@@ -133,14 +134,19 @@ class BlockDecider:
         """Every block with the channel of the part in which its words begin."""
         found = words.copy()
         begins = np.array([begin for begin, _, _ in parts])
+        left = [received - self._known(channel) for _, _, channel in parts]
         for block in self._blocks():
             first = self.plan.payload[block.slots[0]]
             part = max(int(np.searchsorted(begins, first, "right")) - 1, 0)
-            found[block.slots] = self._words(received, parts[part][2], block)
+            found[block.slots] = self._words(left[part], parts[part][2], block)
         return found
 
-    def _words(self, received: Complex, channel: FirChannel, block: _Block) -> NDArray[np.int64]:
-        return self.detect(received, channel, block.run, block.body, block.amplitude)
+    def _words(self, left: Complex, channel: FirChannel, block: _Block) -> NDArray[np.int64]:
+        return self.detect(left, channel, block.run, block.body, block.amplitude)
+
+    def _known(self, channel: FirChannel) -> Complex:
+        """What known symbols send: ahead of the first block there may be no guard against them."""
+        return convolved(self.plan.known, channel.taps, channel.window)
 
     def _blocks(self) -> Iterator[_Block]:
         """Every block, in order."""
