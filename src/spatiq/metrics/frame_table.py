@@ -128,6 +128,8 @@ class MeasuredFrames:
             if none.
         antenna_power: float64, shape (F, Nt); ||h_a||^2 / Nr.
         lost: frames found to be lost before or between these.
+        subcarriers: float64, shape (F, N, 5); sums of each subcarrier, see
+            `spatiq.metrics.subcarriers.SUMS`; None without subcarriers.
         paths: figures of each receive channel and each antenna's path.
         symbols: complex64, shape (F, Kp, Nr); received payload vectors, carrier removed; or None.
         white_channel, white_noise: channel (F, Nr, Nt) and N0 (F,) after whitening, as detected
@@ -155,6 +157,7 @@ class MeasuredFrames:
     antenna_error_energy: NDArray[np.float64] | None = None
     antenna_reference_energy: NDArray[np.float64] | None = None
     llr: NDArray[np.float32] | None = None
+    subcarriers: NDArray[np.float64] | None = None
     paths: PathFigures | None = None
     lost: list[LostFrame] = field(default_factory=list)
 

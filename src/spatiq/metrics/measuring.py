@@ -18,6 +18,7 @@ from spatiq.metrics.measuring_kernels import compare_words, count_bits, error_ve
 from spatiq.metrics.path_figures import path_figures
 from spatiq.metrics.reference_following import Numberer, Numbering, ReferenceFollower
 from spatiq.metrics.skipped_frames import SkippedFrames, places_in_stream
+from spatiq.metrics.subcarriers import subcarrier_sums
 from spatiq.receiver.chain import Progress, Stage, receive
 from spatiq.receiver.exhaustive_search import nearest_vectors
 from spatiq.receiver.frame_batch import FrameBatch, channel_runs
@@ -149,6 +150,7 @@ class Measuring:
             words_decided=batch.words,
             words_sent=sent,
             llr=batch.llr,
+            subcarriers=subcarrier_sums(batch, self.link, sent),
             paths=path_figures(batch, seen, self.link, self.recording.sample_rate),
         )
 

@@ -14,6 +14,7 @@ from spatiq.metrics.frame_table import Mark, MeasuredFrames
 from spatiq.metrics.intervals import clopper_pearson
 from spatiq.metrics.loss import pooled_loss
 from spatiq.metrics.path_summary import NO_DELAY, PathSummary
+from spatiq.metrics.subcarriers import SubcarrierSummary
 from spatiq.receiver.moving_channel import Following
 
 _KEPT_FRAMES = 64  # channels kept for the implementation loss, spread over the recording
@@ -92,6 +93,7 @@ class Summary:
     _kept: list[tuple[int, Any]] = field(default_factory=list)
     _stride: int = 1
     _paths: PathSummary = field(default_factory=PathSummary)
+    _subcarriers: SubcarrierSummary = field(default_factory=SubcarrierSummary)
 
     def __post_init__(self) -> None:
         """Start all sums at nothing."""
@@ -129,6 +131,8 @@ class Summary:
         self._aided += int(columns["evm_data_aided"].sum())
         self._confusion += measured.confusion.sum(axis=0)
         self._add_antennas(measured)
+        if measured.subcarriers is not None:
+            self._subcarriers.add(measured.subcarriers)
         if measured.paths is not None:
             used = int(np.count_nonzero(np.any(self.link.codebook.vectors != 0, axis=0)))
             self._paths.add(measured.paths, used)
@@ -202,6 +206,7 @@ class Summary:
             "evm": self._evm("evm"),
             "equalised_evm": self._evm("equalised"),
             "antennas": self._antennas(),
+            "subcarriers": self._subcarriers.as_dicts(),
             "receive_channels": self._paths.receive_channels(),
             **{name: spread.as_dict() for name, spread in self._spreads.items()},
             "channel_models": {name: n for name, n in self.channel_models.items() if n},

@@ -66,7 +66,10 @@ class BlockDetector:
                 for f in run.slots
             ]
             return np.array(words, np.int64)
-        estimate, error = self.estimates(spectrum, responses, channel.noise)
+        # Folding adds the noise of the tail to that of the beginning: on average so much more.
+        folded = 0 if run.has_prefix else channel.window.memory
+        noise = channel.noise * (1 + folded / run.length)
+        estimate, error = self.estimates(spectrum, responses, noise)
         used = self._used
         flat, seen = as_flat_channel(estimate, error, word_moments(self.codebook.vectors[:, used]))
         whole = np.zeros((used.size, self.codebook.antennas), np.complex128)

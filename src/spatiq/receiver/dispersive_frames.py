@@ -29,6 +29,24 @@ class DispersiveFrames:
     window: Window
     decided: NDArray[np.int64]
 
+    def unexplained(self, i: int, words: NDArray[np.int64]) -> Complex:
+        """What words (Kp,) leave of frame i, at each word's place, over its amplitude: (Kp, Nr)."""
+        plan = self.plan
+        expected = convolved(plan.vectors(words), self.taps[i], self.window)
+        left = np.asarray(self.received[i] - expected, np.complex128)
+        return plan.at_words(left) / plan.amplitude[plan.payload, None]
+
+    def channels_of_words(self, i: int) -> Complex:
+        """Channel of frame i at each word's subcarrier, (Kp, Nr, Nt).
+
+        Raises:
+            ValueError: words that take no subcarriers.
+        """
+        found = self.plan.channels_of_words(self.taps[i], self.window)
+        if found is None:
+            raise ValueError("words take no subcarriers")
+        return found
+
     def symbols(self, i: int, words: NDArray[np.int64], channel: Complex) -> NDArray[np.complex64]:
         """Payload vectors of frame i as a flat channel would have given them, (Kp, Nr).
 
@@ -38,9 +56,7 @@ class DispersiveFrames:
         """
         plan = self.plan
         words = np.where(words < 0, self.decided[i], words)
-        expected = convolved(plan.vectors(words), self.taps[i], self.window)
-        left = np.asarray(self.received[i] - expected, np.complex128)
-        scaled = plan.at_words(left) / plan.amplitude[plan.payload, None]
+        scaled = self.unexplained(i, words)
         flat = scaled + plan.codebook.vectors[words] @ channel.T
         return np.asarray(flat, np.complex64)
 

@@ -80,7 +80,7 @@ class RunDecider:
 
 @dataclass(frozen=True, eq=False)
 class _Block:
-    """A block: section, first period of its body, its words' places in the payload, their factor."""
+    """A block: section, first period of its body, its words' places in the payload, factor."""
 
     run: BlockRun
     body: int

@@ -134,6 +134,7 @@ def _signal(summary: dict[str, Any]) -> Iterator[Line]:
     evm = summary.get("evm")
     yield _evm_line("EVM rms", evm, _evm_basis(evm, pick(summary, "frames", "found")))
     yield _evm_line("EVM rms, equalised", summary.get("equalised_evm"), "")
+    yield from _subcarriers(summary.get("subcarriers"))
     snr = summary.get("snr_db")
     yield _spread_line("SNR", snr, "dB")
     cfo = _spread_line("carrier offset", summary.get("cfo_hz"), "Hz")
@@ -141,6 +142,17 @@ def _signal(summary: dict[str, Any]) -> Iterator[Line]:
     yield (*cfo[:3], "" if ppm is None else number(ppm, "ppm of the carrier"))
     yield _spread_line("clock offset", summary.get("clock_ppm"), "ppm")
     yield from _motion(summary)
+
+
+def _subcarriers(rows: Any) -> Iterator[Line]:
+    """Where on a multicarrier link it is good and where it is not."""
+    if not rows:
+        return
+    worst = max(rows, key=lambda row: float(row["evm_percent"]))
+    best = min(float(row["evm_percent"]) for row in rows)
+    span = interval(best, float(worst["evm_percent"]), "%")
+    note = f"worst: subcarrier {worst['subcarrier']}, at {fixed(worst['power_db'], 'dB')} of power"
+    yield f"  of {len(rows)} subcarriers", "", span, note
 
 
 def _motion(summary: dict[str, Any]) -> Iterator[Line]:
