@@ -74,4 +74,4 @@ def test_types_and_shapes_are_as_documented(tmp_path):
                 shape = tuple(sizes[axis] for axis in entry[3].split(", "))
                 assert (dataset.dtype.str[1:], dataset.shape) == (entry[2], shape)
                 checked += 1
-    assert checked == 22
+    assert checked == 29

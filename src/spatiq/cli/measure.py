@@ -53,6 +53,13 @@ _Detector = Annotated[
 _Confidence = Annotated[float, typer.Option(help="Level of all intervals.")]
 _Clock = Annotated[float, typer.Option(help="Symbol clock offsets expected, +- ppm.")]
 _PhaseNoise = Annotated[float, typer.Option(help="Linewidth of phase noise to track, Hz.")]
+_Spectrum = Annotated[
+    str,
+    typer.Option(
+        metavar="auto|normal|inverted",
+        help="Whether samples are conjugated; auto: when the frames say so.",
+    ),
+]
 _TwoStep = Annotated[
     bool, typer.Option("--two-step/--no-two-step", help="Compare with the two-step detector.")
 ]
@@ -121,6 +128,7 @@ def measure_command(
     confidence: _Confidence = _DEFAULTS.confidence,
     max_clock_ppm: _Clock = _DEFAULTS.max_clock_ppm,
     phase_noise_hz: _PhaseNoise = _DEFAULTS.phase_noise_hz,
+    spectrum: _Spectrum = _DEFAULTS.spectrum,
     two_step: _TwoStep = _DEFAULTS.compare_two_step,
     channel: _Channel = _DEFAULTS.channel,
     memory: _Memory = _DEFAULTS.memory,
@@ -151,6 +159,7 @@ def measure_command(
         memory=memory,
         equaliser=equaliser,
         survivors=survivors,
+        spectrum=spectrum,
     )
     request = MeasureRequest(
         recording=recording,

@@ -64,6 +64,11 @@ class PayloadFormat:
         return sum(s.width for s in self.fields if s.type == "data")
 
     @property
+    def check_width(self) -> int:
+        """Bits per frame that are checks over others."""
+        return sum(s.width for s in self.fields if isinstance(s.source, CrcSource))
+
+    @property
     def has_reference(self) -> bool:
         """True when the receiver can count bit errors."""
         return bool(self.known_mask.any())

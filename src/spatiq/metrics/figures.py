@@ -15,6 +15,7 @@ from spatiq.metrics.intervals import clopper_pearson
 from spatiq.metrics.loss import local_loss
 from spatiq.metrics.moving_figures import fill_motion, predict_moved
 from spatiq.metrics.prediction import predict_ber
+from spatiq.metrics.receive_channels import fill_front_end
 from spatiq.metrics.reference_following import Numbering
 from spatiq.receiver.frame_batch import ANTENNAS_ALIGNED, RECEIVE_ALIGNED, FrameBatch
 from spatiq.receiver.options import ReceiverOptions
@@ -75,7 +76,10 @@ def fill_figures(
         _ratios(columns, options.confidence)
         if white.dispersive is None:  # else no bound of a single word holds: missing
             _prediction(columns, white, link)
+        inverted = options.spectrum == "inverted"
+        front_end = fill_front_end(columns, batch, recording.sample_rate, inverted)
     _marks(columns, batch, numbering, link)
+    columns["marks"] |= front_end
 
 
 def _synchronisation(columns: Columns, batch: FrameBatch, link: Link, recording: Recording) -> None:

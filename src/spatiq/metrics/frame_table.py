@@ -29,6 +29,11 @@ class Mark(IntFlag):
     ECHOES = 1024  # symbols reach into their neighbours on a channel taken for flat
     RECEIVE_DELAYS = 4096  # receive channels differ in delay: taken out
     ANTENNA_DELAYS = 8192  # transmit antennas differ in delay: taken into account
+    IQ_CORRECTED = 256  # gain or phase of I and Q differed in a receive channel: set right
+    DC_CORRECTED = 512  # a constant offset besides that of the whole recording: taken out
+    INTERFERER = 32  # a narrow-band interferer: taken out
+    ERRORS_CORRELATED = 2048  # errors are correlated in time: coloured noise, or an echo
+    SPECTRUM_INVERTED = 16384  # samples were conjugated before they were received
 
 
 @dataclass(frozen=True)
@@ -69,6 +74,11 @@ COLUMNS: tuple[Column, ...] = (
     Column("noise_power", "f8", "", "N0, per complex component after the matched filter"),
     Column("snr_db", "f8", "dB", "signal_power over noise_power"),
     Column("snr_std_db", "f8", "dB", "its standard deviation"),
+    Column("image_rejection_db", "f8", "dB", "signal over its image, of the worst receive channel"),
+    Column("dc_db", "f8", "dB", "largest DC offset of a receive channel, over the signal's power"),
+    Column("interferer_hz", "f8", "Hz", "strongest narrow-band interferer; missing: none"),
+    Column("interferer_db", "f8", "dB", "its power, mean over receive channels, over the signal's"),
+    Column("error_correlation", "f8", "", "largest correlation of errors 1 to 3 periods apart"),
     Column("clipped_samples", "i8", "samples", "samples at full scale inside the frame"),
     Column("crc_ok", "i1", "", "1 passed, 0 failed, -1 no CRC in the link"),
     Column("bits_compared", "i8", "bits", "payload bits with a known value"),
@@ -115,6 +125,29 @@ COLUMNS: tuple[Column, ...] = (
 COLUMN_NAMES = tuple(c.name for c in COLUMNS)
 
 
+@dataclass(frozen=True, eq=False)
+class ReceiveFigures:
+    """Each receive channel's front end in F frames, all of shape (F, Nr); NaN: cannot be told.
+
+    Attributes:
+        image, image_var: complex coefficient c of the image, samples s + c conj(s); its variance.
+        constant, constant_var: DC offset in the samples' scale; its variance.
+        iq_gain_db, iq_gain_std_db: gain of Q over I, and its standard deviation.
+        iq_phase_deg, iq_phase_std_deg: departure from quadrature, and its standard deviation.
+        sample_power: (F,); mean power of the signal in a sample while payload is sent.
+    """
+
+    image: NDArray[np.complex128]
+    image_var: NDArray[np.float64]
+    constant: NDArray[np.complex128]
+    constant_var: NDArray[np.float64]
+    iq_gain_db: NDArray[np.float64]
+    iq_gain_std_db: NDArray[np.float64]
+    iq_phase_deg: NDArray[np.float64]
+    iq_phase_std_deg: NDArray[np.float64]
+    sample_power: NDArray[np.float64]
+
+
 @dataclass
 class MeasuredFrames:
     """A batch of F measured frames.
@@ -141,6 +174,7 @@ class MeasuredFrames:
         words_sent: int64, shape (F, Kw); -1 where unknown.
         llr: float32, shape (F, Kw * b); log-likelihood ratios of the bits as sent (scrambled, where
             the link scrambles), positive when 0 is likelier; or None.
+        receive: the front end of each receive channel; None when no stage looked at it.
     """
 
     columns: dict[str, NDArray[Any]]
@@ -159,6 +193,7 @@ class MeasuredFrames:
     llr: NDArray[np.float32] | None = None
     subcarriers: NDArray[np.float64] | None = None
     paths: PathFigures | None = None
+    receive: ReceiveFigures | None = None
     lost: list[LostFrame] = field(default_factory=list)
 
     @property

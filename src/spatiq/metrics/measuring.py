@@ -6,7 +6,7 @@ receive -> unpacking (words -> bits -> fields) -> frame numbers -> comparison ->
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,8 +16,10 @@ from spatiq.metrics.figures import as_received, channel_error_variance, fill_fig
 from spatiq.metrics.frame_table import MeasuredFrames, empty_columns
 from spatiq.metrics.measuring_kernels import compare_words, count_bits, error_vectors
 from spatiq.metrics.path_figures import path_figures
+from spatiq.metrics.receive_channels import receive_figures
 from spatiq.metrics.reference_following import Numberer, Numbering, ReferenceFollower
 from spatiq.metrics.skipped_frames import SkippedFrames, places_in_stream
+from spatiq.metrics.spectrum import look_both_ways
 from spatiq.metrics.subcarriers import subcarrier_sums
 from spatiq.receiver.chain import Progress, Stage, receive
 from spatiq.receiver.exhaustive_search import nearest_vectors
@@ -48,9 +50,17 @@ def measure(
         InputError: when the link cannot be received from this recording.
     """
     options = options or ReceiverOptions()
-    measuring = Measuring(recording, link, options)
-    for batch in receive(recording, link, options, stages=stages, progress=progress):
-        yield measuring(batch)
+
+    def look(spectrum: str) -> Iterator[MeasuredFrames]:
+        chosen = replace(options, spectrum=spectrum)
+        measuring = Measuring(recording, link, chosen)
+        for batch in receive(recording, link, chosen, stages=stages, progress=progress):
+            yield measuring(batch)
+
+    if options.spectrum == "auto" and stages is None:
+        yield from look_both_ways(look, link)
+    else:
+        yield from look(options.spectrum)
 
 
 def shortest_distance(recording: Recording, link: Link) -> float:
@@ -152,6 +162,7 @@ class Measuring:
             llr=batch.llr,
             subcarriers=subcarrier_sums(batch, self.link, sent),
             paths=path_figures(batch, seen, self.link, self.recording.sample_rate),
+            receive=receive_figures(batch, columns["signal_power"]),
         )
 
     def _reference(self, numbering: Numbering) -> NDArray[np.uint8]:

@@ -14,11 +14,21 @@ from spatiq.metrics.frame_table import Mark, MeasuredFrames
 from spatiq.metrics.intervals import clopper_pearson
 from spatiq.metrics.loss import pooled_loss
 from spatiq.metrics.path_summary import NO_DELAY, PathSummary
+from spatiq.metrics.receive_channels import ReceivePool
 from spatiq.metrics.subcarriers import SubcarrierSummary
 from spatiq.receiver.moving_channel import Following
 
 _KEPT_FRAMES = 64  # channels kept for the implementation loss, spread over the recording
-_SPREAD = ("cfo_hz", "cfo_ppm", "clock_ppm", "snr_db", "doppler_spread_hz", "linewidth_hz")
+_SPREAD = (
+    "cfo_hz",
+    "cfo_ppm",
+    "clock_ppm",
+    "snr_db",
+    "doppler_spread_hz",
+    "linewidth_hz",
+    "interferer_hz",
+    "interferer_db",
+)
 _COUNTS = (
     "bits_compared",
     "bit_errors",
@@ -94,6 +104,7 @@ class Summary:
     _stride: int = 1
     _paths: PathSummary = field(default_factory=PathSummary)
     _subcarriers: SubcarrierSummary = field(default_factory=SubcarrierSummary)
+    _receive: ReceivePool = field(default_factory=ReceivePool)
 
     def __post_init__(self) -> None:
         """Start all sums at nothing."""
@@ -130,6 +141,7 @@ class Summary:
         self._two_step[1] += int(columns["bits_compared"][run].sum())
         self._aided += int(columns["evm_data_aided"].sum())
         self._confusion += measured.confusion.sum(axis=0)
+        self._receive.add(measured)
         self._add_antennas(measured)
         if measured.subcarriers is not None:
             self._subcarriers.add(measured.subcarriers)
@@ -208,6 +220,8 @@ class Summary:
             "antennas": self._antennas(),
             "subcarriers": self._subcarriers.as_dicts(),
             "receive_channels": self._paths.receive_channels(),
+            "front_end": self._receive.as_list(self.confidence),
+            "spectrum": self._spectrum(),
             **{name: spread.as_dict() for name, spread in self._spreads.items()},
             "channel_models": {name: n for name, n in self.channel_models.items() if n},
             "crc": {"passed": passed, "failed": failed} if passed + failed else None,
@@ -228,6 +242,13 @@ class Summary:
             "compared": int(trials),
             "is_upper_bound": errors == 0,
         }
+
+    def _spectrum(self) -> str | None:
+        """As it was received; unknown without frames."""
+        if not self.frames:
+            return None
+        inverted = self.marks[Mark.SPECTRUM_INVERTED.name or ""] == self.frames
+        return "inverted" if inverted else "normal"
 
     def _prediction(self, i: int) -> float | None:
         total, weight = self._predicted[i]

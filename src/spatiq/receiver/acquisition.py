@@ -75,6 +75,7 @@ class Acquisition:
             origin = batch.t0[i] + tables.header_centroid * batch.step[i]
             derotate(batch.planes[i], residual, origin)
             batch.carrier[i] += residual
+            batch.turns[i] += residual * origin
             if self.locked_carrier is not None:
                 sps = self.bank.samples_per_symbol
                 offset_hz = batch.carrier[i] * sps * self.symbol_rate

@@ -28,6 +28,10 @@ from spatiq.receiver.edge_frames import EdgeFrames
 from spatiq.receiver.frame_batch import FrameBatch, LostFrame
 from spatiq.receiver.frame_search import SyncPattern, sync_pattern
 from spatiq.receiver.framing import Framing
+from spatiq.receiver.front_end import FrontEnd
+from spatiq.receiver.front_end_figures import expected_correlation
+from spatiq.receiver.front_end_survey import LITTLE_CARRIER, Survey, line_share, survey_recording
+from spatiq.receiver.interferer import Interferer
 from spatiq.receiver.link_tables import LinkTables, link_tables
 from spatiq.receiver.matched_filter import FilterBank, filter_bank
 from spatiq.receiver.options import ReceiverOptions
@@ -36,6 +40,7 @@ from spatiq.receiver.soft_output import SoftOutput, check_soft_output
 from spatiq.receiver.stretches import Stretch
 from spatiq.receiver.tracking import Tracking
 from spatiq.receiver.whitening import Whitening
+from spatiq.recording.placement import Segment
 from spatiq.recording.recording import Recording
 
 Stage = Callable[[FrameBatch], FrameBatch]
@@ -85,6 +90,8 @@ class ChainParts:
     bank: FilterBank
     tables: LinkTables
     pattern: SyncPattern
+    survey: Survey
+    segments: tuple[Segment, ...]
 
 
 def chain_parts(recording: Recording, link: Link, options: ReceiverOptions) -> ChainParts:
@@ -108,6 +115,8 @@ def chain_parts(recording: Recording, link: Link, options: ReceiverOptions) -> C
         bank=filter_bank(link.pulse, samples_per_symbol),
         tables=link_tables(link),
         pattern=sync_pattern(link, options, recording.channels),
+        survey=survey_recording(recording, link, options.cfo_range / samples_per_symbol),
+        segments=recording.segments,
     )
 
 
@@ -131,14 +140,22 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     rounds = 2 if link.codebook.block == 1 else 4
     refit = Refit(parts.bank, parts.tables, clock_std, walk, rounds)
     following = channel_following(refit, link.layout.payload_index.size)
+    expected = expected_correlation(link.pulse, parts.bank.samples_per_symbol)
+    constant, lines = parts.survey.constant, parts.survey.lines
+    if options.spectrum == "inverted":
+        constant, lines = constant.conj(), tuple(-f for f in lines)
     reception: list[Stage] = [
         acquisition,
         Tracking(parts.bank, parts.tables, clock_std, walk),
         refit,
     ]
+    front_end = FrontEnd(refit, constant, expected)
+    searched = line_share(link) < LITTLE_CARRIER
     check_detector_applies(options.detector, link.codebook)
     stages: list[Stage] = [
         *reception,
+        front_end,
+        Interferer(refit, front_end, lines, searched, parts.segments, expected),
         Alignment(refit, reception),
         following,
         Whitening(following),
@@ -185,7 +202,15 @@ def receive(
     chosen = list(stages) if stages is not None else standard_stages(link, options, parts)
     report = _Report(progress, recording.n_samples)
     framing = Framing(
-        recording, link, options, parts.bank, parts.tables, parts.pattern, report.read, stretch
+        recording,
+        link,
+        options,
+        parts.bank,
+        parts.tables,
+        parts.pattern,
+        report.read,
+        stretch,
+        parts.survey,
     )
     report.tell()
     edges = _edge_frames(recording, link, parts)

@@ -9,6 +9,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.receiver.dispersive_frames import DispersiveFrames
+from spatiq.receiver.front_end_figures import FrontEndFigures, FrontEndSums
+from spatiq.receiver.front_end_survey import MOST_LINES
 from spatiq.receiver.moving_channel import MovingChannel
 
 
@@ -42,6 +44,11 @@ class FrameBatch:
         t0: float64 (F,); centre of symbol 0 within the window, samples.
         step: float64 (F,); samples per symbol as received.
         carrier: float64 (F,); carrier offset removed from `planes` so far, cycles per sample.
+        turns: float64 (F,); what was removed is exp(2 pi j (carrier n - turns)), n in the window.
+        line_frequency: float64 (F, MOST_LINES); interfering lines, cycles per sample as received;
+            NaN where there are none.
+        line_power: float64 (F, MOST_LINES, Nr); their power.
+        corrected: uint8 (F,); what of the front end was set right, see `front_end`.
         lost: frames known to be lost before the last of these.
         final: True for the recording's last batch, which may be empty.
 
@@ -72,6 +79,9 @@ class FrameBatch:
         acquired_timing: float64 (F, 2); t0 and step as acquisition left them.
         acquired_channel: complex128 (F, Nr, Nt); the same of the channel.
 
+        front_end_sums: what the front end's figures are estimated from, while it holds.
+        front_end: image and constant offset of each receive channel, and the noise's correlation.
+
     Filled by symbol sampling and detection:
         symbols: complex64 (F, Kp, Nr); payload vectors, carrier phase removed.
         words: int64 (F, Kw); decided words.
@@ -92,6 +102,10 @@ class FrameBatch:
     t0: NDArray[np.float64]
     step: NDArray[np.float64]
     carrier: NDArray[np.float64]
+    turns: NDArray[np.float64]
+    line_frequency: NDArray[np.float64]
+    line_power: NDArray[np.float64]
+    corrected: NDArray[np.uint8]
     carrier_estimate: NDArray[np.float64]
     channel: NDArray[np.complex128]
     noise: NDArray[np.float64]
@@ -124,6 +138,8 @@ class FrameBatch:
     echoes: NDArray[np.bool_] | None = None
     dispersive: DispersiveFrames | None = None
     moving: list[MovingChannel | None] = field(default_factory=list)
+    front_end_sums: FrontEndSums | None = None
+    front_end: FrontEndFigures | None = None
     lost: list[LostFrame] = field(default_factory=list)
     final: bool = False
 
@@ -159,6 +175,10 @@ def empty_batch(
         t0=np.zeros(count),
         step=np.zeros(count),
         carrier=np.zeros(count),
+        turns=np.zeros(count),
+        line_frequency=np.full((count, MOST_LINES), np.nan),
+        line_power=np.full((count, MOST_LINES, channels), np.nan),
+        corrected=np.zeros(count, np.uint8),
         carrier_estimate=np.zeros(count),
         channel=np.zeros((count, channels, antennas), np.complex128),
         noise=np.zeros(count),

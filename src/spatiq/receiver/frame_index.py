@@ -162,6 +162,7 @@ class FrameIndexer:
             parts.pattern,
             on_read,
             stretch,
+            parts.survey,
         ).search()
         return PieceIndex(tuple(stretch.finds), stretch.end, stretch.tails)
 

@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.link.description import Link
+from spatiq.receiver.cleaning import Cleaning
 from spatiq.receiver.expected_frames import FoundStart, lost_between
 from spatiq.receiver.frame_batch import (
     NOT_FINITE,
@@ -31,6 +32,7 @@ from spatiq.receiver.frame_search import (
     first_needed,
 )
 from spatiq.receiver.framing_kernels import cut_window
+from spatiq.receiver.front_end_survey import Survey
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank, derotate
 from spatiq.receiver.options import ReceiverOptions
@@ -106,6 +108,7 @@ class Framing:
         pattern: SyncPattern,
         on_read: Callable[[int], None] | None = None,
         stretch: Stretch | None = None,
+        survey: Survey | None = None,
     ) -> None:
         self._recording = recording
         self._on_read = on_read
@@ -117,6 +120,8 @@ class Framing:
         self._pattern = pattern
         self._geometry = frame_geometry(link, bank, options)
         self._clip = clip_levels(recording)
+        survey = survey or Survey(np.zeros(recording.channels, np.complex128))
+        self._cleaning = Cleaning(survey, self._clip, options.spectrum == "inverted")
         self._spoiled = SpoiledSamples(2 * bank.half)
         frame_bytes = recording.channels * 2 * self._geometry.window * 4
         self._batch_size = max(1, min(_BATCH_FRAMES, _BATCH_BYTES // frame_bytes))
@@ -226,8 +231,11 @@ class Framing:
 
     def _stream(self, segment: Segment, begin: int) -> SampleStream:
         """Samples of a segment, read from `begin` on."""
-        blocks = self._recording.blocks(self._options.block_size, begin, segment.stop)
-        channels = self._recording.channels
+        cleaning, channels = self._cleaning, self._recording.channels
+        begin = cleaning.begin(segment, begin)
+        size = cleaning.block_size(self._options.block_size)
+        read = self._recording.blocks(size, begin, segment.stop)
+        blocks = cleaning.blocks(read, segment, begin)
         return SampleStream(
             blocks, segment.start, segment.stop, channels, self._spoiled, self._on_read, begin
         )
@@ -280,6 +288,12 @@ class Framing:
         first = self._first_sample(start)
         inside = (int(start - first), int(start - first + self._geometry.length * sps) + 1)
         batch.clipped[i] = cut_window(samples, batch.planes[i], *self._clip, *inside)
+        if self._cleaning.active:
+            batch.clipped[i] = self._cleaning.clipped(first + inside[0], first + inside[1])
+        if self._cleaning.survey.lines:
+            lines = self._cleaning.taken(segment, first, first + samples.shape[2])
+            count = lines[0].size
+            batch.line_frequency[i, :count], batch.line_power[i, :count] = lines
         batch.first_sample[i] = first
         batch.segment[i] = segment.index
         batch.sync_metric[i] = found.metric
@@ -288,6 +302,7 @@ class Framing:
         batch.carrier[i] = self._pattern.carrier(found.carrier_bin) / sps
         origin = batch.t0[i] + self._tables.header_centroid * sps
         derotate(batch.planes[i], batch.carrier[i], origin)
+        batch.turns[i] = batch.carrier[i] * origin
 
 
 def _first_frames(batch: FrameBatch, count: int) -> FrameBatch:

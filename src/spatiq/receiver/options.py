@@ -13,6 +13,8 @@ SOFT_OUTPUTS = ("none", "exact", "max-log")
 CHANNELS = ("flat", "dispersive")
 EQUALISERS = ("auto", "sequence", "mmse")
 LARGEST_MEMORY = 12
+# Whether samples are conjugated: see metrics/spectrum.py.
+SPECTRA = ("auto", "normal", "inverted")
 
 
 @dataclass(frozen=True)
@@ -38,6 +40,10 @@ class ReceiverOptions:
             linearly and decides word by word; "auto": "mmse" where blocks have a cyclic prefix,
             else "sequence". Subcarriers are always decided one by one.
         survivors: sequences kept by the sequence detector from one symbol period to the next.
+        spectrum: "normal", "inverted" (a mixer on the wrong side of the carrier, or I and Q
+            swapped: samples are conjugated), or "auto": measuring looks at both when the first
+            frames or their absence speak against the normal one; reception by itself takes it for
+            normal.
         block_size: samples read at a time; never changes a figure.
     """
 
@@ -55,6 +61,7 @@ class ReceiverOptions:
     memory: int | None = None
     equaliser: str = "auto"
     survivors: int = 64
+    spectrum: str = "auto"
 
     def __post_init__(self) -> None:
         """Refuse values outside their range.
@@ -75,7 +82,12 @@ class ReceiverOptions:
             value = getattr(self, name)
             if not low <= value <= high:
                 raise InputError("receiver options", name, value, f"a value from {low} to {high}")
-        choices = {"soft_output": SOFT_OUTPUTS, "channel": CHANNELS, "equaliser": EQUALISERS}
+        choices = {
+            "soft_output": SOFT_OUTPUTS,
+            "spectrum": SPECTRA,
+            "channel": CHANNELS,
+            "equaliser": EQUALISERS,
+        }
         for name, accepted in choices.items():
             if getattr(self, name) not in accepted:
                 raise InputError("receiver options", name, getattr(self, name), ", ".join(accepted))

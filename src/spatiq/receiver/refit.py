@@ -16,6 +16,8 @@ from numpy.typing import NDArray
 from spatiq.kernels import C64, F32, F64
 from spatiq.receiver.alignment_kernels import delay_scores
 from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.front_end_figures import empty_sums
+from spatiq.receiver.front_end_kernels import residual_sums
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
 from spatiq.receiver.motion_kernels import motion_sums
@@ -38,7 +40,8 @@ class Refit:
     def __call__(self, batch: FrameBatch) -> FrameBatch:
         """Refine t0, step, phase, channel, noise; fill symbols, residuals, scores, variances."""
         channels, antennas = batch.channel.shape[1:]
-        room = _room(self.tables, channels, antennas)
+        room = refit_room(self.tables, channels, antennas)
+        batch.front_end_sums = empty_sums(batch.count, channels, antennas)
         for i in range(batch.count):
             self.refit_frame(batch, i, room)
         return batch
@@ -46,7 +49,7 @@ class Refit:
     def refit_frame(self, batch: FrameBatch, i: int, room: Room | None = None) -> None:
         """Refit frame i of a batch alone; `room` spares making it anew."""
         tables, bank = self.tables, self.bank
-        room = room or _room(tables, *batch.channel.shape[1:])
+        room = room or refit_room(tables, *batch.channel.shape[1:])
         sent = (
             tables.active,
             tables.active_word,
@@ -110,9 +113,24 @@ class Refit:
             batch.motion_energy[i],
             batch.motion_reference[i],
         )
+        self._sum_residuals(batch, i, room)
+
+    def _sum_residuals(self, batch: FrameBatch, i: int, room: Room) -> None:
+        """What the front end's figures of frame i are estimated from."""
+        if batch.front_end_sums is not None:
+            residual_sums(
+                room[0],
+                room[4],
+                batch.channel[i],
+                self.tables.active,
+                batch.phase[i],
+                (batch.t0[i], batch.step[i]),
+                (batch.carrier[i], batch.turns[i]),
+                batch.front_end_sums.of(i),
+            )
 
 
-def _room(tables: LinkTables, channels: int, antennas: int) -> Room:
+def refit_room(tables: LinkTables, channels: int, antennas: int) -> Room:
     """Arrays that `refit_round` works in."""
     n = tables.active.size
     return (

@@ -9,6 +9,7 @@ from __future__ import annotations
 import json
 from collections.abc import Mapping
 from contextlib import ExitStack
+from operator import attrgetter
 from pathlib import Path
 from types import TracebackType
 from typing import TYPE_CHECKING, Any
@@ -55,6 +56,17 @@ PER_ANTENNA: dict[str, str] = {
 PER_PATH: dict[str, str] = {
     name.replace("receive_", "receive/").replace("antenna_", "antennas/"): name
     for name in (*RECEIVE, *ANTENNA)
+}
+# Figures of each receive channel's front end: name in `ReceiveFigures`, unit, meaning; NaN where
+# they cannot be told.
+PER_RECEIVE: dict[str, tuple[str, str, str]] = {
+    "receive/iq_gain_db": ("iq_gain_db", "dB", "gain of Q over I"),
+    "receive/iq_gain_std_db": ("iq_gain_std_db", "dB", "its standard deviation"),
+    "receive/iq_phase_deg": ("iq_phase_deg", "degrees", "departure of I and Q from quadrature"),
+    "receive/iq_phase_std_deg": ("iq_phase_std_deg", "degrees", "its standard deviation"),
+    "receive/dc_real": ("constant.real", "", "real part of the DC offset, full scale = 1"),
+    "receive/dc_imag": ("constant.imag", "", "imaginary part of the DC offset"),
+    "receive/dc_variance": ("constant_var", "", "variance of the complex DC offset"),
 }
 LLR_SIGN = "positive: 0 is the likelier value of the bit"
 
@@ -175,6 +187,8 @@ class ResultsWriter:
         for name, figure in PER_PATH.items():
             unit, meaning = (RECEIVE | ANTENNA)[figure]
             add(name, "f8", (channels if figure in RECEIVE else antennas,), meaning, unit)
+        for name, (_, unit, meaning) in PER_RECEIVE.items():
+            add(name, "f8", (channels,), meaning, unit)
         if periods:
             for part in ("real", "imag"):
                 meaning = f"{part} part of the received payload vectors, carrier removed"
@@ -220,6 +234,10 @@ class ResultsWriter:
             else:
                 width = frames.channel.shape[1 if figure in RECEIVE else 2]
                 values[name] = np.full((frames.count, width), np.nan)
+        nothing = np.full(frames.channel.shape[:2], np.nan)
+        for name, (attribute, _, _) in PER_RECEIVE.items():
+            found = frames.receive is not None
+            values[name] = attrgetter(attribute)(frames.receive) if found else nothing
         if "symbols/real" in self._growing:
             if frames.symbols is None:
                 raise ValueError("the options keep the symbols, but this batch has none")

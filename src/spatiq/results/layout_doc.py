@@ -11,7 +11,7 @@ from pathlib import Path
 
 from spatiq.metrics.frame_table import COLUMNS, Mark
 from spatiq.metrics.path_figures import ANTENNA, RECEIVE
-from spatiq.results.hdf5 import LOST, PER_PATH
+from spatiq.results.hdf5 import LOST, PER_PATH, PER_RECEIVE
 from spatiq.results.provenance import FIELDS
 
 
@@ -32,12 +32,17 @@ def tables() -> dict[str, str]:
         [f"`{name}`", "f8", "(F, Nr)" if figure in RECEIVE else "(F, Nt)", *figures[figure]]
         for name, figure in PER_PATH.items()
     ]
+    front_end = [
+        [f"`{name.removeprefix('receive/')}`", "f8", "(F, Nr)", unit, meaning]
+        for name, (_, unit, meaning) in PER_RECEIVE.items()
+    ]
     heads = ["dataset", "type", "unit", "meaning"]
     return {
         "columns": _table(heads, columns),
         "marks": _table(["bit", "set when"], marks),
         "lost": _table(heads, lost),
         "paths": _table(["dataset", "type", "shape", "unit", "meaning"], paths),
+        "front end": _table(["dataset", "type", "shape", "unit", "meaning"], front_end),
         "provenance": _table(["dataset", "text"], [[f"`{k}`", v] for k, v in FIELDS.items()]),
     }
 

@@ -16,6 +16,7 @@ from spatiq.results.text_tables import (
     channel_table,
     confusion_table,
     frames_table,
+    receive_table,
 )
 from spatiq.results.wording import (
     DASH,
@@ -53,6 +54,7 @@ def show_results(results: Results, console: Console, *, rows: int = 20) -> None:
         ),
         ("transmit antennas", antenna_table(summary)),
         ("receive channels", channel_table(summary)),
+        ("front end of the receive channels", receive_table(summary)),
         ("frames", frames_table(results, rows)),
     ):
         if table is not None:
@@ -141,6 +143,12 @@ def _signal(summary: dict[str, Any]) -> Iterator[Line]:
     ppm = pick(summary, "cfo_ppm", "mean")
     yield (*cfo[:3], "" if ppm is None else number(ppm, "ppm of the carrier"))
     yield _spread_line("clock offset", summary.get("clock_ppm"), "ppm")
+    if summary.get("spectrum") == "inverted":
+        yield "spectrum", "inverted", "", "samples conjugated, figures are those of the link"
+    if summary.get("interferer_hz"):
+        where = _spread_line("interferer at", summary["interferer_hz"], "Hz")
+        level = number(pick(summary, "interferer_db", "mean"), "dB over the signal", digits=3)
+        yield (*where[:3], level)
     yield from _motion(summary)
 
 

@@ -122,6 +122,36 @@ def channel_table(summary: dict[str, Any]) -> Table | None:
     return table
 
 
+def receive_table(summary: dict[str, Any]) -> Table | None:
+    """Front end of each receive channel; None when nothing of it was estimated."""
+    channels = summary.get("front_end")
+    if not channels:
+        return None
+    table = _table("Q over I, dB", "off quadrature, degrees", "image rejection", "DC over signal")
+    for row in channels:
+        certain = row["image_rejection_low_db"]
+        shown = fixed(row["image_rejection_db"], "dB", decimals=1)
+        # An image within its own uncertainty is no measured figure: only that it is below.
+        if certain is not None and row["image_rejection_db"] - certain > 3:
+            shown = f"above {certain:.1f} dB"
+        table.add_row(
+            f"  {row['channel']}",
+            _with_spread(row["iq_gain_db"], row["iq_gain_std_db"]),
+            _with_spread(row["iq_phase_deg"], row["iq_phase_std_deg"]),
+            shown,
+            fixed(row["dc_db"], "dB", decimals=1),
+        )
+    return table
+
+
+def _with_spread(value: float | None, spread: float | None) -> str:
+    """Value and standard deviation, to two digits of the latter."""
+    if value is None or spread is None:
+        return DASH
+    digits = min(max(1 - math.floor(math.log10(spread)), 0), 6) if spread > 0 else 6
+    return f"{value:.{digits}f} ± {spread:.{digits}f}"
+
+
 _FRAME_HEADINGS = (
     "start, samples",
     "SNR dB",
