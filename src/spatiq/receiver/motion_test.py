@@ -3,8 +3,9 @@
 Score test (C. R. Rao, Proc. Camb. Phil. Soc. 44, 1948) on the residuals of a refit that took the
 channel for constant and the phase for a straight line: they are regressed on orthogonal polynomials
 of time, for each channel coefficient (orders 1 to 3) and for the phase common to all (orders 2 to
-5). Where nothing moved, the statistics are chi-square. Words in doubt count with their mean, so
-that at low SNR the test errs towards finding nothing. A frame in which the receiver lost its track
+5). Where nothing moved, the statistics are chi-square. Words in doubt count with their mean, which
+makes residuals scatter more than noise does: the channel's statistic must also stand out against
+what the residuals show at higher orders (F test). A frame in which the receiver lost its track
 altogether shows by payload noise above that of the known symbols.
 """
 
@@ -43,8 +44,10 @@ class MotionTest:
         """Frames that deserve a closer look, bool (F,)."""
         if not batch.count:
             return np.zeros(0, np.bool_)
-        channel, freedom = self.channel_statistic(batch)
-        moved = channel > scipy.stats.chi2.isf(CHANCE, np.maximum(freedom, 1))
+        slow, freedom, fast, rest = self.channel_statistic(batch)
+        moved = slow > scipy.stats.chi2.isf(CHANCE, np.maximum(freedom, 1))
+        limit = scipy.stats.f.isf(CHANCE, np.maximum(freedom, 1), np.maximum(rest, 1))
+        moved &= slow * rest > limit * freedom * fast
         moved |= phase_statistic(batch) > scipy.stats.chi2.isf(CHANCE, _PHASE_ORDERS - 2)
         known = 2 * max(batch.header_freedom, 1)
         payload = 2 * self.payload * batch.channel.shape[1]
@@ -54,8 +57,9 @@ class MotionTest:
 
     def channel_statistic(
         self, batch: FrameBatch
-    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        """Chi-square statistic (F,) of channel coefficients that move, and its freedom (F,)."""
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+        """Chi-square statistics (F,) of channel coefficients that move slowly, and of all that they
+        do faster than that; each with its freedom (F,)."""
         frames, parts, channels, antennas = batch.motion_scores.shape
         along = batch.motion_scores.reshape(frames, parts, channels * antennas)
         projected = _POLYNOMIALS[:, :_CHANNEL_ORDERS].T @ along
@@ -67,7 +71,14 @@ class MotionTest:
         noise = np.maximum(batch.noise, _floored(batch))
         used = np.count_nonzero(batch.motion_energy.sum(axis=1) > 0, axis=1)
         freedom = 2.0 * channels * (_CHANNEL_ORDERS - 1) * used
-        return 2.0 * np.sum(np.abs(white) ** 2, axis=(1, 2)) / noise, freedom
+        slow = 2.0 * np.sum(np.abs(white) ** 2, axis=(1, 2)) / noise
+        fast = (
+            2.0 * _scatter(batch) / noise
+            - 2.0 * np.sum(np.abs(solved) ** 2, axis=(1, 2, 3)) / noise
+        )
+        heard = np.count_nonzero(batch.motion_energy > 0, axis=(1, 2))
+        rest = np.maximum(2.0 * channels * (heard - _CHANNEL_ORDERS * used), 1.0)
+        return slow, freedom, np.maximum(fast, 0.0), rest
 
     def _uncorrelated(self, scores: NDArray[np.complex128]) -> NDArray[np.complex128]:
         """Scores (F, Nt, n) of antennas that send together, made independent."""
@@ -91,6 +102,15 @@ def phase_statistic(batch: FrameBatch) -> NDArray[np.float64]:
     white = np.linalg.solve(lower, projected)[:, 2:, 0]
     noise = np.maximum(batch.noise, _floored(batch))
     return np.asarray(np.sum(white**2, axis=1) / (noise / 2), np.float64)
+
+
+def _scatter(batch: FrameBatch) -> NDArray[np.float64]:
+    """Scatter of the parts' scores about their mean, in units of what they are worth, (F,)."""
+    energy = np.maximum(batch.motion_energy, 1e-30)[:, :, None]
+    scores = np.where(batch.motion_energy[:, :, None] > 0, batch.motion_scores, 0.0)
+    total = np.sum(np.abs(scores) ** 2 / energy, axis=(1, 2, 3))
+    whole = np.abs(scores.sum(axis=1)) ** 2 / energy.sum(axis=1)
+    return np.asarray(total - np.sum(whole, axis=(1, 2)), np.float64)
 
 
 def _floored(batch: FrameBatch) -> NDArray[np.float64]:

@@ -108,6 +108,7 @@ class Refit:
         motion_sums(
             room[0],
             room[4],
+            tables.active_word,
             batch.channel[i],
             batch.motion_scores[i],
             batch.motion_energy[i],
