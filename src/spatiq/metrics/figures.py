@@ -17,7 +17,12 @@ from spatiq.metrics.moving_figures import fill_motion, predict_moved
 from spatiq.metrics.prediction import predict_ber
 from spatiq.metrics.receive_channels import fill_front_end
 from spatiq.metrics.reference_following import Numbering
-from spatiq.receiver.frame_batch import ANTENNAS_ALIGNED, RECEIVE_ALIGNED, FrameBatch
+from spatiq.receiver.frame_batch import (
+    ANTENNAS_ALIGNED,
+    RECEIVE_ALIGNED,
+    FrameBatch,
+    MatchedFrame,
+)
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.recording.recording import Recording
 
@@ -184,6 +189,40 @@ def _prediction(columns: Columns, batch: FrameBatch, link: Link) -> None:
             predicted.ber[some],
         )
     predict_moved(columns, batch, variance, link)
+    for i, matched in batch.matched.items():
+        _predict_matched(columns, i, matched, float(batch.noise[i]), variance[i], link)
+
+
+def _predict_matched(
+    columns: Columns,
+    i: int,
+    matched: MatchedFrame,
+    noise: float,
+    variance: NDArray[np.float64],
+    link: Link,
+) -> None:
+    """Prediction of frame i whose antennas differ in delay.
+
+    Of a receiver that is told its neighbours' symbols: what delays cost beyond that is in the
+    implementation loss.
+    """
+    amplitude = float(np.sqrt(np.mean(link.layout.payload_amplitude**2)))
+    channel, level = matched.channel[None] * amplitude, np.array([noise])
+    predicted = predict_ber(channel, level, variance[None], link.codebook)
+    columns["predicted_ber"][i] = predicted.ber[0]
+    columns["predicted_ber_spatial"][i] = predicted.spatial[0]
+    columns["predicted_ber_signal"][i] = predicted.signal[0]
+    columns["implementation_loss_db"][i] = np.nan
+    if columns["bit_errors"][i] > 0:
+        columns["implementation_loss_db"][i] = local_loss(
+            channel,
+            level,
+            variance[None],
+            link.codebook,
+            columns["bit_errors"][i : i + 1],
+            columns["bits_compared"][i : i + 1],
+            predicted.ber,
+        )[0]
 
 
 def _marks(columns: Columns, batch: FrameBatch, numbering: Numbering, link: Link) -> None:

@@ -163,6 +163,8 @@ class MeasuredFrames:
         lost: frames found to be lost before or between these.
         subcarriers: float64, shape (F, N, 5); sums of each subcarrier, see
             `spatiq.metrics.subcarriers.SUMS`; None without subcarriers.
+        matched_channels: of frames whose antennas differ in delay, by index, the channel (Nd, Nt)
+            that words were decided on, see `MatchedFrame`.
         paths: figures of each receive channel and each antenna's path.
         symbols: complex64, shape (F, Kp, Nr); received payload vectors, carrier removed; or None.
         white_channel, white_noise: channel (F, Nr, Nt) and N0 (F,) after whitening, as detected
@@ -194,6 +196,7 @@ class MeasuredFrames:
     subcarriers: NDArray[np.float64] | None = None
     paths: PathFigures | None = None
     receive: ReceiveFigures | None = None
+    matched_channels: dict[int, NDArray[np.complex128]] = field(default_factory=dict)
     lost: list[LostFrame] = field(default_factory=list)
 
     @property

@@ -155,6 +155,7 @@ class Measuring:
             channel_error_variance=channel_error_variance(batch),
             white_channel=batch.channel,
             white_noise=batch.noise,
+            matched_channels={i: m.channel for i, m in batch.matched.items()},
             antenna_error_energy=sums[:, 0],
             antenna_reference_energy=sums[:, 1],
             words_decided=batch.words,

@@ -185,7 +185,8 @@ class Summary:
             noise = measured.white_noise
             if channel is None or noise is None:
                 channel, noise = measured.channel, columns["noise_power"]
-            self._kept.append((index, (channel[i], noise[i], spread)))
+            decided_on = measured.matched_channels.get(i, channel[i])
+            self._kept.append((index, (decided_on, noise[i], spread)))
             if len(self._kept) > _KEPT_FRAMES:
                 self._stride *= 2
                 self._kept = [k for k in self._kept if k[0] % self._stride == 0]
@@ -258,7 +259,11 @@ class Summary:
         errors, trials = self._sums["bit_errors"], self._sums["bits_compared"]
         if not trials or not self._kept or self._prediction(0) is None:
             return None
-        channel = np.stack([k[1][0] for k in self._kept])
+        # Rows of zeros change no distance.
+        rows = max(len(k[1][0]) for k in self._kept)
+        channel = np.stack(
+            [np.pad(k[1][0], ((0, rows - len(k[1][0])), (0, 0))) for k in self._kept]
+        )
         noise = np.array([k[1][1] for k in self._kept])
         amplitude = float(np.sqrt(np.mean(self.link.layout.payload_amplitude**2)))
         variance = np.stack([k[1][2] for k in self._kept])

@@ -7,31 +7,46 @@ A receive channel's delay is taken out of its samples (`fractional_delay`): each
 matched-filtered at its own instant, and every later stage sees channels that are in step. Delays
 that the residuals show to be large are first sought by the known symbols, and the frame received
 anew. An attempt that does not lower the noise is undone.
+
+Antennas' delays cannot be taken out of samples in which all antennas are added up. Such frames are
+received with the delays in the model (`antenna_alignment`), and words are decided on vectors from
+which the neighbours' interference has been taken (`decision_runs`).
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import Any
 
 import numpy as np
+import scipy.stats
 from numpy.typing import NDArray
 
+from spatiq.receiver.antenna_alignment import DelayedFit, DelayedReception
 from spatiq.receiver.delay_evidence import (
+    CHANCE,
     DelayEvidence,
+    channel_delays,
     delay_evidence,
     evidence_scale,
     relative,
 )
 from spatiq.receiver.fractional_delay import advanced
-from spatiq.receiver.frame_batch import RECEIVE_ALIGNED, FrameBatch
+from spatiq.receiver.frame_batch import (
+    ANTENNAS_ALIGNED,
+    RECEIVE_ALIGNED,
+    FrameBatch,
+    MatchedFrame,
+)
 from spatiq.receiver.known_delays import receive_delays
-from spatiq.receiver.refit import Refit
+from spatiq.receiver.refit import Refit, mean_slope
 
 _SMALL = 0.1  # symbol periods: beyond, residuals no longer tell a delay in proportion
 _ROUNDS = 4
-_WORTH = 1e-3  # interference over N0 below which a delay is told, not taken out
+# Interference over N0 below which delays of channels, of antennas are told, not taken out.
+_WORTH, _MUCH = 1e-3, 5e-3
 
 
 @dataclass(frozen=True, eq=False)
@@ -56,10 +71,131 @@ class Alignment:
         batch.receive_delay_var[:] = receive.variance * step**2
         batch.antenna_delay[:] = antennas.delay
         batch.antenna_delay_var[:] = antennas.variance
-        shown = receive.significant & (receive.loss > _WORTH)
-        for i in np.flatnonzero(shown | self._elsewhere(batch)):
-            self._align_channels(one_frame(batch, int(i)))
+        channels = receive.significant & (receive.loss > _WORTH) | self._elsewhere(batch)
+        shown = antennas.significant & (antennas.loss > _MUCH) | self._apart(batch)
+        for i in np.flatnonzero(channels | shown):
+            self._align(batch, int(i), bool(channels[i]))
         return batch
+
+    @cached_property
+    def _delayed(self) -> DelayedReception:
+        """Made when a frame needs it."""
+        refit = self.refit
+        return DelayedReception(refit.bank, refit.tables, refit.clock_std, refit.phase_walk)
+
+    def _align(self, batch: FrameBatch, i: int, channels: bool) -> None:
+        """Try channels' delays, antennas' delays, both, as far as each leaves something to explain.
+
+        Delays of antennas that fade differently on each channel look like channels', and the other
+        way about; what is tried last starts from either.
+        """
+        frame = one_frame(batch, i)
+        before = kept(frame)
+        if channels:
+            self._align_channels(frame)
+        # Words that span several periods are beyond the model of neighbours.
+        if self.refit.tables.codebook.block > 1 or not self._antennas_show(frame):
+            return
+        aligned = kept(frame)
+        restore(frame, before)
+        settled = self._align_antennas(batch, i)
+        if settled and noise_level(frame) < noise_level_of(aligned["residual"][0]):
+            return
+        tried = kept(frame), batch.matched.pop(i, None)
+        restore(frame, aligned)
+        if not self._align_antennas(batch, i) or noise_level(frame) > noise_level_of(
+            tried[0]["residual"][0]
+        ):
+            restore(frame, tried[0])
+            batch.matched.pop(i, None)
+            if tried[1] is not None:
+                batch.matched[i] = tried[1]
+
+    def _antennas_show(self, frame: FrameBatch) -> bool:
+        found = self._evidence(frame, 2)
+        shown = found.significant & (found.loss > _MUCH) | self._apart(frame)
+        return bool(shown[0])
+
+    def _apart(self, batch: FrameBatch) -> NDArray[np.bool_]:
+        """Frames with an antenna that its known symbols place a whole period out of step."""
+        energy = np.diag(self.refit.tables.header_gram).real[:, None]
+        limit = 0.5 * scipy.stats.chi2.isf(CHANCE, 2) * energy
+        noise = np.einsum("frr->fr", batch.residual).real[:, None, :]
+        beside = np.max(batch.lag_energy[:, :, ::2], axis=2)
+        seen = (beside > batch.lag_energy[:, :, 1]) & (beside > limit * noise) & (energy > 0)
+        return np.asarray(seen.any(axis=(1, 2)))
+
+    def _align_antennas(self, batch: FrameBatch, i: int) -> bool:
+        """Receive frame i with delayed antennas; False, and all as it was, if that does not help.
+
+        Delays of receive channels that then show are taken out as well.
+        """
+        frame = one_frame(batch, i)
+        before = kept(frame)
+        planes = frame.planes[0]
+        fit = self._delayed.receive(planes, float(frame.t0[0]), float(frame.step[0]))
+        total = np.zeros(planes.shape[0])
+        for _ in range(_ROUNDS):
+            late, variance, significant = channel_delays(fit.late, fit.late_information)
+            if not significant:
+                break
+            total += np.nan_to_num(late) * fit.step
+            planes[:] = advanced(planes, np.nan_to_num(late) * fit.step)
+            self._delayed.refit(planes, fit, 2)
+        settled = not significant
+        if total.any():
+            # Less than significant, but nearer than not at all.
+            total += np.nan_to_num(late) * fit.step
+            planes[:] = advanced(planes, np.nan_to_num(late) * fit.step)
+            self._delayed.refit(planes, fit, 2)
+            late, variance, _ = channel_delays(fit.late, fit.late_information)
+        if noise_level_of(fit.residual) >= noise_level(frame):
+            restore(frame, before)
+            return False
+        told = np.where(frame.aligned[0] & RECEIVE_ALIGNED, before["receive_delay"][0], 0.0)
+        frame.receive_delay[0], _ = relative(told + total + late * fit.step, variance)
+        frame.receive_delay_var[0] = variance * fit.step**2
+        if total.any():
+            frame.aligned[0] |= RECEIVE_ALIGNED
+        self._enter(batch, i, fit)
+        return settled
+
+    def _enter(self, batch: FrameBatch, i: int, fit: DelayedFit) -> None:
+        """Fill in frame i from the fit of its delayed antennas."""
+        used = self._delayed.used
+        decided = self._delayed.decided(batch.planes[i], fit)
+        batch.channel[i] = 0.0
+        batch.channel[i][:, used] = fit.channel
+        batch.antenna_energy[i] = 0.0
+        batch.antenna_energy[i, used] = fit.energy
+        batch.noise[i], batch.residual[i] = fit.noise, fit.residual
+        batch.t0[i], batch.step[i] = fit.t0, fit.step
+        batch.timing_var[i], batch.step_var[i] = fit.timing_var, fit.step_var
+        batch.frequency_var[i], batch.phase[i] = fit.frequency_var, fit.phase
+        rate = mean_slope(self.refit.tables.active, batch.phase[i])
+        batch.carrier_estimate[i] = batch.carrier[i] + rate / (2 * np.pi * fit.step)
+        batch.symbols[i] = decided.symbols
+        told = np.isfinite(fit.delay_var) & (fit.delay_var < 0.01)
+        delay, variance = relative(
+            np.where(told, fit.delays, np.nan), np.where(told, fit.delay_var, np.nan)
+        )
+        batch.antenna_delay[i], batch.antenna_delay_var[i] = np.nan, np.nan
+        batch.antenna_delay[i, used], batch.antenna_delay_var[i, used] = delay, variance
+        batch.aligned[i] |= ANTENNAS_ALIGNED
+        whole = np.zeros((len(decided.channel), batch.channel.shape[2]), np.complex128)
+        whole[:, used] = decided.channel
+
+        def again(changed: FrameBatch, at: int) -> None:
+            self._go_on(changed, at, fit)
+
+        batch.matched[i] = MatchedFrame(whole, decided.matched.astype(np.complex64), again)
+
+    def _go_on(self, batch: FrameBatch, i: int, fit: DelayedFit) -> None:
+        """Further rounds for a frame whose samples and channel were changed alike."""
+        fit.channel = batch.channel[i][:, self._delayed.used]
+        fit.noise = float(batch.noise[i])
+        self._delayed.refit(batch.planes[i], fit, 2)
+        self._enter(batch, i, fit)
 
     def _evidence(self, batch: FrameBatch, axis: int) -> DelayEvidence:
         channels = batch.channel.shape[1]
@@ -109,6 +245,8 @@ class Alignment:
         told, _ = relative(total + rest.delay * frame.step, rest.variance)
         frame.receive_delay[:], frame.receive_delay_var[:] = told, rest.variance * frame.step**2
         frame.aligned[0] |= RECEIVE_ALIGNED
+        antennas = self._evidence(frame, 2)
+        frame.antenna_delay[:], frame.antenna_delay_var[:] = antennas.delay, antennas.variance
 
     def _receive_anew(self, frame: FrameBatch) -> NDArray[np.float64]:
         """Delays as the known symbols have them, taken out; the frame received again."""

@@ -76,3 +76,39 @@ def delay_scores(
         for a in range(antennas):
             score[r, a] = slope * pushes[a, r]
             energy[r, a] = slope * slope * powers[a, r]
+
+
+@kernel
+def lag_energies(
+    y: F32, places: I64, active: I64, known: tuple[I64, I64, C64], energy: F64
+) -> None:
+    """How well each antenna's known symbols match what comes a period before, with, and after them.
+
+    An antenna a whole period out of step leaves nothing where it is looked for: no residual tells
+    its delay, this does.
+
+    Args:
+        y: float32 (Ka, 2, Nr); received vectors.
+        places: (Kh,); known symbols of sync and pilots among the active periods.
+        active: (Ka,); periods.
+        known: pointer, antenna, value of each of the Kh.
+        energy: float64 (Nt, 3, Nr); filled with |sum over k of conj(x_k) y_{k+d, r}|^2, d = -1, 0,
+            1.
+    """
+    pointer, antenna, value = known
+    channels = y.shape[2]
+    sums = np.zeros((energy.shape[0], 3, channels), np.complex128)
+    for n in range(places.size):
+        i = places[n]
+        for d in range(-1, 2):
+            j = i + d
+            if j < 0 or j >= active.size or active[j] - active[i] != d:
+                continue
+            for m in range(pointer[n], pointer[n + 1]):
+                x = np.conj(value[m])
+                for r in range(channels):
+                    sums[antenna[m], d + 1, r] += x * complex(y[j, 0, r], y[j, 1, r])
+    for a in range(energy.shape[0]):
+        for d in range(3):
+            for r in range(channels):
+                energy[a, d, r] = sums[a, d, r].real ** 2 + sums[a, d, r].imag ** 2

@@ -63,6 +63,8 @@ class ChannelFollowing:
     def __call__(self, batch: FrameBatch) -> FrameBatch:
         """Fit what moved; fill moving."""
         suspects = np.flatnonzero(self.test(batch))
+        # Of frames with delayed antennas the test has seen the refit, which knows nothing of them.
+        suspects = suspects[[int(i) not in batch.matched for i in suspects]]
         if suspects.size:
             batch.moving = [None] * batch.count
             for i in suspects:

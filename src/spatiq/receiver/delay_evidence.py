@@ -109,6 +109,19 @@ def estimates(total: Floats, information: Floats) -> tuple[Floats, Floats]:
     return np.where(told, total / safe, np.nan), np.where(told, 1.0 / safe, np.nan)
 
 
+def channel_delays(score: Floats, information: Floats) -> tuple[Floats, Floats, bool]:
+    """Delays (n,) from scores that know N0, their variances, and whether they differ.
+
+    Relative to the mean over those told, as in `DelayEvidence`.
+    """
+    delay, variance = estimates(score, information)
+    told = np.isfinite(delay)
+    common = np.sum(score) / max(float(np.sum(information)), 1e-300)
+    statistic = float(np.sum(np.where(told, information * (delay - common) ** 2, 0.0)))
+    significant = statistic > _limits(delay.size)[max(int(told.sum()) - 1, 0)]
+    return *relative(delay, variance), bool(significant)
+
+
 def relative(delay: Floats, variance: Floats) -> tuple[Floats, Floats]:
     """Delays and variances relative to the mean over those told (last axis)."""
     told = np.isfinite(delay)

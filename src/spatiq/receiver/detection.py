@@ -29,7 +29,7 @@ from numpy.typing import NDArray
 from spatiq.errors import InputError
 from spatiq.receiver.differential_detection import detect_blocks
 from spatiq.receiver.exhaustive_search import nearest_vectors
-from spatiq.receiver.frame_batch import FrameBatch, channel_runs
+from spatiq.receiver.frame_batch import FrameBatch, decision_runs
 from spatiq.receiver.project_and_slice import project_and_slice
 from spatiq.receiver.tree_search import tree_search
 from spatiq.receiver.two_step import two_step
@@ -139,8 +139,8 @@ class Detection:
         """Words of a frame, run by run of the channel where it moves."""
         noise = float(batch.noise[i])
         parts = [
-            np.asarray(detector(batch.symbols[i, run], channel, noise, self.codebook))
-            for run, channel in channel_runs(batch, i)
+            np.asarray(detector(y, channel, noise, self.codebook))
+            for _, y, channel in decision_runs(batch, i)
         ]
         return parts[0] if len(parts) == 1 else np.concatenate(parts)
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -26,6 +26,25 @@ class LostFrame:
 
 RECEIVE_ALIGNED, ANTENNAS_ALIGNED = 1, 2
 MOTION_PARTS = 16  # parts of a frame over which the motion test adds up residuals
+
+
+@dataclass(frozen=True, eq=False)
+class MatchedFrame:
+    """Payload of a frame whose antennas differ in delay, as a flat channel would have it.
+
+    Neighbours' interference is taken away, as far as decisions are right.
+
+    Attributes:
+        channel: complex128 (Nd, Nt); B with B^H B the Gram matrix of the delayed antennas.
+        symbols: complex64 (Kp, Nd); B x + white noise of variance N0.
+        refit: refits the frame, delays included, when samples and channel were changed alike.
+    """
+
+    channel: NDArray[np.complex128]
+    symbols: NDArray[np.complex64]
+    refit: Callable[[FrameBatch, int], None]
+
+
 NOT_FOUND = "not found"
 NOT_FINITE = "samples not finite"
 
@@ -68,6 +87,7 @@ class FrameBatch:
         antenna_energy: float64 (F, Nt); sum of |x_a|^2 behind the channel estimate.
         delay_score, delay_energy: float64 (F, Nr, Nt); delay score and energy of each pair of
             receive channel and antenna, see `delay_scores`.
+        lag_energy: float64 (F, Nt, 3, Nr); see `lag_energies`.
 
     Filled by alignment, relative to the mean over those measured; NaN where it cannot be told:
         receive_delay, receive_delay_var: float64 (F, Nr); samples.
@@ -78,6 +98,8 @@ class FrameBatch:
             `channel` is then that in the middle of the payload.
         acquired_timing: float64 (F, 2); t0 and step as acquisition left them.
         acquired_channel: complex128 (F, Nr, Nt); the same of the channel.
+        matched: of frames with delayed antennas, what is to be decided on in place of `symbols` and
+            `channel`, by index; t0 is then the mean over the antennas.
 
         front_end_sums: what the front end's figures are estimated from, while it holds.
         front_end: image and constant offset of each receive channel, and the noise's correlation.
@@ -120,6 +142,7 @@ class FrameBatch:
     antenna_energy: NDArray[np.float64]
     delay_score: NDArray[np.float64]
     delay_energy: NDArray[np.float64]
+    lag_energy: NDArray[np.float64]
     receive_delay: NDArray[np.float64]
     receive_delay_var: NDArray[np.float64]
     antenna_delay: NDArray[np.float64]
@@ -134,6 +157,7 @@ class FrameBatch:
     words: NDArray[np.int64]
     header_freedom: int = 0
     words_two_step: NDArray[np.int64] | None = None
+    matched: dict[int, MatchedFrame] = field(default_factory=dict)
     llr: NDArray[np.float32] | None = None
     echoes: NDArray[np.bool_] | None = None
     dispersive: DispersiveFrames | None = None
@@ -156,6 +180,18 @@ def channel_runs(batch: FrameBatch, i: int) -> Iterator[tuple[slice, NDArray[np.
         yield slice(0, batch.symbols.shape[1]), batch.channel[i]
     else:
         yield from moving.runs()
+
+
+def decision_runs(
+    batch: FrameBatch, i: int
+) -> Iterator[tuple[slice, NDArray[np.complex64], NDArray[np.complex128]]]:
+    """Runs of payload periods of frame i, their vectors and channel that words are decided on."""
+    if i in batch.matched:
+        matched = batch.matched[i]
+        yield slice(0, matched.symbols.shape[0]), matched.symbols, matched.channel
+        return
+    for run, channel in channel_runs(batch, i):
+        yield run, batch.symbols[i, run], channel
 
 
 def empty_batch(
@@ -193,6 +229,7 @@ def empty_batch(
         antenna_energy=np.zeros((count, antennas)),
         delay_score=np.zeros((count, channels, antennas)),
         delay_energy=np.zeros((count, channels, antennas)),
+        lag_energy=np.zeros((count, antennas, 3, channels)),
         receive_delay=np.full((count, channels), np.nan),
         receive_delay_var=np.full((count, channels), np.nan),
         antenna_delay=np.full((count, antennas), np.nan),

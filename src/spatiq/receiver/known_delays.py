@@ -11,6 +11,7 @@ import scipy.stats
 from numpy.typing import NDArray
 
 from spatiq.receiver.acquisition_kernels import parabola_top
+from spatiq.receiver.delayed_antennas import DelayKernels, delay_kernels
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank, sample_periods
 
@@ -72,3 +73,75 @@ def receive_delays(
         if 0 < top < grid.size - 1:
             delays[r] += _SPACING * parabola_top(*likelihood[top - 1 : top + 2, r])
     return delays
+
+
+class KnownCorrelations:
+    """Known symbols of a link against each other, for fits of delayed antennas.
+
+    Attributes:
+        used: int64 (A,); antennas that send known symbols or words.
+        sent: complex128 (Kh, A); their known symbols.
+        lagged: complex128 (2 D + 1, A, A); sum over k of conj(x_k[a]) x_{k+d}[b], at [D + d, a, b].
+    """
+
+    def __init__(self, tables: LinkTables, reach: int) -> None:
+        """Correlate the known symbols of sync and pilots over -reach..reach periods."""
+        known = tables.known_vectors.astype(np.complex128)
+        self.used = np.flatnonzero(np.any(known != 0, axis=0)).astype(np.int64)
+        inside = tables.in_header == 1
+        self.sent = known[inside][:, self.used]
+        first = int(tables.header[0])
+        dense = np.zeros((int(tables.header[-1]) - first + 1, self.used.size), np.complex128)
+        dense[tables.header - first] = self.sent
+        padded = np.pad(dense, ((reach, reach), (0, 0)))
+        shifts = range(2 * reach + 1)
+        self.lagged = np.stack([dense.conj().T @ padded[s : s + len(dense)] for s in shifts])
+
+    def gram(self, kernels: DelayKernels) -> NDArray[np.complex128]:
+        """sum over k, d of conj(x_k[a]) x_{k+d}[b] g(d + tau_b - tau_a), at [b, a]."""
+        return np.asarray(np.einsum("dab,abd->ba", self.lagged, kernels.value), np.complex128)
+
+
+def antenna_delays(
+    planes: NDArray[np.float32],
+    t0: float,
+    step: float,
+    correlations: KnownCorrelations,
+    tables: LinkTables,
+    bank: FilterBank,
+) -> tuple[NDArray[np.float64], NDArray[np.complex128]]:
+    """How late each antenna is against t0, symbol periods, (A,), and the channel (Nr, A).
+
+    Least squares over known symbols that interfere with each other as the pulse says, what is
+    unknown taken for noise; one antenna's delay at a time, the largest likelihood on a grid.
+    """
+    grid = offset_grid(_REACH)
+    y = header_outputs(planes, t0, step, grid, tables, bank)
+    cross = np.einsum("ka,gkr->gra", correlations.sent.conj(), y, optimize=True)
+
+    def fit(places: NDArray[np.int64]) -> tuple[float, NDArray[np.complex128]]:
+        gram = correlations.gram(delay_kernels(bank, grid[places]))
+        chosen = cross[places, :, np.arange(places.size)].T
+        channel = chosen @ np.linalg.pinv(gram, hermitian=True, rcond=1e-6)
+        return float(np.sum((channel * chosen.conj()).real)), channel
+
+    energy = np.sum(np.abs(cross) ** 2, axis=1)
+    places = np.argmax(energy, axis=0).astype(np.int64)
+    best, channel = fit(places)
+    for _ in range(_SWEEPS):
+        moved = False
+        for a in range(places.size):
+            for g in range(max(0, places[a] - _NEAR), min(grid.size, places[a] + _NEAR + 1)):
+                tried = places.copy()
+                tried[a] = g
+                found, candidate = fit(tried)
+                if found > best:
+                    best, channel, places, moved = found, candidate, tried, True
+        if not moved:
+            break
+    return grid[places], channel
+
+
+_REACH = 1.25  # symbol periods: antennas half a period either way, t0 with any of them
+_SWEEPS = 3
+_NEAR = 4  # grid steps either side of an antenna's own best place

@@ -48,6 +48,7 @@ class LinkTables:
         header_vectors: what they send.
         gram_root: complex128 (rank, Nt); W with W^H W the pseudo-inverse of X^H X, X the header.
         header_rank: rank of X.
+        header_gram: complex128 (Nt, Nt); sum of x x^H over the header.
         header_centroid: energy-weighted mean period of the header.
         active: int64 (Ka,); all periods in which something is sent, ascending.
         active_word: int64 (Ka,); running index of the payload period, -1 for known symbols.
@@ -58,6 +59,7 @@ class LinkTables:
         known_gram: complex128 (Nt, Nt); sum of x x^H over all known vectors.
         active_amplitude: float32 (Ka,); amplitude factor of payload words, 1 elsewhere.
         symbol_amplitude: float32 (Ka,); the same, reference blocks included.
+        header_places: int64 (Kh,); indices of the header among the active periods.
         in_header: uint8 (Ka,); 1 where the active period belongs to the header.
         words: codeword vectors, sparse.
     """
@@ -66,6 +68,7 @@ class LinkTables:
     header_vectors: SparseVectors
     gram_root: NDArray[np.complex128]
     header_rank: int
+    header_gram: NDArray[np.complex128]
     header_centroid: float
     active: NDArray[np.int64]
     active_word: NDArray[np.int64]
@@ -75,6 +78,7 @@ class LinkTables:
     known_gram: NDArray[np.complex128]
     active_amplitude: NDArray[np.float32]
     symbol_amplitude: NDArray[np.float32]
+    header_places: NDArray[np.int64]
     in_header: NDArray[np.uint8]
     words: SparseVectors
     codebook: Codebook
@@ -107,6 +111,7 @@ def link_tables(link: Link) -> LinkTables:
         header_vectors=sparse_vectors(known),
         gram_root=root,
         header_rank=rank,
+        header_gram=known.T @ known.conj(),
         header_centroid=float(np.sum(header * energy) / np.sum(energy)),
         active=active,
         active_word=word_of_period[active],
@@ -116,6 +121,7 @@ def link_tables(link: Link) -> LinkTables:
         known_gram=layout.known.T @ layout.known.conj(),
         active_amplitude=of_words[active],
         symbol_amplitude=amplitude[active],
+        header_places=np.flatnonzero(is_header[active]).astype(np.int64),
         in_header=is_header[active].astype(np.uint8),
         words=sparse_vectors(codebook.vectors),
         codebook=codebook,

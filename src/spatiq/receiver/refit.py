@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.kernels import C64, F32, F64
-from spatiq.receiver.alignment_kernels import delay_scores
+from spatiq.receiver.alignment_kernels import delay_scores, lag_energies
 from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.front_end_figures import empty_sums
 from spatiq.receiver.front_end_kernels import residual_sums
@@ -48,6 +48,9 @@ class Refit:
 
     def refit_frame(self, batch: FrameBatch, i: int, room: Room | None = None) -> None:
         """Refit frame i of a batch alone; `room` spares making it anew."""
+        if i in batch.matched:
+            batch.matched[i].refit(batch, i)
+            return
         tables, bank = self.tables, self.bank
         room = room or refit_room(tables, *batch.channel.shape[1:])
         sent = (
@@ -79,7 +82,7 @@ class Refit:
         batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = timing
         self._residuals(batch, i, room)
         take_symbols(room[0], tables.payload, tables.symbol_amplitude, batch.symbols[i])
-        slope = _mean_slope(tables.active, batch.phase[i])  # radians per symbol period
+        slope = mean_slope(tables.active, batch.phase[i])  # radians per symbol period
         batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
 
     def _residuals(self, batch: FrameBatch, i: int, room: Room) -> None:
@@ -94,6 +97,13 @@ class Refit:
             self.bank.correlation.slope_at(1.0),
             batch.delay_score[i],
             batch.delay_energy[i],
+        )
+        lag_energies(
+            room[0],
+            tables.header_places,
+            tables.active,
+            tables.header_vectors.parts,
+            batch.lag_energy[i],
         )
         residual_covariance(
             room[0],
@@ -145,7 +155,7 @@ def refit_room(tables: LinkTables, channels: int, antennas: int) -> Room:
     )
 
 
-def _mean_slope(k: NDArray[np.int64], phase: NDArray[np.float32]) -> float:
+def mean_slope(k: NDArray[np.int64], phase: NDArray[np.float32]) -> float:
     """Least-squares slope of a phase track."""
     centred = k - k.mean()
     energy = float(np.sum(centred * centred))

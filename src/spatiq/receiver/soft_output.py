@@ -42,7 +42,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.errors import InputError
-from spatiq.receiver.frame_batch import FrameBatch, channel_runs
+from spatiq.receiver.frame_batch import FrameBatch, decision_runs
 from spatiq.receiver.options import SOFT_OUTPUTS
 from spatiq.receiver.soft_output_kernels import likelihood_ratios
 from spatiq.signal.codebooks import Codebook
@@ -139,9 +139,9 @@ class SoftOutput:
         share = np.divide(1.0, energy, out=np.zeros_like(energy), where=energy > 0)
         width = self.codebook.bits
         for i in range(batch.count):
-            for run, channel in channel_runs(batch, i):
+            for run, y, channel in decision_runs(batch, i):
                 batch.llr[i, run.start * width : run.stop * width] = log_likelihood_ratios(
-                    batch.symbols[i, run],
+                    y,
                     channel,
                     float(batch.noise[i]),
                     self.codebook,
