@@ -47,6 +47,7 @@ _SMALL = 0.1  # symbol periods: beyond, residuals no longer tell a delay in prop
 _ROUNDS = 4
 # Interference over N0 below which delays of channels, of antennas are told, not taken out.
 _WORTH, _MUCH = 1e-3, 5e-3
+_LOBES = 0.008  # of known symbols' correlation with others, in energy
 
 
 @dataclass(frozen=True, eq=False)
@@ -122,7 +123,11 @@ class Alignment:
         limit = 0.5 * scipy.stats.chi2.isf(CHANCE, 2) * energy
         noise = np.einsum("frr->fr", batch.residual).real[:, None, :]
         beside = np.max(batch.lag_energy[:, :, ::2], axis=2)
-        seen = (beside > batch.lag_energy[:, :, 1]) & (beside > limit * noise) & (energy > 0)
+        # Per unit energy, the strongest antenna of each channel: what its side lobes may leave.
+        share = batch.lag_energy.max(axis=2) / np.maximum(energy, 1e-300)
+        lobes = _LOBES * energy * share.max(axis=1, keepdims=True)
+        seen = (beside > batch.lag_energy[:, :, 1]) & (beside > limit * noise + lobes)
+        seen &= energy > 0
         return np.asarray(seen.any(axis=(1, 2)))
 
     def _align_antennas(self, batch: FrameBatch, i: int) -> bool:
@@ -143,13 +148,15 @@ class Alignment:
             planes[:] = advanced(planes, np.nan_to_num(late) * fit.step)
             self._delayed.refit(planes, fit, 2)
         settled = not significant
-        if total.any():
+        for _ in range(_ROUNDS if total.any() else 0):
             # Less than significant, but nearer than not at all.
             total += np.nan_to_num(late) * fit.step
             planes[:] = advanced(planes, np.nan_to_num(late) * fit.step)
             self._delayed.refit(planes, fit, 2)
             late, variance, _ = channel_delays(fit.late, fit.late_information)
-        if noise_level_of(fit.residual) >= noise_level(frame):
+        weight = 1.0 / fit.delay_var
+        _, _, differ = channel_delays(fit.delays * weight, weight)
+        if not differ or noise_level_of(fit.residual) >= noise_level(frame):
             restore(frame, before)
             return False
         told = np.where(frame.aligned[0] & RECEIVE_ALIGNED, before["receive_delay"][0], 0.0)
@@ -272,7 +279,7 @@ def one_frame(batch: FrameBatch, i: int) -> FrameBatch:
     parts: dict[str, Any] = {
         name: value[i : i + 1] for name, value in vars(batch).items() if _by_frame(value)
     }
-    return replace(batch, **parts)
+    return replace(batch, **parts, matched={})
 
 
 def kept(frame: FrameBatch) -> dict[str, NDArray[Any]]:

@@ -36,7 +36,7 @@ from spatiq.receiver.refit_kernels import refit_phase
 
 _WIDE = (10.0, 1.0)  # prior variances of phase and carrier left: nothing is assumed
 _FIRST = 32  # periods from the known symbols that the first look takes in
-_ROUNDS = 4  # over the whole frame
+_ROUNDS = 3  # over the whole frame
 _PASSES = 2  # of weighing the words, each with the last one's expectations
 _LARGEST_MOVE = 0.1  # symbol periods, of a delay in one round
 
@@ -141,21 +141,21 @@ class DelayedReception:
     def refit(self, planes: NDArray[np.float32], fit: DelayedFit, rounds: int) -> None:
         """Further rounds over the whole frame."""
         for _ in range(rounds):
-            self._round(planes, fit, self._distance >= 0)
+            self._round(planes, fit, self._distance >= 0, _PASSES)
 
     def _round(
         self,
         planes: NDArray[np.float32],
         fit: DelayedFit,
         looked: NDArray[np.bool_],
-        most: int = MOST,
+        passes: int = 1,
     ) -> None:
         """Weigh the words looked at, then fit all else to them."""
         kernels = delay_kernels(self._bank, fit.delays)
         y = self._read(planes, fit, self._bank.taps)
-        decisions = self.decisions(fit, kernels, y, most)
+        decisions = self.decisions(fit, kernels, y)
         if looked.any():
-            for _ in range(_PASSES):
+            for _ in range(passes):
                 fit.expected = decisions.weigh(fit.expected, looked)
         seen = np.ones(self._at.size, bool)
         seen[self._tables.payload] = looked

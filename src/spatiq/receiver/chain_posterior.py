@@ -13,15 +13,15 @@ from spatiq.kernels import F64, I64, kernel
 @kernel
 def log_sum(values: F64, count: int) -> float:
     """ln of the sum of exp of the first `count` values."""
-    top = values[0]
+    top = float(values[0])
     for i in range(1, count):
-        top = max(top, values[i])
+        top = max(top, float(values[i]))
     if top == -np.inf:
         return top
     total = 0.0
     for i in range(count):
         total += np.exp(values[i] - top)
-    return top + np.log(total)
+    return top + float(np.log(total))
 
 
 @kernel

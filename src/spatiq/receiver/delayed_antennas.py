@@ -48,7 +48,7 @@ class DelayKernels:
     @property
     def reach(self) -> int:
         """D."""
-        return self.value.shape[2] // 2
+        return int(self.value.shape[2]) // 2
 
     @property
     def now(self) -> Floats:

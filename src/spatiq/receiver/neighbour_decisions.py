@@ -152,10 +152,8 @@ class NeighbourDecisions:
         blank = np.setdiff1d(sent.place, place)
         typical = np.mean(np.abs(sent.vectors) ** 2, axis=0)
         spread[blank] = typical * np.mean(sent.amplitude**2)
-        fresh = place[
-            np.abs(before.mean[place]).sum(axis=1) + before.spread[place].sum(axis=1) == 0
-        ]
-        spread[fresh] = typical * np.mean(sent.amplitude**2)
+        seen = np.abs(before.mean[place]).sum(axis=1) + before.spread[place].sum(axis=1)
+        spread[place[seen == 0]] = typical * np.mean(sent.amplitude**2)
         for d, leak in self._leak.items():
             part = spread @ leak
             low, high = max(0, -d), min(part.size, part.size - d)
