@@ -40,14 +40,14 @@ from spatiq.receiver.frame_batch import (
     FrameBatch,
     MatchedFrame,
 )
-from spatiq.receiver.known_delays import receive_delays
+from spatiq.receiver.known_delays import KnownCorrelations, receive_delays
 from spatiq.receiver.refit import Refit, mean_slope
 
 _SMALL = 0.1  # symbol periods: beyond, residuals no longer tell a delay in proportion
 _ROUNDS = 4
 # Interference over N0 below which delays of channels, of antennas are told, not taken out.
 _WORTH, _MUCH = 1e-3, 5e-3
-_LOBES = 0.008  # of known symbols' correlation with others, in energy
+_LOBES = 4.0  # times the energy of side lobes: they may add up
 
 
 @dataclass(frozen=True, eq=False)
@@ -83,6 +83,16 @@ class Alignment:
         """Made when a frame needs it."""
         refit = self.refit
         return DelayedReception(refit.bank, refit.tables, refit.clock_std, refit.phase_walk)
+
+    @cached_property
+    def _side_lobes(self) -> NDArray[np.float64]:
+        """Energy of antenna a's known symbols' correlation with b's a period on, (Nt, Nt)."""
+        antennas = self.refit.tables.known_vectors.shape[1]
+        correlations = KnownCorrelations(self.refit.tables, 1)
+        lobes = np.zeros((antennas, antennas))
+        beside = np.max(np.abs(correlations.lagged[::2]) ** 2, axis=0)
+        lobes[np.ix_(correlations.used, correlations.used)] = beside
+        return lobes
 
     def _align(self, batch: FrameBatch, i: int, channels: bool) -> None:
         """Try channels' delays, antennas' delays, both, as far as each leaves something to explain.
@@ -123,9 +133,9 @@ class Alignment:
         limit = 0.5 * scipy.stats.chi2.isf(CHANCE, 2) * energy
         noise = np.einsum("frr->fr", batch.residual).real[:, None, :]
         beside = np.max(batch.lag_energy[:, :, ::2], axis=2)
-        # Per unit energy, the strongest antenna of each channel: what its side lobes may leave.
-        share = batch.lag_energy.max(axis=2) / np.maximum(energy, 1e-300)
-        lobes = _LOBES * energy * share.max(axis=1, keepdims=True)
+        # What the other antennas' known symbols leave there, were they as strong as they look.
+        gain = batch.lag_energy.max(axis=2) / np.maximum(energy, 1e-300) ** 2
+        lobes = _LOBES * np.einsum("ab,fbr->far", self._side_lobes, gain)
         seen = (beside > batch.lag_energy[:, :, 1]) & (beside > limit * noise + lobes)
         seen &= energy > 0
         return np.asarray(seen.any(axis=(1, 2)))
