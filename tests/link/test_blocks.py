@@ -2,10 +2,12 @@
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from plain_transmitter import PlainTransmitter, manual_text
 
 from spatiq.errors import InputError
-from spatiq.link.blocks import fill_blocks, take_subcarriers
+from spatiq.link.blocks import FORMS, BlockRun, fill_blocks, take_subcarriers
 from spatiq.link.layout import Period
 from spatiq.link.loading import parse_link
 from spatiq.transmit.frames import frame_vectors
@@ -117,3 +119,28 @@ def test_prefix_power_and_transform():
 def test_refused(choices, match):
     with pytest.raises(InputError, match=match):
         parse_link(text_of(**choices))
+
+
+@settings(max_examples=80, deadline=None)
+@given(st.data())
+def test_filled_and_taken_apart_again(data):
+    """Words at any slots come back from what is sent, whatever the form; the rest is zero."""
+    form = data.draw(st.sampled_from(FORMS))
+    length = data.draw(st.integers(2, 20))
+    guard = data.draw(st.integers(0, length))
+    count, start = data.draw(st.integers(1, 4)), data.draw(st.integers(0, 5))
+    slots = np.arange(length)
+    if form == "multicarrier":
+        chosen = data.draw(st.sets(st.integers(0, length - 1), min_size=1))
+        slots = np.array(sorted(chosen))
+    run = BlockRun(form, start, count, length, guard, slots)
+    periods = start + count * (length + guard) + 3
+    words = np.random.default_rng(length).standard_normal((run.payload.size, 2)) + 0j
+    frame = np.zeros((periods, 2), complex)
+    frame[run.payload] = words
+    fill_blocks(frame, [run])
+    assert not frame[:start].any()
+    assert not frame[start + count * (length + guard) :].any()
+    back = take_subcarriers(frame, [run])
+    np.testing.assert_allclose(back[run.payload], words, atol=1e-12)
+    assert np.sum(np.abs(frame[run.periods]) ** 2) == pytest.approx(np.sum(np.abs(words) ** 2))

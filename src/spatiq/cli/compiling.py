@@ -26,6 +26,7 @@ from spatiq.link.loading import load_link
 from spatiq.metrics.measuring import Measuring
 from spatiq.metrics.prediction_kernels import predict_frames
 from spatiq.receiver.detection import Detection, find_detector
+from spatiq.receiver.echo_test import echo_test
 from spatiq.receiver.frame_batch import FrameBatch, empty_batch
 from spatiq.receiver.link_tables import link_tables
 from spatiq.receiver.options import ReceiverOptions
@@ -80,7 +81,10 @@ def compile_measuring(link: Link, channels: int = 2) -> None:
     detection = Detection(
         link.codebook, find_detector(options.detector), True, link.layout.payload_runs()
     )
-    Measuring(cast(Recording, recording), link, options)(detection(batch))
+    batch = detection(batch)
+    if link.codebook.block == 1:
+        batch = echo_test(link, 4.0)(batch)
+    Measuring(cast(Recording, recording), link, options)(batch)
 
 
 if __name__ == "__main__":
