@@ -29,6 +29,7 @@ _BAYES = float(np.log(1e4))  # evidence for motion over evidence for standing st
 # beyond the second, they are of no use.
 _SOUND, _HOPELESS = 1.2, 3.0
 _TURNS = 3
+_SLIPPERY = 2 * np.pi * 2e-5  # walk, radians^2 per period, from which cycle slips are looked for
 _FIRST_ROUNDS, _LAST_ROUNDS = 4, 6
 # Doppler spreads and phase walk (radians^2 per period) supposed at the first look.
 _BANDWIDTH, _LITTLE, _WALK = 2e-4, 2e-5, 2 * np.pi * 1e-4
@@ -116,8 +117,11 @@ class ChannelFollowing:
             fits += [_refined(self._fit(batch, i), *free) for free in (_MOVES, _WALKS)]
         if excess > _SOUND:
             fits.append(_refined(self._tracked(batch, i), *_WALKS))
-            if fits[-1].noise > _SOUND * batch.header_noise[i]:
+            lost = bool(fits[-1].noise > _SOUND * batch.header_noise[i])
+            if lost:
                 fits.append(_refined(self._glimpse(batch, i), *_MOVES))
+            # Where the phase walks fast the track may have slipped, which leaves no noise behind.
+            if lost or fits[-1].walk > _SLIPPERY:
                 fits.append(_refined(self._followed(batch, i), *_BOTH))
                 fits += self._turned(fits[-1], _SOUND * float(batch.header_noise[i]))
         best = max(fits, key=lambda fit: fit.score)
