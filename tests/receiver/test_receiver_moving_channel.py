@@ -182,3 +182,16 @@ def test_a_frame_that_cannot_be_followed_is_marked_and_the_others_are_unharmed(t
     np.testing.assert_array_equal(
         part.columns["evm_percent"][others], whole.columns["evm_percent"][others]
     )
+
+
+@pytest.mark.parametrize("ppm", [20.0, -100.0])
+def test_long_frames_with_a_clock_that_is_off(tmp_path, ppm):
+    """Two frames of 50,000 words, default options: at most 10 % more wrong bits than the genie's,
+    plus four times the square root of their number."""
+    link = parse_link(LINK.replace("KNOWN", "").replace("symbols = 1000", "symbols = 50000"))
+    recording, capture = record(tmp_path, link, frames=2, seed=8, clock_ppm=ppm, **CHOICES)
+    (measured,) = measure(recording, link)
+    best = wrong_bits(link, genie_words(capture, np.arange(2)), capture.truth.words())
+    assert best > 100
+    assert np.sum(measured.columns["bit_errors"]) < 1.10 * best + 4 * np.sqrt(best)
+    np.testing.assert_allclose(measured.columns["clock_ppm"], ppm, atol=0.2)
