@@ -10,6 +10,7 @@ import typer
 
 from spatiq import __version__
 from spatiq.cli.batch import batch_command
+from spatiq.cli.catalogue import catalogue_app
 from spatiq.cli.guard import guarded
 from spatiq.cli.link import link_app
 from spatiq.cli.measure import measure_command
@@ -49,6 +50,7 @@ def _program(
 app.command("measure")(guarded(measure_command))
 app.command("show")(guarded(show_command))
 app.command("batch")(guarded(batch_command))
+app.add_typer(catalogue_app, name="catalogue")
 app.add_typer(link_app, name="link")
 app.command("waveform")(guarded(waveform_command))
 app.command("simulate")(guarded(simulate_command))
