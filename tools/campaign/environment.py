@@ -32,3 +32,17 @@ def one_core() -> None:
         os.environ[f"{name}_NUM_THREADS"] = "1"
     if hasattr(os, "sched_setaffinity"):
         os.sched_setaffinity(0, {max(os.sched_getaffinity(0))})
+
+
+def spatiq_command() -> list[str]:
+    """How to start the program; without an installed one, through this Python."""
+    installed = spatiq_program()
+    if Path(installed).is_file():
+        return [installed]
+    return [sys.executable, "-c", "from spatiq.cli.main import run; run()"]
+
+
+def one_thread() -> None:
+    """One thread for the arithmetic of every process started from here."""
+    for name in _THREADS:
+        os.environ[f"{name}_NUM_THREADS"] = "1"
