@@ -15,6 +15,7 @@ from campaign.night_killing import run_with_kills
 from campaign.night_making import Night, make_night
 
 IN_PART = 3
+_LONGEST_S = 5.0  # from one kill to the next; a start takes about two
 _SPLIT_ABOVE = "300kB"  # makes several shares of a small recording
 
 
@@ -100,7 +101,7 @@ def check_kills(folder: Path, arguments: argparse.Namespace) -> int:
         parents, workers, runs = run_with_kills(
             batch_command(night, killed, *local),
             arguments.kills,
-            2.0 * seconds / max(arguments.kills, 1) + 2.0,
+            _LONGEST_S,
             arguments.seed,
             folder / "killed.log",
         )

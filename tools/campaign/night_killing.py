@@ -50,7 +50,7 @@ def run_with_kills(
                 except subprocess.TimeoutExpired:
                     pass
                 targets = children(process.pid)
-                if targets and chance.random() < 0.5:
+                if targets and chance.random() < 0.7:
                     os.kill(chance.choice(targets), signal.SIGKILL)
                     workers += 1
                 else:

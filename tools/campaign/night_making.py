@@ -120,7 +120,7 @@ def _write(base: Path, link: Link, k: int, seed: int, frames: int, apart: bool) 
     capture = simulate(
         link,
         receive_channels=2,
-        snr_db=6.0 if apart else 15.0,
+        snr_db=8.0 if apart else 19.0,
         samples_per_symbol=4,
         frames=frames,
         first_frame=k * frames,
@@ -241,11 +241,11 @@ WORDS: dict[Callable[[Path], Path], str] = {
     _metadata_cut_short: "JSON",
     _data_missing: "no such file; expected the data of",
     _data_empty: "0 bytes",
-    _no_datatype: "core:datatype: found nothing",
+    _no_datatype: "core:datatype: found None",
     _odd_datatype: "ci17_le",
     _slow_sampling: "samples per symbol",
     _metadata_missing: "expected its metadata",
-    _archive_damaged: "archive",
+    _archive_damaged: "found no recording",
     _stream_missing: "no such file",
     _no_rule: "no rule that fits",
 }

@@ -169,7 +169,8 @@ class ClusterWorkers:
             else:
                 self._client = distributed.Client(self._scheduler, timeout=20, set_as_default=False)
             self._client.wait_for_workers(1, timeout=60)
-            versions = set(self._client.run(_program_version).values())
+            # A worker may die while it is asked; those that answer are looked at.
+            versions = set(self._client.run(_program_version, on_error="ignore").values())
         except (OSError, TimeoutError, ValueError) as error:
             self.__exit__()
             found = str(error) or type(error).__name__

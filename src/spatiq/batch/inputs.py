@@ -102,22 +102,24 @@ def _files(given: str) -> Iterator[tuple[Path, list[Path]]]:
     if named:
         yield named[0].parent.resolve(), [named[0].parent.resolve() / named[0].name]
         return
-    matches = sorted(_matching(given))
+    base, matches = _matching(given)
     if not matches:
         raise InputError(given, "", "nothing", "a recording, a folder, or a pattern that fits any")
-    for match in (m for m in matches if m.is_dir()):
-        yield match.resolve(), sorted(_below(match.resolve()))
-    files = [m.parent.resolve() / m.name for m in matches if m.is_file()]
-    for folder in sorted({f.parent for f in files}):
-        yield folder, [f for f in files if f.parent == folder]
+    files = [m for m in matches if m.is_file()]
+    for folder in (m for m in matches if m.is_dir()):
+        files += _below(folder)
+    yield base, sorted(set(files))
 
 
-def _matching(pattern: str) -> Iterator[Path]:
-    """Files and folders that a pattern fits; "**" stands for any depth."""
+def _matching(pattern: str) -> tuple[Path, list[Path]]:
+    """The folder in which a pattern looks, and what it fits; "**" stands for any depth."""
     parts = Path(pattern).parts
     fixed = next((k for k, part in enumerate(parts) if any(c in part for c in "*?[")), len(parts))
-    if fixed < len(parts):
-        yield from Path(*parts[:fixed]).glob("/".join(parts[fixed:]))
+    base = Path(*parts[:fixed]).resolve()
+    if fixed == len(parts):
+        return base, []
+    found = base.glob("/".join(parts[fixed:]))
+    return base, sorted(f for f in found if not f.relative_to(base).as_posix().startswith("."))
 
 
 def _below(folder: Path) -> Iterator[Path]:
