@@ -4,6 +4,7 @@ futures; what differs is who starts the workers and who notices that one has die
 from __future__ import annotations
 
 import importlib
+import json
 import multiprocessing
 import os
 import signal
@@ -19,6 +20,7 @@ from spatiq.batch.work import Outcome, Task, limit_threads, run_task
 from spatiq.errors import InputError, SpatiqError
 
 _WATCH_S = 0.5
+_ANSWERS = "a scheduler that answers"
 _MISSING = "the packages of the extra `cluster`, to work on a Dask cluster"
 
 
@@ -174,7 +176,7 @@ class ClusterWorkers:
         except (OSError, TimeoutError, ValueError) as error:
             self.__exit__()
             found = str(error) or type(error).__name__
-            raise InputError("--scheduler", self._scheduler, found, expected) from error
+            raise InputError("--scheduler", self._scheduler, found, _ANSWERS) from error
         if versions != {spatiq.__version__}:
             self.__exit__()
             found = f"program version {', '.join(sorted(versions))} on its workers"
@@ -202,6 +204,22 @@ class ClusterWorkers:
         outer.set_running_or_notify_cancel()
         inner.add_done_callback(lambda done: _hand_on_from_cluster(done, outer))
         return outer
+
+
+def _address(scheduler: str) -> str:
+    """Address of a scheduler, out of its file if that is what was given.
+
+    Raises:
+        InputError: a file that is none of a scheduler.
+    """
+    file = Path(scheduler)
+    if not file.is_file():
+        return scheduler
+    try:
+        return str(json.loads(file.read_text(encoding="utf-8"))["address"])
+    except (OSError, ValueError, KeyError, TypeError) as error:
+        found = f"{type(error).__name__} while its address was read"
+        raise InputError("--scheduler", scheduler, found, _ANSWERS) from error
 
 
 def _distributed() -> Any:

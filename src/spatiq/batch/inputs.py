@@ -118,8 +118,9 @@ def _matching(pattern: str) -> tuple[Path, list[Path]]:
     base = Path(*parts[:fixed]).resolve()
     if fixed == len(parts):
         return base, []
-    found = base.glob("/".join(parts[fixed:]))
-    return base, sorted(f for f in found if not f.relative_to(base).as_posix().startswith("."))
+    found = list(base.glob("/".join(parts[fixed:])))
+    hidden = (any(p.startswith(".") for p in f.relative_to(base).parts) for f in found)
+    return base, sorted(f for f, h in zip(found, hidden, strict=True) if not h)
 
 
 def _below(folder: Path) -> Iterator[Path]:
