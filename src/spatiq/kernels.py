@@ -49,9 +49,25 @@ def _cache_is_writable() -> bool:
 CACHED = _cache_is_writable()
 
 
+_KERNELS: list[Any] = []
+
+
 def kernel(function: F) -> F:
     """Compile a hot loop: bare arrays in and out, no objects, no files."""
-    return cast(F, numba.njit(cache=CACHED, **_OPTIONS)(function))
+    compiled = numba.njit(cache=CACHED, **_OPTIONS)(function)
+    _KERNELS.append(compiled)
+    return cast(F, compiled)
+
+
+def compiled_here() -> bool:
+    """Whether this process has compiled a kernel that others will find in the cache.
+
+    A kernel that calls another one then runs that one's first copy, where a process that takes both
+    from the cache runs a copy made for the caller: rounding may differ in the last bit.
+    """
+    # With the compiler off, kernels are plain functions.
+    stats = (getattr(k, "stats", None) for k in _KERNELS)
+    return CACHED and any(s is not None and s.cache_misses for s in stats)
 
 
 def inlined(function: F) -> F:

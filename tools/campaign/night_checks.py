@@ -7,6 +7,7 @@ import json
 import subprocess
 import time
 from pathlib import Path
+from typing import Any
 
 from campaign.environment import spatiq_command
 from campaign.night_cluster import Cluster
@@ -57,7 +58,7 @@ def check_night(folder: Path, arguments: argparse.Namespace) -> int:
     return report(faults)
 
 
-def night_faults(night: Night, out: Path, figures: dict) -> list[str]:  # type: ignore[type-arg]
+def night_faults(night: Night, out: Path, figures: dict[str, Any]) -> list[str]:
     """Whatever a measured night shows other than it must."""
     listed = json.loads(_run([*spatiq_command(), "catalogue", "list", str(out), "--json"])[1])
     found = {row["name"]: row["frames_found"] for row in listed}

@@ -6,6 +6,7 @@ import os
 import resource
 import subprocess
 import time
+from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
@@ -21,6 +22,7 @@ from spatiq.batch.steps import SplitSteps
 from spatiq.batch.work import RESULTS_FOLDER, Job, Outcome, measure_whole, run_task
 from spatiq.receiver import framing
 from spatiq.receiver.options import ReceiverOptions
+from spatiq.recording.recording import Recording
 
 
 def check_splits(folder: Path, trials: int, seed: int) -> int:
@@ -56,8 +58,10 @@ def _job(folder: Path, meta: Path, link: Path) -> Job:
     return Job(item, link, ReceiverOptions(), folder, 1e-2)
 
 
-def _random_cuts(rng: np.random.Generator, count: int):  # type: ignore[no-untyped-def]
-    def cuts(recording, _: int) -> tuple[int, ...]:  # type: ignore[no-untyped-def]
+def _random_cuts(
+    rng: np.random.Generator, count: int
+) -> Callable[[Recording, int], tuple[int, ...]]:
+    def cuts(recording: Recording, _: int) -> tuple[int, ...]:
         return tuple(np.sort(rng.integers(0, recording.n_samples + 1, count)).tolist())
 
     return cuts

@@ -7,16 +7,26 @@ import importlib
 import json
 import multiprocessing
 import os
+import pickle
 import signal
+import subprocess
+import sys
 import threading
 import time
 from concurrent.futures import Executor, Future, ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from pathlib import Path
-from typing import Any, Protocol
+from typing import Any, Protocol, cast
 
 import spatiq
-from spatiq.batch.work import Outcome, Task, limit_threads, run_task
+from spatiq.batch.work import (
+    CompiledHere,
+    Outcome,
+    Task,
+    limit_threads,
+    run_task,
+    watch_compiling,
+)
 from spatiq.errors import InputError, SpatiqError
 
 _WATCH_S = 0.5
@@ -50,6 +60,7 @@ class Workers(Protocol):
 def _start_worker(parent: int) -> None:
     """A worker's first act: one thread for the arithmetic, another that watches the parent."""
     limit_threads()
+    watch_compiling()
     signal.signal(signal.SIGINT, signal.SIG_IGN)  # the parent decides what an interrupt means
 
     def watch() -> None:
@@ -83,10 +94,15 @@ class LocalWorkers:
 
     def submit(self, task: Task) -> Future[Outcome]:
         """See Workers."""
-        with self._lock:
-            executor = self._idle.pop() if self._idle else self._new()
         outer: Future[Outcome] = Future()
         outer.set_running_or_notify_cancel()
+        self._begin(task, outer)
+        return outer
+
+    def _begin(self, task: Task, outer: Future[Outcome]) -> None:
+        """Hand a task to a worker; a new one when none is idle."""
+        with self._lock:
+            executor = self._idle.pop() if self._idle else self._new()
         try:
             inner = executor.submit(run_task, task)
         except BrokenProcessPool:  # it died while it was idle
@@ -94,8 +110,7 @@ class LocalWorkers:
                 self._all.discard(executor)
                 executor = self._new()
             inner = executor.submit(run_task, task)
-        inner.add_done_callback(lambda done: self._done(executor, done, outer))
-        return outer
+        inner.add_done_callback(lambda done: self._done(executor, done, task, outer))
 
     def _new(self) -> ProcessPoolExecutor:
         context = multiprocessing.get_context("spawn")
@@ -106,20 +121,27 @@ class LocalWorkers:
         return executor
 
     def _done(
-        self, executor: ProcessPoolExecutor, inner: Future[Outcome], outer: Future[Outcome]
+        self,
+        executor: ProcessPoolExecutor,
+        inner: Future[Outcome],
+        task: Task,
+        outer: Future[Outcome],
     ) -> None:
-        with self._lock:
-            live = executor in self._all
         fault = None if inner.cancelled() else inner.exception()
-        if inner.cancelled() or isinstance(fault, BrokenProcessPool):
-            with self._lock:
+        lost = inner.cancelled() or isinstance(fault, BrokenProcessPool)
+        with self._lock:
+            closed = executor not in self._all
+            if lost or isinstance(fault, CompiledHere):
                 self._all.discard(executor)
-            outer.set_exception(WorkerDied("the worker was killed or crashed"))
-            return
-        if live:
-            with self._lock:
+            elif not closed:
                 self._idle.append(executor)
-        _hand_on(inner, outer)
+        if lost or closed:
+            outer.set_exception(WorkerDied("the worker was killed or crashed"))
+        elif isinstance(fault, CompiledHere):
+            executor.shutdown(wait=False)
+            self._begin(task, outer)
+        else:
+            _hand_on(inner, outer)
 
 
 def _end(executor: ProcessPoolExecutor) -> None:
@@ -161,15 +183,9 @@ class ClusterWorkers:
             InputError: no package, no scheduler, no worker, or another program version.
         """
         distributed = _distributed()
-        file = Path(self._scheduler)
-        expected = "a scheduler that answers"
+        address = _address(self._scheduler)
         try:
-            if file.is_file():
-                self._client = distributed.Client(
-                    scheduler_file=str(file), timeout=20, set_as_default=False
-                )
-            else:
-                self._client = distributed.Client(self._scheduler, timeout=20, set_as_default=False)
+            self._client = distributed.Client(address, timeout=20, set_as_default=False)
             self._client.wait_for_workers(1, timeout=60)
             # A worker may die while it is asked; those that answer are looked at.
             versions = set(self._client.run(_program_version, on_error="ignore").values())
@@ -199,7 +215,7 @@ class ClusterWorkers:
         assert self._executor is not None
         # Workers may join or leave while it runs.
         self.count = max(1, sum(self._client.nthreads().values()))
-        inner = self._executor.submit(run_task, task)
+        inner = self._executor.submit(run_on_cluster, task)
         outer: Future[Outcome] = Future()
         outer.set_running_or_notify_cancel()
         inner.add_done_callback(lambda done: _hand_on_from_cluster(done, outer))
@@ -232,6 +248,24 @@ def _distributed() -> Any:
         return importlib.import_module("distributed")
     except ImportError as error:
         raise InputError("--scheduler", "", str(error), _MISSING) from error
+
+
+def run_on_cluster(task: Task) -> Outcome:
+    """Do a task in a cluster's worker; in a process of its own where that had to compile."""
+    watch_compiling()
+    try:
+        return run_task(task)
+    except CompiledHere:
+        pass  # done anew below
+    command = [sys.executable, "-m", "spatiq.batch.alone"]
+    done = subprocess.run(command, input=pickle.dumps(task), capture_output=True, check=False)
+    if done.returncode:
+        said = done.stderr.decode(errors="replace").strip().splitlines()[-1:]
+        raise WorkerDied(" ".join(["a process started by a worker ended early:", *said]))
+    found = pickle.loads(done.stdout)
+    if isinstance(found, BaseException):
+        raise found
+    return cast(Outcome, found)
 
 
 def _program_version() -> str:

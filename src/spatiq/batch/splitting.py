@@ -24,6 +24,7 @@ from spatiq.batch.work import (
     Job,
     Outcome,
     finished,
+    fit_to_keep,
     is_result,
     looks,
     unchanged,
@@ -111,7 +112,9 @@ def index_piece(job: Job, plan: Plan, k: int, fingerprint: str) -> Outcome:
         indexer = FrameIndexer(recording, link, job.options)
         pieces = indexer.pieces(plan.cuts)
         if k < len(pieces):
-            _write_piece(plan.piece(k), indexer.search(pieces[k]))
+            index = indexer.search(pieces[k])
+            fit_to_keep()
+            _write_piece(plan.piece(k), index)
     return Outcome()
 
 
@@ -122,6 +125,7 @@ def join_index(job: Job, plan: Plan) -> Outcome:
     if not plan.index.exists():
         pieces = indexer.pieces(plan.cuts)
         table = indexer.join(pieces, (_read_piece(plan.piece(k)) for k in range(len(pieces))))
+        fit_to_keep()
         with whole_file(plan.index, overwrite=True) as partial, partial.open("wb") as file:
             np.savez(file, rows=table.rows)
     table = _read_table(plan.index)
@@ -159,6 +163,7 @@ def measure_share(
             frames = measuring(batch)
             assert follower.basis is not None
             spool.add(_without_words(frames, job), follower.basis)
+        fit_to_keep()
     return Outcome()
 
 
@@ -185,6 +190,7 @@ def put_together(job: Job, plan: Plan, shares: int, content: Content, fingerprin
             frames.lost += skipped.before(columns, position)
             writer.add(frames)
             summary.add(frames)
+        fit_to_keep()
         _still(job, recording, fingerprint)
         writer.close(summary.as_dict(), content.data)
     return finished(job, recording, link, content, look, False)

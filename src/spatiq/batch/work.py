@@ -27,7 +27,8 @@ from spatiq.batch.identity import (
 )
 from spatiq.batch.inputs import Item
 from spatiq.batch.records import Tables, measurement_tables
-from spatiq.errors import InputError
+from spatiq.errors import InputError, SpatiqError
+from spatiq.kernels import compiled_here
 from spatiq.link.description import Link
 from spatiq.link.loading import load_link
 from spatiq.metrics.measuring import measure
@@ -39,6 +40,13 @@ from spatiq.results.reader import open_results
 
 RESULTS_FOLDER = "recordings"
 GROWING = "changed while it was measured"
+
+
+class CompiledHere(SpatiqError):
+    """A task that had to compile kernels: done anew in a process that takes them from the cache.
+
+    Only so are results the same to the bit, whichever process makes them: see `compiled_here`.
+    """
 
 
 class StillGrowing(InputError):
@@ -156,6 +164,24 @@ def unchanged(job: Job, recording: Recording, before: Fingerprint) -> None:
         raise StillGrowing(job.item.label, "", GROWING, "a recording that is complete")
 
 
+_WATCHED = {"compiling": False}
+
+
+def watch_compiling() -> None:
+    """From now on this process keeps nothing that was computed after it had compiled a kernel."""
+    _WATCHED["compiling"] = True
+
+
+def fit_to_keep() -> None:
+    """Called before anything that was computed is kept.
+
+    Raises:
+        CompiledHere: this process has compiled a kernel, and is watched.
+    """
+    if _WATCHED["compiling"] and compiled_here():
+        raise CompiledHere("kernels were compiled")
+
+
 def measure_whole(job: Job) -> Outcome:
     """Measure a recording in a single pass, unless its results are there."""
     recording, link = job.open()
@@ -171,6 +197,7 @@ def measure_whole(job: Job) -> Outcome:
             for frames in measure(recording, link, job.options):
                 writer.add(frames)
                 summary.add(frames)
+            fit_to_keep()
             unchanged(job, recording, before)
             writer.close(summary.as_dict(), content.data)
     return finished(job, recording, link, content, before, reused)
