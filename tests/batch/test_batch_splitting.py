@@ -9,7 +9,7 @@ import pytest
 from batch_cases import COUNTER, PERIOD, PRBS, differences, make_job, write_capture, write_link
 
 from spatiq.batch import splitting
-from spatiq.batch.splitting import measure_share, plan_cuts, put_together
+from spatiq.batch.splitting import join_index, measure_share, plan_cuts, put_together
 from spatiq.batch.steps import SplitSteps
 from spatiq.batch.work import Outcome, measure_whole, run_task
 from spatiq.receiver import framing
@@ -150,3 +150,27 @@ def test_cuts_are_even_and_follow_from_the_size_alone(tmp_path):
     assert plan_cuts(recording, size) == ()
     assert plan_cuts(recording, size - 1) == (recording.n_samples // 2,)
     assert plan_cuts(recording, size // 3)[0] == recording.n_samples // 4
+
+
+def test_an_inverted_spectrum_is_told_as_in_a_single_pass(tmp_path):
+    link = write_link(tmp_path, PERIOD)
+    meta = write_capture(tmp_path, link, "inverted", lambda c: c.samples().conj())
+    used = both_ways(tmp_path, meta, link, 7)
+    assert used.count(join_index) == 2
+    fixed = replace(SMALL_BLOCKS, spectrum="inverted")
+    assert both_ways(tmp_path / "fixed", meta, link, 8, fixed).count(join_index) == 1
+    normal = write_capture(tmp_path, link, "normal")
+    assert both_ways(tmp_path / "normal", normal, link, 9).count(join_index) == 1
+
+
+def test_a_front_end_at_fault(tmp_path):
+    """A constant, an image and an interfering line, taken out while samples are read."""
+
+    def worn(capture):
+        samples = capture.samples()
+        line = 0.05 * np.exp(2j * np.pi * 0.11 * np.arange(samples.shape[1]))
+        return samples + 0.05 * samples.conj() + 0.1 + line
+
+    link = write_link(tmp_path, PERIOD)
+    meta = write_capture(tmp_path, link, "worn", worn, frames=60, datatype="cf32_le")
+    both_ways(tmp_path, meta, link, 10)

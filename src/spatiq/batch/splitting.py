@@ -2,6 +2,8 @@
 
     index pieces (parallel) -> join the index -> measure shares (parallel) -> put together
 
+(and the index once more, where frames say that the spectrum is inverted)
+
 The index says where all frames are (receiver/frame_index.py). A share is whole batches of a single
 pass, so that nothing a batch's make-up decides can differ. Only numbering goes from frame to frame
 through the recording: each share numbers its frames by their own evidence; putting together
@@ -35,6 +37,7 @@ from spatiq.metrics.measuring import (
     Measuring,
     reference_follower,
     shortest_distance,
+    spectrum_of,
 )
 from spatiq.metrics.reference_following import Numberer, Numbering
 from spatiq.metrics.skipped_frames import SkippedFrames, places_in_stream
@@ -42,8 +45,10 @@ from spatiq.metrics.summary import Summary
 from spatiq.receiver.chain import receive
 from spatiq.receiver.frame_index import FindTable, FrameIndexer, PieceIndex
 from spatiq.receiver.frame_search import Detection
+from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.stretches import Find, Place
 from spatiq.recording.recording import Recording
+from spatiq.recording.safewrite import write_bytes
 from spatiq.results.hdf5 import ResultsWriter
 from spatiq.results.whole_files import whole_file
 
@@ -56,20 +61,26 @@ class Plan:
         folder: for what is kept until all is done.
         cuts: per-channel file samples at which the index is cut.
         share_bytes: samples of one share, at most about.
+        spectrum: that the recording is taken to have, once that is known.
     """
 
     folder: Path
     cuts: tuple[int, ...]
     share_bytes: int
+    spectrum: str = "normal"
+
+    def options(self, job: Job) -> ReceiverOptions:
+        """How the recording is received, its spectrum being decided on."""
+        return replace(job.options, spectrum=self.spectrum)
 
     def piece(self, k: int) -> Path:
         """Index of piece k."""
-        return self.folder / f"piece-{k:05d}.index"
+        return self.folder / f"piece-{k:05d}-{self.spectrum}.index"
 
     @property
     def index(self) -> Path:
         """Index of the whole recording."""
-        return self.folder / "frames.npz"
+        return self.folder / f"frames-{self.spectrum}.npz"
 
     def share(self, k: int, *, renumbered: bool = False) -> Path:
         """Measured frames of share k; `renumbered`: by the numbers found putting together."""
@@ -91,7 +102,9 @@ def prepare(job: Job, share_bytes: int, folder: Path) -> Outcome:
     """Where will the recording be cut? The first task, small."""
     recording, _ = job.open()
     folder.mkdir(parents=True, exist_ok=True)
-    plan = Plan(folder, plan_cuts(recording, share_bytes), share_bytes)
+    fixed = job.options.spectrum
+    spectrum = "normal" if fixed == "auto" else fixed
+    plan = Plan(folder, plan_cuts(recording, share_bytes), share_bytes, spectrum)
     return Outcome(fingerprint=looks(job, recording).text, found=plan)
 
 
@@ -109,7 +122,7 @@ def index_piece(job: Job, plan: Plan, k: int, fingerprint: str) -> Outcome:
     if not plan.piece(k).exists():
         recording, link = job.open()
         _still(job, recording, fingerprint)
-        indexer = FrameIndexer(recording, link, job.options)
+        indexer = FrameIndexer(recording, link, plan.options(job))
         pieces = indexer.pieces(plan.cuts)
         if k < len(pieces):
             index = indexer.search(pieces[k])
@@ -119,9 +132,12 @@ def index_piece(job: Job, plan: Plan, k: int, fingerprint: str) -> Outcome:
 
 
 def join_index(job: Job, plan: Plan) -> Outcome:
-    """One index of all pieces; in `found`, the bounds of the shares."""
+    """One index of all pieces; in `found`, the plan with the spectrum told, and the shares' bounds.
+
+    Without bounds, the pieces are to be searched again: the spectrum is inverted.
+    """
     recording, link = job.open()
-    indexer = FrameIndexer(recording, link, job.options)
+    indexer = FrameIndexer(recording, link, plan.options(job))
     if not plan.index.exists():
         pieces = indexer.pieces(plan.cuts)
         table = indexer.join(pieces, (_read_piece(plan.piece(k)) for k in range(len(pieces))))
@@ -129,10 +145,18 @@ def join_index(job: Job, plan: Plan) -> Outcome:
         with whole_file(plan.index, overwrite=True) as partial, partial.open("wb") as file:
             np.savez(file, rows=table.rows)
     table = _read_table(plan.index)
+    told = plan.folder / "spectrum"
+    if not told.exists():
+        spectrum = spectrum_of(recording, link, job.options)
+        fit_to_keep()
+        write_bytes(told, spectrum.encode())
+    spectrum = told.read_text()
+    if spectrum != plan.spectrum:
+        return Outcome(found=(replace(plan, spectrum=spectrum), []))
     size = sum(d.data.size for d in recording.datasets)
     shares = max(1, round(size / plan.share_bytes))
     batches = max(1, -(-int(table.entered.sum()) // (indexer.batch_size * shares)))
-    return Outcome(found=indexer.share(table, batches))
+    return Outcome(found=(plan, indexer.share(table, batches)))
 
 
 def measure_share(
@@ -143,7 +167,8 @@ def measure_share(
     if path.exists():
         return Outcome()
     recording, link = job.open()
-    indexer = FrameIndexer(recording, link, job.options)
+    options = plan.options(job)
+    indexer = FrameIndexer(recording, link, options)
     table = _read_table(plan.index)
     follower: _Numbering = _ByItself(reference_follower(recording, link))
     if renumbered:
@@ -152,14 +177,14 @@ def measure_share(
     measuring = Measuring(
         recording,
         link,
-        job.options,
+        options,
         first_frame=int(table.entered[: bounds[0]].sum()),
         follower=follower,
         list_skipped=False,
     )
     share = indexer.frames(table, *bounds)
     with SpoolWriter(path) as spool:
-        for batch in receive(recording, link, job.options, stretch=share):
+        for batch in receive(recording, link, options, stretch=share):
             frames = measuring(batch)
             assert follower.basis is not None
             spool.add(_without_words(frames, job), follower.basis)

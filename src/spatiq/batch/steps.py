@@ -87,7 +87,7 @@ class SplitSteps:
         elif task.function is take_digest:
             self._content, self._there = outcome.content, bool(outcome.found)
         elif task.function is join_index:
-            self._bounds = outcome.found
+            self._plan, self._bounds = outcome.found
         if self._waiting:
             return []
         if task.function is measure_whole or (
@@ -102,18 +102,14 @@ class SplitSteps:
         plan = self._plan
         assert plan is not None
         if task.function is prepare:
-            pieces = len(plan.cuts) + 1
-            size = int(self._size * _INDEX_SHARE / pieces)
-            index = [
-                Task(index_piece, self.job, (plan, k, self._fingerprint), size)
-                for k in range(pieces)
-            ]
-            return [Task(take_digest, self.job, (self._fingerprint,)), *index]
+            return [Task(take_digest, self.job, (self._fingerprint,)), *self._pieces(plan)]
         if task.function in (take_digest, index_piece):
             if self._there:
                 left = int(self._size * (1 - _INDEX_SHARE))
                 return [Task(measure_whole, replace(self.job, content=self._content), (), left)]
             return [Task(join_index, self.job, (plan,))]
+        if task.function is join_index and not self._bounds:
+            return self._pieces(plan)
         if task.function is join_index:
             size = int(self._size * _MEASURE_SHARE / len(self._bounds))
             return [
@@ -128,3 +124,11 @@ class SplitSteps:
         last = len(self._bounds), self._content, self._fingerprint
         left = int(self._size * (1 - _INDEX_SHARE - _MEASURE_SHARE))
         return [Task(put_together, self.job, (plan, *last), left)]
+
+    def _pieces(self, plan: Plan) -> list[Task]:
+        """Search for frames, piece by piece."""
+        pieces = len(plan.cuts) + 1
+        size = int(self._size * _INDEX_SHARE / pieces)
+        return [
+            Task(index_piece, self.job, (plan, k, self._fingerprint), size) for k in range(pieces)
+        ]

@@ -19,7 +19,7 @@ from spatiq.metrics.path_figures import path_figures
 from spatiq.metrics.receive_channels import receive_figures
 from spatiq.metrics.reference_following import Numberer, Numbering, ReferenceFollower
 from spatiq.metrics.skipped_frames import SkippedFrames, places_in_stream
-from spatiq.metrics.spectrum import look_both_ways
+from spatiq.metrics.spectrum import believed_spectrum, look_both_ways
 from spatiq.metrics.subcarriers import subcarrier_sums
 from spatiq.receiver.chain import Progress, Stage, receive
 from spatiq.receiver.exhaustive_search import nearest_vectors
@@ -61,6 +61,17 @@ def measure(
         yield from look_both_ways(look, link)
     else:
         yield from look(options.spectrum)
+
+
+def spectrum_of(recording: Recording, link: Link, options: ReceiverOptions) -> str:
+    """The spectrum that `measure` takes a recording to have: "normal" or "inverted"."""
+    if options.spectrum != "auto":
+        return options.spectrum
+
+    def look(spectrum: str) -> Iterator[MeasuredFrames]:
+        return measure(recording, link, replace(options, spectrum=spectrum))
+
+    return believed_spectrum(look, link)
 
 
 def shortest_distance(recording: Recording, link: Link) -> float:

@@ -76,6 +76,18 @@ def look_both_ways(look: Look, link: Link) -> Iterator[MeasuredFrames]:
         look: measures the recording, given "normal" or "inverted"; batches in order of time.
         link: link description.
     """
+    _, held, rest = _believed(look, link)
+    yield from held
+    yield from rest
+
+
+def believed_spectrum(look: Look, link: Link) -> str:
+    """Which of the two `look_both_ways` takes: "normal" or "inverted"."""
+    return _believed(look, link)[0]
+
+
+def _believed(look: Look, link: Link) -> tuple[str, list[MeasuredFrames], Iterator[MeasuredFrames]]:
+    """The spectrum, the batches looked at to tell, and those that follow."""
     first = look("normal")
     held, seen = _up_to_frames(first)
     share = conjugate_error_share(link)
@@ -89,11 +101,8 @@ def look_both_ways(look: Look, link: Link) -> Iterator[MeasuredFrames]:
         if seen_second is not None and (
             evidence is None or _convincing(_evidence(seen_second, link, share), evidence)
         ):
-            yield from held_second
-            yield from second
-            return
-    yield from held
-    yield from first
+            return "inverted", held_second, second
+    return "normal", held, first
 
 
 def _up_to_frames(
