@@ -22,7 +22,7 @@ from spatiq.receiver.chain import chain_parts
 from spatiq.receiver.frame_index import FrameIndexer
 from spatiq.receiver.frame_search import Detection, FrameSearch, threshold
 from spatiq.receiver.frame_search_kernels import metric_at
-from spatiq.receiver.frame_search_law import noise_powers, tail_probability
+from spatiq.receiver.frame_search_law import exceeds, noise_powers, tail_probability
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
 
@@ -54,6 +54,19 @@ def test_uneven_noise_gives_the_sum_of_exponentials():
         weight = np.prod(up[i] / (up[i] - up[others]))
         want += weight * np.prod((1 + powers * metric / up[i]) ** -(length - 1.0))
     assert tail_probability(metric, powers, length, 1) == pytest.approx(want, rel=1e-6)
+
+
+@pytest.mark.nojit
+@settings(max_examples=60)
+@given(
+    metric=st.floats(0.0, 1.0),
+    powers=st.lists(st.floats(1e-6, 1.0), min_size=2, max_size=5),
+    exponent=st.floats(1.0, 15.0),
+)
+def test_the_short_cut_decides_as_the_law_does(metric, powers, exponent):
+    false_alarm = 10.0**-exponent
+    law = tail_probability(metric, np.array(powers), 31, 1)
+    assert exceeds(metric, np.array(powers), 31, 1, false_alarm) == (law <= false_alarm)
 
 
 @pytest.mark.nojit

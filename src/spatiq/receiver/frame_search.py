@@ -25,7 +25,7 @@ from numpy.typing import NDArray
 
 from spatiq.link.description import Link
 from spatiq.receiver.frame_search_kernels import metric_at, raise_peak, window_energy
-from spatiq.receiver.frame_search_law import noise_powers, tail_probability
+from spatiq.receiver.frame_search_law import exceeds, noise_powers
 from spatiq.receiver.matched_filter import FilterBank, derotate, sample_instants
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
@@ -368,7 +368,7 @@ class FrameSearch:
         basis = pattern.basis.astype(np.complex128)
         y = y - (y @ basis.conj().T) @ basis
         powers = noise_powers(y @ y.conj().T / (length - rank), length - rank)
-        return tail_probability(found.metric, powers, length, rank) <= pattern.false_alarm
+        return exceeds(found.metric, powers, length, rank, pattern.false_alarm)
 
 
 def noise_metrics(search: FrameSearch) -> Iterator[NDArray[np.float32]]:
