@@ -89,6 +89,14 @@ def test_share_of_bits_that_conjugation_gets_wrong():
     assert conjugate_error_share(real) == 0.0
 
 
+@pytest.mark.nojit
+def test_share_of_the_differential_form():
+    """QPSK, two antennas: of 1 + 2 x 2 bits, a quarter turn's 01 and 10 change places: 2 in 5."""
+    text = LINK.replace("spatial-modulation", "differential-spatial-modulation")
+    link = parse_link(text.replace("SYNC", M_SEQUENCE).replace("PAYLOAD", PRBS))
+    assert conjugate_error_share(link) == pytest.approx(2 / 5)
+
+
 @pytest.mark.parametrize("sync", [M_SEQUENCE, ZADOFF_CHU])
 @pytest.mark.parametrize("payload", [PRBS, CHECKED])
 def test_an_inverted_recording_is_received_as_if_it_were_not(tmp_path, sync, payload):

@@ -22,6 +22,7 @@ import scipy.stats
 
 from spatiq.link.description import Link
 from spatiq.metrics.frame_table import MeasuredFrames
+from spatiq.signal.differential import DifferentialCodebook
 
 _CHANCE = 1e-6
 Look = Callable[[str], Iterator[MeasuredFrames]]
@@ -33,10 +34,12 @@ def conjugate_error_share(link: Link) -> float:
     Of a large codebook, over 256 words spread evenly.
     """
     book = link.codebook
+    vectors = book.vectors
+    if isinstance(book, DifferentialCodebook):  # the change from block to block is conjugated
+        vectors = book.matrices().reshape(book.size, -1)
     words = np.arange(0, book.size, max(book.size // 256, 1))
     nearest = [
-        int(np.argmin(np.sum(np.abs(book.vectors - book.vectors[w].conj()) ** 2, axis=1)))
-        for w in words
+        int(np.argmin(np.sum(np.abs(vectors - vectors[w].conj()) ** 2, axis=1))) for w in words
     ]
     return float(np.mean(book.words_to_bits(words) != book.words_to_bits(np.array(nearest))))
 
