@@ -236,3 +236,12 @@ def test_marks_tell_what_was_corrected(tmp_path):
     expected = 10 * np.log10(capture._signal_power * 10**-2.2 / signal)
     # The larger of two estimates with a standard deviation of 6 %: 3 dB are beyond 5 of them.
     assert np.all(np.abs(measured.columns["dc_db"] - expected) < 3.0)
+
+
+def test_an_offset_is_no_frame_cut_off_by_the_end(tmp_path):
+    """Silence with an offset as strong as the frames lies behind the last one."""
+    link = parse_link(LINK + "\n[frame]\nperiod_symbols = 1000\n")
+    choices = {**BASE, "snr_db": 14.0, "frames": 12, "seed": 3, "lead_out": 1500.0}
+    recording, _ = record(tmp_path, link, impairments=[DcOffset(3.0)], **choices)
+    frames = collect(recording, link)
+    assert frames.start.size == 12 and frames.lost == []

@@ -234,7 +234,7 @@ def _edge_frames(recording: Recording, link: Link, parts: ChainParts) -> EdgeFra
         return None
     samples_per_symbol = parts.bank.samples_per_symbol
     period = link.period_symbols * samples_per_symbol
-    return EdgeFrames(recording, parts.tables, period, samples_per_symbol)
+    return EdgeFrames(recording, parts.tables, period, samples_per_symbol, parts.survey)
 
 
 def _merged(edge: list[LostFrame], listed: list[LostFrame], period: float) -> list[LostFrame]:

@@ -11,10 +11,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from spatiq.receiver.cleaning import Cleaning
 from spatiq.receiver.frame_batch import NOT_FINITE, NOT_FOUND, FrameBatch, LostFrame
+from spatiq.receiver.front_end_survey import Survey
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.recording.placement import Segment
-from spatiq.recording.recording import Recording
+from spatiq.recording.recording import DEFAULT_BLOCK, Recording
 
 _MOST_FRAMES = 64  # looked for beyond the first and last frame found
 
@@ -28,12 +30,14 @@ class EdgeFrames:
         tables: which periods are active.
         period: frame period in samples.
         samples_per_symbol: nominal.
+        survey: what is taken out of the samples first.
     """
 
     recording: Recording
     tables: LinkTables
     period: float
     samples_per_symbol: float
+    survey: Survey
 
     def before(self, batch: FrameBatch) -> list[LostFrame]:
         """Frames cut off by the recording's start, from the first frame of a received batch."""
@@ -81,8 +85,13 @@ class EdgeFrames:
         """Mean power of the finite ones of samples begin..end-1, and whether all are finite."""
         end = min(max(end, begin + 1), segment.stop)
         total, count = 0.0, 0
-        for block in self.recording.blocks(start=begin, stop=end):
-            finite = block.samples[np.isfinite(block.samples)]
+        cleaning = Cleaning(self.survey)
+        first = cleaning.begin(segment, begin)
+        read = self.recording.blocks(cleaning.block_size(DEFAULT_BLOCK), first, end)
+        for block in cleaning.blocks(read, segment, first):
+            samples = block.samples[:, max(begin - first, 0) :]
+            first += block.samples.shape[1]
+            finite = samples[np.isfinite(samples)]
             total += float(np.sum(np.abs(finite).astype(np.float64) ** 2))
             count += finite.size
         return total / max(count, 1), count == (end - begin) * self.recording.channels

@@ -24,7 +24,7 @@ from spatiq.link.description import Link
 from spatiq.recording.recording import Recording
 
 CHUNK = 8192  # samples of a block, and of the pieces from which lines are taken out
-_BLOCKS = 32
+_BLOCKS = 32  # at most, and a tenth of the recording, but 4 where there are so many
 _PART = 512  # samples of a partial mean
 _CHANCE = 1e-6
 _LEAST_CONSTANT = 0.02
@@ -64,24 +64,25 @@ def survey_recording(recording: Recording, link: Link, carrier_reach: float) -> 
     blocks = _survey_blocks(recording)
     own = line_share(link)
     constant = np.array([_constant(channel, own) for channel in blocks])
-    steady = blocks - constant[:, None, None]
+    steady = blocks - constant[:, None, None].astype(np.complex64) if constant.any() else blocks
     lines = _lines(steady, carrier_reach if own > LITTLE_CARRIER else 0.0)
     return Survey(constant, lines)
 
 
-def _survey_blocks(recording: Recording) -> NDArray[np.complex128]:
+def _survey_blocks(recording: Recording) -> NDArray[np.complex64]:
     """Samples (Nr, blocks, n) of evenly spaced blocks; what is not finite is zero."""
     total = recording.n_samples
     size = min(CHUNK, total)
-    count = max(1, min(_BLOCKS, total // max(size, 1)))
+    there = total // max(size, 1)
+    count = max(1, min(_BLOCKS, max(there // 10, 4), there))
     starts = [k * (total - size) // max(count - 1, 1) for k in range(count)]
-    out = np.zeros((recording.channels, count, size), np.complex128)
+    out = np.zeros((recording.channels, count, size), np.complex64)
     for k, start in enumerate(starts):
         at = 0
         for block in recording.blocks(max(size, 1), start, start + size):
             out[:, k, at : at + block.samples.shape[1]] = block.samples
             at += block.samples.shape[1]
-    return np.where(np.isfinite(out), out, 0.0)
+    return out if np.isfinite(out).all() else np.where(np.isfinite(out), out, np.complex64(0))
 
 
 def line_share(link: Link) -> float:
@@ -96,35 +97,45 @@ def line_share(link: Link) -> float:
     return float(np.sum(np.abs(mean)) ** 2 / (power / known.shape[0]))
 
 
-def _constant(blocks: NDArray[np.complex128], own: float) -> complex:
+def _constant(blocks: NDArray[np.complex64], own: float) -> complex:
     """Constant offset of one channel's blocks (B, n), 0 when it is not significant."""
     part = min(_PART, blocks.shape[1])
     if not part:
         return 0j
     whole = blocks[:, : blocks.shape[1] // part * part]
-    means = whole.reshape(-1, part).mean(axis=1)
+    means = whole.reshape(-1, part).mean(axis=1, dtype=np.complex128)
     found = complex(means.mean())
     scatter = float(np.sum(np.abs(means - found) ** 2)) / max(means.size - 1, 1) / means.size
-    rest = float(np.mean(np.abs(blocks) ** 2)) - abs(found) ** 2
+    rest = _power(blocks) - abs(found) ** 2
     least = max(_LEAST_CONSTANT, 2 * own) * rest
     certain = -np.log(_CHANCE) * scatter
     return found if means.size > 1 and abs(found) ** 2 > max(least, certain) else 0j
 
 
-def _lines(blocks: NDArray[np.complex128], own_reach: float) -> tuple[float, ...]:
+def _power(blocks: NDArray[np.complex64]) -> float:
+    """Mean power."""
+    return float(np.mean(blocks.real**2 + blocks.imag**2, dtype=np.float64))
+
+
+def _lines(blocks: NDArray[np.complex64], own_reach: float) -> tuple[float, ...]:
     """Frequencies of lines in blocks (Nr, B, n); the signal's own lie within own_reach."""
     size = blocks.shape[2]
     if blocks.shape[1] < 2 or size < CHUNK:
         return ()
-    window = 0.5 - 0.5 * np.cos(2 * np.pi * np.arange(size) / size)
-    spectra = np.abs(scipy.fft.fft(blocks * window, axis=2)) ** 2 / (size * np.sum(window**2))
-    power = np.mean(np.abs(blocks) ** 2, axis=(1, 2))
+    power = np.array([_power(channel) for channel in blocks])
     alive = power > 0
     if not alive.any():
         return ()
-    shares = np.median(spectra[alive], axis=1) / power[alive, None]
-    floor = scipy.ndimage.median_filter(shares, (1, 65), mode="wrap")
+    window = (0.5 - 0.5 * np.cos(2 * np.pi * np.arange(size) / size)).astype(np.float32)
+    spectra = scipy.fft.fft(blocks[alive] * window, axis=2)
+    spectra = (spectra.real**2 + spectra.imag**2) / (size * np.sum(window**2))
     lobe = 2 * _LOBE + 1
+    mean = spectra.mean(axis=1) / power[alive, None]
+    # No median is above twice the mean: mostly that is all there is to do.
+    if scipy.ndimage.uniform_filter1d(mean, lobe, mode="wrap").max() * lobe < _LEAST_LINE / 2:
+        return ()
+    shares = np.median(spectra, axis=1) / power[alive, None]
+    floor = scipy.ndimage.median_filter(shares, (1, 65), mode="wrap")
     beyond = scipy.ndimage.uniform_filter1d(shares - floor, lobe, axis=1, mode="wrap") * lobe
     beyond[shares < _STANDS_OUT * floor] = 0.0
     frequency = scipy.fft.fftfreq(size)

@@ -85,7 +85,7 @@ class Interferer:
 
     def _clean(self, batch: FrameBatch, i: int, room: Room) -> None:
         lines = [Line(f, True) for f in self.lines]
-        powers: dict[float, NDArray[np.float64]] = {}
+        taken: dict[float, NDArray[np.complex128]] = {}  # line and slope of each channel, (2, Nr)
         for turn in range(_ROUNDS):
             self.refit.refit_frame(batch, i, room)
             error = _residual(room, batch.channel[i])
@@ -96,15 +96,16 @@ class Interferer:
                 lines.append(Line(new, False))
             if not lines:
                 return
-            for line, amplitude in self._take_out(batch, i, lines, error, room[4]):
+            for line, fitted in self._take_out(batch, i, lines, error, room[4]):
                 if not line.chunked:
-                    power = np.abs(amplitude) ** 2
-                    powers[line.frequency] = np.maximum(powers.get(line.frequency, 0.0), power)
+                    taken[line.frequency] = taken.get(line.frequency, 0.0) + fitted
         self.refit.refit_frame(batch, i, room)
         for k, line in enumerate(lines):
-            if not line.chunked:
+            if line.frequency in taken:
+                # Mean over the window, time running from -1 to 1.
+                power = np.abs(taken[line.frequency]) ** 2
                 batch.line_frequency[i, k] = line.frequency
-                batch.line_power[i, k] = powers[line.frequency]
+                batch.line_power[i, k] = power[0] + power[1] / 3
 
     def _line_in(
         self, error: NDArray[np.complex128], batch: FrameBatch, i: int, lines: list[Line]
@@ -144,7 +145,7 @@ class Interferer:
         error: NDArray[np.complex128],
         mean: NDArray[np.complex64],
     ) -> list[tuple[Line, NDArray[np.complex128]]]:
-        """Fit lines to the residuals and subtract them; amplitudes (Nr,) of each part."""
+        """Fit lines to the residuals, subtract them; amplitude and slope (2, Nr) of each part."""
         active = self.refit.tables.active
         instants = batch.t0[i] + batch.step[i] * active
         turned = batch.carrier[i] * instants - batch.turns[i]
@@ -166,7 +167,8 @@ class Interferer:
             return []
         basis = np.stack(columns, axis=1)
         known, *_ = np.linalg.lstsq(mean, basis, rcond=1e-6)
-        fitted, *_ = np.linalg.lstsq(basis - mean @ known, error, rcond=1e-4)  # (columns, Nr)
+        found, *_ = np.linalg.lstsq(basis - mean @ known, error, rcond=1e-4)
+        fitted = np.asarray(found, np.complex128)  # (columns, Nr)
         back = np.exp(-2j * np.pi * (batch.carrier[i] * samples - batch.turns[i]))
         total = np.zeros((error.shape[1], samples.size), np.complex128)
         for k, (line, _, begin, end) in enumerate(parts):
@@ -176,7 +178,7 @@ class Interferer:
             total += (fitted[2 * k, :, None] + fitted[2 * k + 1, :, None] * time) * wave
         batch.planes[i, :, 0] -= total.real.astype(np.float32)
         batch.planes[i, :, 1] -= total.imag.astype(np.float32)
-        return [(part[0], fitted[2 * k]) for k, part in enumerate(parts)]
+        return [(part[0], fitted[2 * k : 2 * k + 2]) for k, part in enumerate(parts)]
 
     def _chunks(self, batch: FrameBatch, i: int, chunked: bool) -> list[tuple[int, int]]:
         """Begin and end, within the window, of the chunks on which a frame lies."""
