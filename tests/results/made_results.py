@@ -49,7 +49,7 @@ def made_link(sets: tuple[tuple[int, ...], ...] = SETS, periods: int = PERIODS) 
         codebook=SimpleNamespace(
             antenna_sets=sets, bits=BITS, set_names=tuple("+".join(map(str, a)) for a in sets)
         ),
-        layout=SimpleNamespace(payload_index=np.arange(periods)),
+        layout=SimpleNamespace(payload_index=np.arange(periods), multicarrier=False),
         words_per_frame=periods,
     )
 
@@ -157,10 +157,11 @@ def write_results(
     *,
     keep_symbols: bool = False,
     soft_output: str = "none",
+    channel: str = "flat",
     recording: MadeRecording | None = None,
 ) -> Path:
     """A results file of these batches."""
-    options = ReceiverOptions(keep_symbols=keep_symbols, soft_output=soft_output)
+    options = ReceiverOptions(keep_symbols=keep_symbols, soft_output=soft_output, channel=channel)
     with ResultsWriter(path, made_link(), recording or MadeRecording(), options) as writer:
         for batch in batches:
             writer.add(batch)

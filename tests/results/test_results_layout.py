@@ -25,7 +25,8 @@ def test_a_stale_table_and_a_lost_part_are_noticed():
 def full_results(folder):
     """A results file with everything in it that can be asked for."""
     frames = made_frames(3, symbols=True, llr=True)
-    return write_results(folder / "r.h5", [frames], keep_symbols=True, soft_output="exact")
+    options = {"keep_symbols": True, "soft_output": "exact", "channel": "dispersive"}
+    return write_results(folder / "r.h5", [frames], **options)
 
 
 def documented(text):
@@ -61,7 +62,7 @@ def test_every_dataset_is_documented_and_every_documented_one_is_there(tmp_path)
 
 def test_types_and_shapes_are_as_documented(tmp_path):
     path = full_results(tmp_path)
-    sizes = {"F": 3, "A": 3, "Nr": 2, "Nt": 4, "Kp": 5, "Kw": 5, "B": 20}
+    sizes = {"F": 3, "A": 3, "Nr": 2, "Nt": 4, "Kp": 5, "Kw": 5, "B": 20, "L": 16}
     checked = 0
     group = ""
     with h5py.File(path) as file:
@@ -74,4 +75,4 @@ def test_types_and_shapes_are_as_documented(tmp_path):
                 shape = tuple(sizes[axis] for axis in entry[3].split(", "))
                 assert (dataset.dtype.str[1:], dataset.shape) == (entry[2], shape)
                 checked += 1
-    assert checked == 29
+    assert checked == 31

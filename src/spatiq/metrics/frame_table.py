@@ -163,6 +163,8 @@ class MeasuredFrames:
         lost: frames found to be lost before or between these.
         subcarriers: float64, shape (F, N, 5); sums of each subcarrier, see
             `spatiq.metrics.subcarriers.SUMS`; None without subcarriers.
+        taps: complex128, shape (F, L, Nr, Nt); impulse responses at the lags of
+            `spatiq.receiver.dispersive_plan.WIDEST`; None on a flat channel.
         matched_channels: of frames whose antennas differ in delay, by index, the channel (Nd, Nt)
             that words were decided on, see `MatchedFrame`.
         paths: figures of each receive channel and each antenna's path.
@@ -194,6 +196,7 @@ class MeasuredFrames:
     antenna_reference_energy: NDArray[np.float64] | None = None
     llr: NDArray[np.float32] | None = None
     subcarriers: NDArray[np.float64] | None = None
+    taps: NDArray[np.complex128] | None = None
     paths: PathFigures | None = None
     receive: ReceiveFigures | None = None
     matched_channels: dict[int, NDArray[np.complex128]] = field(default_factory=dict)

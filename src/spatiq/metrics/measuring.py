@@ -173,6 +173,7 @@ class Measuring:
             words_sent=sent,
             llr=batch.llr,
             subcarriers=subcarrier_sums(batch, self.link, sent),
+            taps=None if batch.dispersive is None else batch.dispersive.taps,
             paths=path_figures(batch, seen, self.link, self.recording.sample_rate),
             receive=receive_figures(batch, columns["signal_power"]),
         )

@@ -23,6 +23,7 @@ from spatiq.receiver.alignment import Alignment
 from spatiq.receiver.channel_following import channel_following
 from spatiq.receiver.detection import Detection, check_detector_applies, find_detector
 from spatiq.receiver.dispersive_chain import dispersive_stages
+from spatiq.receiver.dispersive_plan import is_dispersive
 from spatiq.receiver.echo_test import echo_test
 from spatiq.receiver.edge_frames import EdgeFrames
 from spatiq.receiver.frame_batch import FrameBatch, LostFrame
@@ -133,8 +134,7 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     spacing = float(steps[1] - steps[0]) if steps.size > 1 else 1.0
     reach = spacing / parts.pattern.transform_size
     acquisition = Acquisition(parts.bank, parts.tables, reach, link.symbol_rate_hz, locked)
-    # Subcarriers overlap in time: only these stages know them.
-    if options.channel == "dispersive" or link.layout.multicarrier:
+    if is_dispersive(link, options):
         return dispersive_stages(link, options, acquisition, clock_std, walk)
     # In differential form the channel may start from one known symbol an antenna.
     rounds = 2 if link.codebook.block == 1 else 4

@@ -18,6 +18,7 @@ from spatiq.receiver.fir_channel import (
     subcarrier_channels,
     supported_rows,
 )
+from spatiq.receiver.options import ReceiverOptions
 from spatiq.signal.codebooks import Codebook
 
 # Lags that are looked at: the flanks of a pulse ahead of the strongest path, and echoes behind it.
@@ -81,6 +82,11 @@ class DispersivePlan:
             for run in self.blocks
         ]
         return np.concatenate(responses)
+
+
+def is_dispersive(link: Link, options: ReceiverOptions) -> bool:
+    """Whether a link is received by the stages of dispersive channels: told so, or multicarrier."""
+    return options.channel == "dispersive" or link.layout.multicarrier
 
 
 def dispersive_plan(link: Link, memory: int | None) -> DispersivePlan:

@@ -19,6 +19,7 @@ import numpy as np
 
 from spatiq.metrics.frame_table import COLUMNS, Mark, MeasuredFrames
 from spatiq.metrics.path_figures import ANTENNA, RECEIVE
+from spatiq.receiver.dispersive_plan import WIDEST, is_dispersive
 from spatiq.receiver.frame_batch import LostFrame
 from spatiq.results.growing import GrowingDataset
 from spatiq.results.plain import json_text, leaves, plain
@@ -86,7 +87,8 @@ class ResultsWriter:
         path: the file to be.
         link: what was on the air.
         recording: what was measured; its digest is taken in `close`.
-        options: how it was received; `keep_symbols` adds /symbols, `soft_output` /soft.
+        options: how it was received; `keep_symbols` adds /symbols, `soft_output` /soft, a
+            dispersive channel /impulse_responses.
         overwrite: replace a file that stands at `path`.
 
     Raises:
@@ -124,6 +126,7 @@ class ResultsWriter:
         if self._soft != "none":
             self._soft_bits = link.words_per_frame * link.codebook.bits
         self._shapes = (len(sets), channels, antennas, periods)
+        self._lags = WIDEST.size if is_dispersive(link, options) else 0
 
     def __enter__(self) -> ResultsWriter:
         """Create the temporary file with all its datasets, empty."""
@@ -189,6 +192,11 @@ class ResultsWriter:
             add(name, "f8", (channels if figure in RECEIVE else antennas,), meaning, unit)
         for name, (_, unit, meaning) in PER_RECEIVE.items():
             add(name, "f8", (channels,), meaning, unit)
+        for part in ("real", "imag") if self._lags else ():
+            meaning = f"{part} part of the estimated impulse responses, first axis the lag"
+            add(f"impulse_responses/{part}", "f8", (self._lags, channels, antennas), meaning)
+            dataset = file[f"impulse_responses/{part}"]
+            dataset.attrs["lags"] = np.arange(WIDEST.first, WIDEST.last + 1)
         if periods:
             for part in ("real", "imag"):
                 meaning = f"{part} part of the received payload vectors, carrier removed"
@@ -238,6 +246,11 @@ class ResultsWriter:
         for name, (attribute, _, _) in PER_RECEIVE.items():
             found = frames.receive is not None
             values[name] = attrgetter(attribute)(frames.receive) if found else nothing
+        if self._lags:
+            shape = (frames.count, self._lags, *frames.channel.shape[1:])
+            taps = np.full(shape, np.nan) if frames.taps is None else frames.taps
+            values["impulse_responses/real"] = taps.real
+            values["impulse_responses/imag"] = taps.imag
         if "symbols/real" in self._growing:
             if frames.symbols is None:
                 raise ValueError("the options keep the symbols, but this batch has none")

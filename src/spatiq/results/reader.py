@@ -143,6 +143,20 @@ class Results:
         decided = self.rows("symbols/words_decided", start, stop)
         return decided, self.rows("symbols/words_sent", start, stop)
 
+    def impulse_responses(
+        self, start: int = 0, stop: int | None = None
+    ) -> tuple[NDArray[np.int64], NDArray[np.complex128]]:
+        """Lags in symbol periods, (L,), and impulse responses, complex128, shape (n, L, Nr, Nt).
+
+        Raises:
+            InputError: the channel was taken for flat.
+        """
+        if "impulse_responses" not in self.file:
+            expected = "results measured on a dispersive channel"
+            raise InputError(self.path, "impulse_responses", "none", expected)
+        lags = np.asarray(self.file["impulse_responses/real"].attrs["lags"], np.int64)
+        return lags, self._complex("impulse_responses", np.complex128, start, stop)
+
     @property
     def llr_kind(self) -> str:
         """How the log-likelihood ratios were taken: "exact", "max-log", or "none" when not."""
