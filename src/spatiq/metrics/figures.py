@@ -29,6 +29,10 @@ from spatiq.recording.recording import Recording
 Columns = dict[str, NDArray[Any]]
 # Probability that chance raises the payload's noise so far over that of the known symbols.
 _LOST_TRACK = 1e-6
+_OF_THE_CHANNEL = (
+    "signal_power", "noise_power", "snr", "evm_percent", "evm_db", "evm_error", "evm_reference",
+    "equalised", "predicted", "implementation",
+)  # fmt: skip
 
 
 def as_received(batch: FrameBatch) -> FrameBatch:
@@ -85,6 +89,19 @@ def fill_figures(
         front_end = fill_front_end(columns, batch, recording.sample_rate, inverted)
     _marks(columns, batch, numbering, link)
     columns["marks"] |= front_end
+    if link.codebook.block > 1:
+        _withhold(columns, white, sums)
+
+
+def _withhold(columns: Columns, white: FrameBatch, sums: NDArray[np.float64]) -> None:
+    """In differential form words do not need the channel; figures that do are missing where the
+    channel's estimate does not explain what was received."""
+    lost = (columns["marks"] & np.uint32(Mark.TRACKING_LOST)) > 0
+    for name in columns:
+        if name.startswith(_OF_THE_CHANNEL):
+            columns[name][lost] = np.nan
+    white.noise[lost] = np.nan
+    sums[lost] = 0.0
 
 
 def _synchronisation(columns: Columns, batch: FrameBatch, link: Link, recording: Recording) -> None:

@@ -129,7 +129,7 @@ class ReceivePool:
             spread = np.sqrt(1.0 / self._weights)
             gain, phase = gain_and_phase(value[0])
             each = 2 * spread[0] / np.sqrt(2)
-            power = self._power[0] / self._power[1]
+            power = self._power[0] / self._power[1] if self._power[1] else np.nan
             reach = spread[0] * np.sqrt(-np.log(1 - confidence))
             rows = {
                 "iq_gain_db": gain,

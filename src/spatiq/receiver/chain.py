@@ -22,6 +22,7 @@ from spatiq.receiver.acquisition import Acquisition
 from spatiq.receiver.alignment import Alignment
 from spatiq.receiver.channel_following import channel_following
 from spatiq.receiver.detection import Detection, check_detector_applies, find_detector
+from spatiq.receiver.differential_whitening import DifferentialWhitening
 from spatiq.receiver.dispersive_chain import dispersive_stages
 from spatiq.receiver.dispersive_plan import is_dispersive
 from spatiq.receiver.echo_test import echo_test
@@ -38,11 +39,13 @@ from spatiq.receiver.matched_filter import FilterBank, filter_bank
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.refit import Refit
 from spatiq.receiver.soft_output import SoftOutput, check_soft_output
+from spatiq.receiver.standing_frames import StandingFrames
 from spatiq.receiver.stretches import Stretch
 from spatiq.receiver.tracking import Tracking
 from spatiq.receiver.whitening import Whitening
 from spatiq.recording.placement import Segment
 from spatiq.recording.recording import Recording
+from spatiq.signal.codebooks import DifferentialCodebook
 
 Stage = Callable[[FrameBatch], FrameBatch]
 
@@ -139,7 +142,6 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     # In differential form the channel may start from one known symbol an antenna.
     rounds = 2 if link.codebook.block == 1 else 4
     refit = Refit(parts.bank, parts.tables, clock_std, walk, rounds)
-    following = channel_following(refit, link.layout.payload_index.size)
     expected = expected_correlation(link.pulse, parts.bank.samples_per_symbol)
     constant, lines = parts.survey.constant, parts.survey.lines
     if options.spectrum == "inverted":
@@ -151,20 +153,21 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     ]
     front_end = FrontEnd(refit, constant, expected)
     searched = line_share(link) < LITTLE_CARRIER
-    check_detector_applies(options.detector, link.codebook)
-    stages: list[Stage] = [
-        *reception,
+    corrections: list[Stage] = [
         front_end,
         Interferer(refit, front_end, lines, searched, parts.segments, expected),
         Alignment(refit, reception),
-        following,
-        Whitening(following),
-        Detection(
-            link.codebook,
-            find_detector(options.detector),
-            options.compare_two_step,
-            link.layout.payload_runs(),
-        ),
+    ]
+    if link.codebook.block > 1:
+        corrections = [StandingFrames(corrections, link.layout.payload_index.size)]
+    check_detector_applies(options.detector, link.codebook)
+    runs = link.layout.payload_runs()
+    detector = find_detector(options.detector)
+    stages: list[Stage] = [
+        *reception,
+        *corrections,
+        *_against_the_channel(link, refit, runs),
+        Detection(link.codebook, detector, options.compare_two_step, runs),
     ]
     if link.codebook.block == 1:
         stages.append(echo_test(link, parts.bank.samples_per_symbol))
@@ -173,6 +176,15 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
         amplitude = link.layout.payload_amplitude
         stages.append(SoftOutput(link.codebook, amplitude, options.soft_output))
     return stages
+
+
+def _against_the_channel(link: Link, refit: Refit, runs: tuple[int, ...]) -> list[Stage]:
+    """Channels that move and noise that is not white. In differential form the words follow the
+    channel by themselves, and the noise is told without it."""
+    if isinstance(link.codebook, DifferentialCodebook):
+        return [DifferentialWhitening(refit, link.codebook, runs)]
+    following = channel_following(refit, link.layout.payload_index.size)
+    return [following, Whitening(following)]
 
 
 def receive(

@@ -11,6 +11,7 @@ T. W. Anderson, "An Introduction to Multivariate Statistical Analysis", ch. 10; 
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -21,7 +22,7 @@ from spatiq.receiver.channel_following import ChannelFollowing
 from spatiq.receiver.frame_batch import FrameBatch
 
 _CHANCE = 1e-6  # that white noise is taken for coloured, per frame
-_ROUNDS = 3  # decisions improve with whitening, and the estimate of the noise with them
+ROUNDS = 3  # decisions improve with whitening, and the estimate of the noise with them
 _DEAD = 1e-9  # share of the largest noise below which a direction carries nothing at all
 
 
@@ -36,30 +37,42 @@ class Whitening:
         channels = batch.channel.shape[1]
         if channels < 2:
             return batch
-        limit = float(scipy.stats.chi2.isf(_CHANCE, channels * channels - 1))
+        limit = uneven_beyond(channels)
         for i in range(batch.count):
             periods = self.following.refit.tables.active.size - np.count_nonzero(
                 batch.antenna_energy[i]
             )
-            for _ in range(_ROUNDS):
+            for _ in range(ROUNDS):
                 if unevenness(batch.residual[i], int(periods)) <= limit:
                     break
-                self._whiten(batch, i)
+                whiten_frame(batch, i, batch.residual[i], self.following.refit_frame)
         return batch
 
-    def _whiten(self, batch: FrameBatch, i: int) -> None:
-        whitener, alive = whitening_matrix(batch.residual[i])
-        real, imag = batch.planes[i, :, 0], batch.planes[i, :, 1]
-        turned = whitener.astype(np.complex64) @ (real + 1j * imag)
-        batch.planes[i, :, 0], batch.planes[i, :, 1] = turned.real, turned.imag
-        batch.channel[i] = whitener @ batch.channel[i]
-        if batch.moving and (moving := batch.moving[i]) is not None:
-            batch.moving[i] = moving.through(whitener)
-        batch.whitener[i], batch.coloured[i] = whitener @ batch.whitener[i], True
-        self.following.refit_frame(batch, i)
-        if alive < batch.channel.shape[1]:
-            # Directions without any noise or signal are no degrees of freedom.
-            batch.noise[i] *= batch.channel.shape[1] / alive
+
+def whiten_frame(
+    batch: FrameBatch,
+    i: int,
+    covariance: NDArray[np.complex128],
+    refit_frame: Callable[[FrameBatch, int], None],
+) -> None:
+    """Turn frame i to white noise, of the covariance given before (Nr, Nr), and refit it."""
+    whitener, alive = whitening_matrix(covariance)
+    real, imag = batch.planes[i, :, 0], batch.planes[i, :, 1]
+    turned = whitener.astype(np.complex64) @ (real + 1j * imag)
+    batch.planes[i, :, 0], batch.planes[i, :, 1] = turned.real, turned.imag
+    batch.channel[i] = whitener @ batch.channel[i]
+    if batch.moving and (moving := batch.moving[i]) is not None:
+        batch.moving[i] = moving.through(whitener)
+    batch.whitener[i], batch.coloured[i] = whitener @ batch.whitener[i], True
+    refit_frame(batch, i)
+    if alive < batch.channel.shape[1]:
+        # Directions without any noise or signal are no degrees of freedom.
+        batch.noise[i] *= batch.channel.shape[1] / alive
+
+
+def uneven_beyond(channels: int) -> float:
+    """Statistic of `unevenness` that white noise over Nr channels passes by rare chance only."""
+    return float(scipy.stats.chi2.isf(_CHANCE, channels * channels - 1))
 
 
 def unevenness(covariance: NDArray[np.complex128], periods: int) -> float:
