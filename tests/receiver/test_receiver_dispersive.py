@@ -185,3 +185,19 @@ def test_measure_command(tmp_path):
     assert summary["ber"]["errors"] == 0
     assert summary["predicted_ber"] is None
     assert summary["implementation_loss_db"] is None
+
+
+@pytest.mark.parametrize(
+    "sections",
+    [
+        SYNC + IN_TURN + payload_section(3),
+        payload_section(100) + SYNC + IN_TURN + payload_section(40),
+        SYNC + IN_TURN + payload_section(1) + SYNC + payload_section(70, "power_db = 3"),
+    ],
+)
+def test_payload_anywhere_and_of_any_length(tmp_path, sections):
+    """Runs shorter than the memory, and payload ahead of the first known symbols."""
+    link = make_link(sections=sections)
+    recording, capture = room(tmp_path, link, snr_db=26, receive_channels=3)
+    frames = collect(recording, link, DISPERSIVE)
+    np.testing.assert_array_equal(frames.words, capture.truth.words())

@@ -75,6 +75,8 @@ def test_causal_form_is_the_likelihood(window):
         (SSK_4, Window(-1, 2), 6),
         (PART_OF_3, Window(0, 3), 7),
         (QPSK_2, Window(0, 0), 5),
+        (QPSK_2, Window(-2, 5), 3),
+        (SSK_4, Window(0, 3), 2),
     ],
 )
 def test_equals_exhaustive_search(book, window, periods):

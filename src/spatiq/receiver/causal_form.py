@@ -28,7 +28,7 @@ class NormalEquations:
     """H^H H and H^H y of N symbol periods and Nt antennas.
 
     Attributes:
-        blocks: complex128 (N, L, Nt, Nt); block (i, i + d) of H^H H at [i, d].
+        blocks: complex128 (N, min(L, N), Nt, Nt); block (i, i + d) of H^H H at [i, d].
         cross: complex128 (N, Nt); H^H y.
     """
 
@@ -56,8 +56,9 @@ def normal_equations(
     inside = (source >= 0) & (source < periods)
     valid = inside & heard[np.clip(source, 0, periods - 1)]
     weight = valid.astype(np.float64)
-    blocks = np.zeros((periods, lags, antennas, antennas), np.complex128)
-    for d in range(lags):
+    reach = min(lags, periods)  # no two of the run's periods lie further apart
+    blocks = np.zeros((periods, reach, antennas, antennas), np.complex128)
+    for d in range(reach):
         # y[k] holds G[k - i] x[i] and G[k - i - d] x[i + d].
         products = taps[d:].conj().transpose(0, 2, 1) @ taps[: lags - d]
         made = weight[:, d:] @ products.reshape(lags - d, -1)
@@ -90,7 +91,7 @@ def band_matrix(equations: NormalEquations, load: Complex) -> Complex:
 
 
 def causal_form(equations: NormalEquations, load: float) -> tuple[Complex, Complex]:
-    """z (N, Nt), and the blocks of A: (N, L, Nt, Nt), [k, l] what x[k - l] does to z[k]."""
+    """z (N, Nt), and the blocks of A: (N, min(L, N), Nt, Nt), [k, l] what x[k - l] does to z[k]."""
     periods, lags, antennas, _ = equations.blocks.shape
     band = band_matrix(equations, load * np.eye(antennas, dtype=np.complex128))
     factor = scipy.linalg.cholesky_banded(band, lower=True, check_finite=False)

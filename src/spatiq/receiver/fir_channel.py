@@ -154,7 +154,7 @@ class FirFit:
 
     def without(self, shifted: Complex, received: Complex) -> FirFit:
         """The fit of all rows but some that it was given."""
-        flat = shifted[:, :, self._sends].reshape(len(shifted), -1)
+        flat = shifted[:, :, self._sends].reshape(len(shifted), self._window.size * self._count)
         rest = copy(self)
         rest._rows = self._rows - len(shifted)
         rest._gram = self._gram - flat.conj().T @ flat
