@@ -70,7 +70,8 @@ def batch_command(
     """Measure all recordings, keep results and a catalogue, list what went wrong.
 
     Run it again, after whatever happened: only what is missing or has changed is done. Ends with 0
-    when all is measured, with 3 when some recordings failed or were put off.
+    when all is measured, with 3 when some recordings failed or were put off. The rule file, results
+    and clusters are described by `spatiq catalogue manual`.
 
     Example: spatiq batch /data/night --rules night.rules.toml --out /data/night-results
     """

@@ -87,7 +87,7 @@ def run_batch(request: BatchRequest) -> int:
         _workers(request) as workers,
     ):
         clear_leftovers(folder, claims)
-        _say(f"{workers.place}; a worker takes about 0.3 to 0.5 GB of memory (docs: batch.md)")
+        _say(f"{workers.place}, less than 0.5 GB of memory each (spatiq catalogue manual)")
         tally = _rounds(request, terms, catalogue, claims, workers, split_above)
         clear_leftovers(folder, claims, finished=not tally.growing and not tally.elsewhere)
         figures = night_figures(catalogue)

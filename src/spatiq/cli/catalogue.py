@@ -105,8 +105,21 @@ def export_command(
     typer.echo("\n".join(f"written: {path}" for path in written))
 
 
+def manual_command() -> None:
+    """Print how a batch works, the rule file, and the catalogue's tables.
+
+    Example: spatiq catalogue manual
+    """
+    from importlib.resources import files
+
+    texts = files("spatiq.batch")
+    for name in ("manual.md", "catalogue.md"):
+        typer.echo(texts.joinpath(name).read_text(encoding="utf-8"))
+
+
 catalogue_app.command("night")(guarded(night_command))
 catalogue_app.command("list")(guarded(list_command))
 catalogue_app.command("show")(guarded(show_one_command))
 catalogue_app.command("failed")(guarded(failed_command))
 catalogue_app.command("export")(guarded(export_command))
+catalogue_app.command("manual")(guarded(manual_command))

@@ -9,6 +9,7 @@ from rich.table import Table
 from rich.text import Text
 
 from spatiq.cli.printing import wide_console
+from spatiq.metrics.intervals import clopper_pearson
 from spatiq.results.plain import json_text
 from spatiq.results.wording import DASH, count, number, printable, ratio
 
@@ -58,8 +59,11 @@ def print_one(known: dict[str, Any]) -> None:
     if figures is None:
         console.print(Text(f"  {recording['state']}: {printable(recording['reason'])}"))
         return
-    left_out = {"measurement", "summary", "group_name"}
+    left_out = {"measurement", "summary", "group_name", "ber", "ber_low", "ber_high"}
     facts = Table.grid(padding=(0, 3))
+    facts.add_row(
+        "  bit error ratio", ratio(figures["ber"], figures["ber_high"], figures["bit_errors"])
+    )
     for name, value in figures.items():
         if name not in left_out and value is not None:
             text = number(value, digits=5) if isinstance(value, float) else printable(value)
@@ -82,9 +86,17 @@ def _trend(rows: list[dict[str, Any]]) -> Table:
             number(row["start_s"], "s"),
             count(row["frames_found"]),
             count(row["frames_lost"]),
-            number(row["bit_errors"] / bits) if bits else DASH,
+            _ratio_of_counts(row["bit_errors"], bits),
             number(row["snr_db"], "dB"),
             number(row["cfo_hz"], "Hz", 4),
             f"{row['outage_frames']} of {row['outage_of']}",
         )
     return table
+
+
+def _ratio_of_counts(errors: int, trials: int) -> str:
+    """A ratio, or its upper bound where no error was seen."""
+    if not trials:
+        return DASH
+    _, high = clopper_pearson(errors, trials, 0.95)
+    return ratio(errors / trials, float(high), errors)
