@@ -110,6 +110,19 @@ def test_what_a_detector_cannot_do_is_said_before_anything_is_received(name):
     check_detector_applies(name, EXAMPLES["spatial-modulation"][1])
 
 
+def nearest(y, channel, noise, codebook):
+    """As the README gives it."""
+    seen = channel @ codebook.vectors.T
+    return (abs(y[:, :, None] - seen) ** 2).sum(axis=1).argmin(axis=1)
+
+
+def test_ones_own_detector_by_one_call():
+    report = check_detector(nearest, schemes=["spatial-modulation", "vector-table"])
+    assert len(report.kept) == 9 and not report.refused
+    with pytest.raises(InputError, match="schemes: found beam; expected spatial-modulation"):
+        check_detector(nearest, schemes=["beam"])
+
+
 POINTS = [
     *(named(n, of).points for n in ("BPSK", "QPSK", "8PSK", "16QAM", "64QAM", "256QAM")
       for of in ("3gpp", "802.11")),

@@ -10,7 +10,7 @@ maximum likelihood is held against an exhaustive search in double precision.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -50,20 +50,28 @@ class ContractReport:
         return "\n".join(lines)
 
 
-def check_detector(detector: Detector, *, exact: bool = True, seed: int = 1) -> ContractReport:
+def check_detector(
+    detector: Detector, *, exact: bool = True, schemes: Sequence[str] = (), seed: int = 1
+) -> ContractReport:
     """Put a detector through the contract.
 
     Args:
         detector: see `spatiq.receiver.detection`.
         exact: it claims the decisions of an exhaustive search; otherwise only what it must do
             without noise and the form of what it returns are looked at.
+        schemes: registered names of those to be tried; none: all.
         seed: of the made-up channels, words and noise.
 
     Raises:
         InputError: what the detector does that it must not do; or that it refuses every codebook.
     """
     kept, refused = [], []
-    for scheme, books in scheme_examples().items():
+    examples = scheme_examples()
+    for scheme in schemes:
+        if scheme not in examples:
+            raise InputError("detector contract", "schemes", scheme, ", ".join(examples))
+    chosen = {s: books for s, books in examples.items() if not schemes or s in schemes}
+    for scheme, books in chosen.items():
         for i, book in enumerate(books):
             name = f"{scheme} {i}: {book.antennas} antennas, {book.bits} bits"
             try:
