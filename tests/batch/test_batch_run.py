@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import errno
 import json
+import multiprocessing
 import os
+import resource
 import shutil
 import subprocess
 import sys
 import time
-from concurrent.futures import Future
+from concurrent.futures import Future, ProcessPoolExecutor
 
 import pytest
 from batch_cases import PERIOD, differences, write_capture, write_link
@@ -21,7 +23,7 @@ from spatiq.batch.inputs import find_items
 from spatiq.batch.rules import one_link
 from spatiq.batch.run import Round, clear_leftovers, is_folder_fault, prepare_folder
 from spatiq.batch.survey import Terms
-from spatiq.batch.work import RESULTS_FOLDER, StillGrowing, run_task
+from spatiq.batch.work import RESULTS_FOLDER, Job, StillGrowing, Task, measure_whole, run_task
 from spatiq.errors import InputError
 from spatiq.receiver.options import ReceiverOptions
 
@@ -276,6 +278,26 @@ def test_a_full_or_read_only_results_folder_ends_the_run(bench, number):
         one_round(bench, HereAndNow([None, full]))
     assert [s[0] for s in states(bench).values()] == ["measured"]
     assert one_round(bench)[0].measured == 2  # what was under way is not lost
+
+
+def _small_files():
+    resource.setrlimit(resource.RLIMIT_FSIZE, (60_000, resource.RLIM_INFINITY))
+
+
+def test_a_file_that_cannot_grow_is_told_as_what_it_is(bench):
+    """The system refuses to let files grow, as it does on a full disk; HDF5 says so in its own way,
+    and only in a process of its own does that leave nothing behind."""
+    one_round(bench)
+    shutil.rmtree(bench / "results")
+    prepare_folder(bench / "results")
+    (item,) = find_items([str(bench / "night" / "c")])
+    job = Job(item, bench / "lab.link.toml", ReceiverOptions(), bench / "results", 1e-2)
+    context = multiprocessing.get_context("spawn")
+    with ProcessPoolExecutor(1, mp_context=context, initializer=_small_files) as one:
+        fault = one.submit(run_task, Task(measure_whole, job)).exception()
+    assert isinstance(fault, OSError) and fault.errno == errno.EFBIG
+    assert is_folder_fault(fault, bench / "results")
+    assert list((bench / "results" / RESULTS_FOLDER).iterdir()) == []
 
 
 def test_which_faults_are_the_folders(tmp_path):

@@ -7,7 +7,6 @@ after them, and a results file without an entry is entered, not measured again, 
 
 from __future__ import annotations
 
-import errno
 import os
 import shutil
 from collections.abc import Callable, Sequence
@@ -22,13 +21,12 @@ from spatiq.batch.executors import WorkerDied, Workers
 from spatiq.batch.inputs import Item
 from spatiq.batch.steps import SplitSteps, Steps, WholeSteps
 from spatiq.batch.survey import Case, State, Survey, Terms
-from spatiq.batch.work import RESULTS_FOLDER, Outcome, StillGrowing, Task
+from spatiq.batch.work import RESULTS_FOLDER, Outcome, StillGrowing, Task, folder_fault
 from spatiq.errors import InputError
 from spatiq.results.provenance import sha256_text
 
 WORK_FOLDER = ".work"
 _ATTEMPTS = 3  # at a task whose worker dies
-_FULL = (errno.ENOSPC, errno.EDQUOT, errno.EROFS)
 
 
 @dataclass
@@ -313,10 +311,7 @@ def clear_leftovers(folder: Path, claims: Claims, *, finished: bool = False) -> 
 
 def is_folder_fault(fault: BaseException, folder: Path) -> bool:
     """Whether the results folder is full, read-only or gone: no recording's fault."""
-    text = str(fault)
-    if isinstance(fault, OSError) and fault.errno in _FULL:
-        return True
-    if isinstance(fault, OSError | InputError) and any(os.strerror(n) in text for n in _FULL):
+    if isinstance(fault, OSError | InputError) and folder_fault(fault) is not None:
         return True
     place = Path(fault.source) if isinstance(fault, InputError) else None
     if isinstance(fault, OSError) and fault.filename is not None:
@@ -331,6 +326,9 @@ def fault_text(fault: BaseException) -> str:
         return str(fault)
     if isinstance(fault, WorkerDied):
         return f"{fault} {_ATTEMPTS} times: out of memory?"
+    if isinstance(fault, OSError) and fault.strerror:
+        place = "" if fault.filename is None else f" ({os.fsdecode(fault.filename)})"
+        return f"{fault.strerror}{place}"
     if isinstance(fault, MemoryError):
         return f"not enough memory: {fault}"
     return " ".join(f"unforeseen {type(fault).__name__}: {fault}".split())

@@ -6,6 +6,7 @@ appears whole or not at all, and doing a task twice, even at the same time, does
 
 from __future__ import annotations
 
+import errno
 import os
 import resource
 import sys
@@ -39,6 +40,7 @@ from spatiq.results.hdf5 import ResultsWriter
 from spatiq.results.reader import open_results
 
 RESULTS_FOLDER = "recordings"
+NO_ROOM = (errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EFBIG)
 GROWING = "changed while it was measured"
 
 
@@ -134,13 +136,37 @@ def run_task(task: Task) -> Outcome:
     """Do a task in this process.
 
     Raises:
-        InputError: the recording, the link or the results folder is at fault.
+        InputError: the recording or the link is at fault.
+        OSError: the results folder is full or closed; its number says which.
     """
     began = time.thread_time()
-    outcome = task.function(task.job, *task.arguments)
+    try:
+        outcome = task.function(task.job, *task.arguments)
+    except (OSError, RuntimeError) as error:
+        number = folder_fault(error)
+        if number is None:
+            raise
+        raise OSError(number, os.strerror(number), str(task.job.folder)) from error
     outcome.seconds = time.thread_time() - began
     outcome.peak_bytes = peak_bytes()
     return outcome
+
+
+def folder_fault(error: BaseException) -> int | None:
+    """Number of the fault when a file could not be written for want of room or leave.
+
+    The HDF5 library tells it in the text only, and fails once more, in other words, as the file is
+    closed: all errors that led to this one are looked at.
+    """
+    seen: BaseException | None = error
+    while seen is not None:
+        for number in NO_ROOM:
+            if isinstance(seen, OSError) and seen.errno == number:
+                return number
+            if f"errno = {number}," in str(seen) or os.strerror(number) in str(seen):
+                return number
+        seen = seen.__cause__ or seen.__context__
+    return None
 
 
 def peak_bytes() -> int:
