@@ -35,7 +35,7 @@ def test_the_summary_comes_first_and_says_whether_it_was_good(tmp_path):
         "bit error ratio < 3.69e-06 upper bound (95 %) 0 wrong of 1,000,000 bits"
     )
     assert line(text, "antenna errors") == (
-        "antenna errors 0.01 0.008 to 0.0124 (95 %) 100 wrong of 10,000 periods"
+        "antenna errors 0.01 0.008 to 0.0124 (95 %) 100 wrong of 10,000 words"
     )
     assert line(text, "frames found") == (
         "frames found 98 of 100 2 lost 1 cut off by the end, 1 not found"

@@ -70,7 +70,7 @@ def _group_table(group: dict[str, Any]) -> Table:
             listing(frames["lost_by_reason"]),
         ),
         ("bit error ratio", ratio_of(ber), _worth(ber), _basis(ber, "bits")),
-        ("antenna errors", ratio_of(antenna), _worth(antenna), _basis(antenna, "periods")),
+        ("antenna errors", ratio_of(antenna), _worth(antenna), _basis(antenna, "words")),
         ("EVM rms", number(group["evm_percent"], "%"), "", "energies added over all frames"),
         ("SNR", *_spread(group["snr_db"], "dB"), "of recordings' means"),
         ("carrier offset", *_spread(group["cfo_hz"], "Hz"), "of recordings' means"),

@@ -177,7 +177,7 @@ class ResultsWriter:
             )
 
         confusion = "per frame; row = antenna set sent, column = antenna set decided"
-        add("confusion/per_frame", "u4", (sets, sets), confusion, "symbol periods")
+        add("confusion/per_frame", "u4", (sets, sets), confusion, "words")
         for part in ("real", "imag"):
             channel = f"{part} part of the estimated channel, row = receive, column = transmit"
             add(f"channel/{part}", "f8", (channels, antennas), channel)
@@ -290,7 +290,7 @@ class ResultsWriter:
             dataset.finish()
         file = self._file
         total = file["confusion"].create_dataset("total", data=self._confusion)
-        total.attrs["unit"] = "symbol periods"
+        total.attrs["unit"] = "words"
         total.attrs["meaning"] = "sum of per_frame over all frames"
         mask = file["confusion"].create_dataset("antenna_sets", data=self._set_mask)
         mask.attrs["unit"] = ""

@@ -49,7 +49,7 @@ def show_results(results: Results, console: Console, *, rows: int = 20) -> None:
         console.print(Text(f"  {_NO_FRAME}"))
     for title, table in (
         (
-            "antenna sent (rows) and decided (columns): periods, share of row",
+            "antenna sent (rows) and decided (columns): words, share of row",
             confusion_table(results),
         ),
         ("transmit antennas", antenna_table(summary)),
@@ -111,8 +111,8 @@ def _errors(summary: dict[str, Any]) -> Iterator[Line]:
     loss = summary.get("implementation_loss_db")
     worth = interval(pick(loss, "low"), pick(loss, "high"), "dB")
     yield "implementation loss", fixed(pick(loss, "value"), "dB"), worth, ""
-    yield _ratio_line("antenna errors", summary.get("antenna_error_ratio"), level, "periods")
-    yield _ratio_line("symbol errors", summary.get("symbol_error_ratio"), level, "periods")
+    yield _ratio_line("antenna errors", summary.get("antenna_error_ratio"), level, "words")
+    yield _ratio_line("symbol errors", summary.get("symbol_error_ratio"), level, "words")
     two_step = summary.get("two_step_ber")
     if pick(two_step, "compared"):
         yield _ratio_line("two-step detector", two_step, level, "bits")

@@ -67,7 +67,7 @@ def confusion_table(results: Results) -> Table | None:
 def _frequent_confusions(matrix: np.ndarray[Any, Any], names: list[str]) -> Table:
     sent = matrix.sum(axis=1)
     right = int(np.trace(matrix))
-    table = _table("sent", "decided", "periods", "share of sent")
+    table = _table("sent", "decided", "words", "share of sent")
     table.add_row("  right", "", "", count(right), _share(right, int(sent.sum())))
     wrong = matrix - np.diag(np.diag(matrix))
     order = np.argsort(-wrong, axis=None, kind="stable")[:_LISTED]
