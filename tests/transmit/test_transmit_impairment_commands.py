@@ -22,6 +22,7 @@ from spatiq.transmit.inversion import SpectralInversion
 from spatiq.transmit.iq_imbalance import IqImbalance
 from spatiq.transmit.losses import Losses
 from spatiq.transmit.moving_channel import Doppler
+from spatiq.transmit.narrow_band import NarrowBandNoise
 from spatiq.transmit.noise_shape import NoiseShape
 from spatiq.transmit.phase_noise_mask import PhaseNoiseMask
 from spatiq.transmit.rotation import WienerPhaseNoise
@@ -87,6 +88,12 @@ CASES = {
     },
     "--interferer 1e5:-10 --interferer -2e5:-20:0@0,-inf": {
         "arriving": [Interferer(1e5, -10.0), Interferer(-2e5, -20.0, [1, 0])]
+    },
+    "--interferer 1e5/2e4:-10 --interferer -2e5/500:-20:0@0,-inf": {
+        "arriving": [
+            NarrowBandNoise(1e5, 2e4, -10.0),
+            NarrowBandNoise(-2e5, 500.0, -20.0, [1, 0]),
+        ]
     },
     "--gain-step 2.5:-6 --gain-step 3:1 --frame-gain 1": {
         "gains": GainPlan(((2.5, -6.0), (3.0, 1.0)), 1.0)
@@ -187,6 +194,8 @@ def test_a_collection_tells_the_gaps_in_each_recording(link_file, tmp_path):
         ("--phase-noise 1e3:-80,1e2:-90", "ascending"),
         ("--interferer 1e5", "--interferer"),
         ("--interferer 1e5:-3:0", "signature"),
+        ("--interferer 1e5/:-3", "--interferer"),
+        ("--interferer 1e5/0:-3", "width"),
         ("--gain-step 2", "--gain-step"),
         ("--dead first", "--dead"),
         ("--dead 1@", "--dead"),

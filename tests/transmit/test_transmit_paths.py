@@ -15,6 +15,7 @@ from spatiq.transmit.inversion import SpectralInversion
 from spatiq.transmit.iq_imbalance import IqImbalance
 from spatiq.transmit.losses import Losses
 from spatiq.transmit.moving_channel import Doppler
+from spatiq.transmit.narrow_band import NarrowBandNoise
 from spatiq.transmit.noise_shape import NoiseShape
 from spatiq.transmit.phase_noise_mask import PhaseNoiseMask
 from spatiq.transmit.rotation import WienerPhaseNoise
@@ -141,6 +142,7 @@ EVERYTHING = {
     "all-pole": {"noise_shape": NoiseShape(feedback=(-0.9,))},
     "fir": {"noise_shape": NoiseShape((1.0, 0.4, 0.1))},
     "interferer": {"arriving": [Interferer(1e5, -10.0), Interferer(-2e5, -20.0)]},
+    "narrow-band noise": {"arriving": [NarrowBandNoise(1e5, 2e4, -10.0)]},
     "gain": {"gains": GainPlan(((2.5, 6.0),), 2.0)},
     "front end": {
         "impairments": [

@@ -5,7 +5,6 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 from typing import Any
 
-from campaign.narrow_band import NarrowBandNoise
 from spatiq.transmit.clipping import Clipping
 from spatiq.transmit.dc_offset import DcOffset
 from spatiq.transmit.dead_channel import DeadChannels
@@ -15,6 +14,7 @@ from spatiq.transmit.inversion import SpectralInversion
 from spatiq.transmit.iq_imbalance import IqImbalance
 from spatiq.transmit.losses import Losses
 from spatiq.transmit.moving_channel import Doppler
+from spatiq.transmit.narrow_band import NarrowBandNoise
 from spatiq.transmit.noise_shape import NoiseShape
 from spatiq.transmit.phase_noise_mask import PhaseNoiseMask
 from spatiq.transmit.rotation import WienerPhaseNoise

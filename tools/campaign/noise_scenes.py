@@ -7,9 +7,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from campaign.narrow_band import NarrowBandNoise
 from spatiq.transmit.front_end import Impairment, begin_all
 from spatiq.transmit.interferer import Interferer
+from spatiq.transmit.narrow_band import NarrowBandNoise
 from spatiq.transmit.noise_shape import NoiseShape, ShapedNoise, noise_covariance
 
 SAMPLES_PER_SYMBOL = 4.0

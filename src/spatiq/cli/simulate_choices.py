@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
+    from spatiq.transmit.front_end import Impairment
     from spatiq.transmit.second_transmitter import OtherTransmitter
 
 OTHER_KEYS = ("seed", "delay", "power", "cfo", "clock-ppm", "doppler", "spacing", "frames")
@@ -171,7 +172,6 @@ def noise_choices(
     power: str, correlation: float | None, taps: str, feedback: str, interferers: Sequence[str]
 ) -> dict[str, Any]:
     """Noise over the receive channels, its colour, interference."""
-    from spatiq.transmit.interferer import Interferer
     from spatiq.transmit.noise_shape import NoiseShape
 
     expected = "numbers with commas between"
@@ -180,20 +180,29 @@ def noise_choices(
     shape = None
     if numerator is not None or denominator is not None:
         shape = NoiseShape(tuple(numerator or (1.0,)), tuple(denominator or ()))
-    arriving = []
-    for text in interferers:
-        frequency, _, rest = text.partition(":")
-        level, _, signature = rest.partition(":")
-        pair = f"{frequency}:{level}"
-        form = "HZ:DB, or HZ:DB:SIGNATURE with dB@degrees of each receive channel"
-        hertz, decibels = number_pair(pair, "--interferer", form)
-        arriving.append(Interferer(hertz, decibels, phasors(signature, "--interferer")))
     return {
         "noise_db": number_list(power, "--noise-power", expected),
         "noise_correlation": correlation,
         "noise_shape": shape,
-        "arriving": arriving,
+        "arriving": [_interferer(text) for text in interferers],
     }
+
+
+def _interferer(text: str) -> Impairment:
+    """A tone, or where a width stands behind the frequency, noise of that bandwidth."""
+    from spatiq.transmit.interferer import Interferer
+    from spatiq.transmit.narrow_band import NarrowBandNoise
+
+    place, _, rest = text.partition(":")
+    level, _, heard = rest.partition(":")
+    centre, slash, width = place.partition("/")
+    form = "HZ:DB or HZ/WIDTH:DB, and if wanted :SIGNATURE, dB@degrees of each receive channel"
+    hertz, decibels = number_pair(f"{centre}:{level}", "--interferer", form)
+    signature = phasors(heard, "--interferer")
+    if not slash:
+        return Interferer(hertz, decibels, signature)
+    bandwidth, _ = number_pair(f"{width}:0", "--interferer", form)
+    return NarrowBandNoise(hertz, bandwidth, decibels, signature)
 
 
 class FrontEndOptions(NamedTuple):
@@ -213,7 +222,6 @@ def front_end_choices(options: FrontEndOptions) -> dict[str, Any]:
     """Gain steps, then mixer and DC, inversion, clipping, dead channels."""
     from spatiq.transmit.clipping import Clipping
     from spatiq.transmit.dc_offset import DcOffset
-    from spatiq.transmit.front_end import Impairment
     from spatiq.transmit.gain_steps import GainPlan
     from spatiq.transmit.inversion import SpectralInversion
     from spatiq.transmit.iq_imbalance import IqImbalance

@@ -254,7 +254,7 @@ InterfererOption = Annotated[
     list[str] | None,
     typer.Option(
         help="Tone: Hz:dB over payload, and if wanted :dB@degrees of each receive channel: "
-        "1e5:-10:0@0,3@90. Repeatable.",
+        "1e5:-10:0@0,3@90. Narrow-band noise: Hz/bandwidth:dB, 1e5/2e4:0. Repeatable.",
         rich_help_panel=NOISE,
     ),
 ]

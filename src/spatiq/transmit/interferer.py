@@ -29,14 +29,7 @@ class Interferer:
 
     def begin(self, context: Context) -> Stage:
         """The stage; raises InputError for values out of range."""
-        limit = context.sample_rate / 2
-        if not abs(self.frequency_hz) < limit:
-            expected = f"less than {limit:g} Hz either way"
-            raise InputError("interferer", "frequency", self.frequency_hz, expected)
-        if not -200.0 <= self.power_db <= 100.0:
-            raise InputError("interferer", "power", self.power_db, "-200 to 100 dB over payload")
-        size = np.sqrt(context.signal_power) * 10 ** (self.power_db / 20)
-        column = (size * self.heard_as(context)).astype(np.complex64)[:, None]
+        column = self.amplitudes(context)[:, None]
         per_sample = self.frequency_hz / context.sample_rate
 
         def stage(samples: Samples, first: int) -> Samples:
@@ -46,6 +39,17 @@ class Interferer:
             return samples
 
         return stage
+
+    def amplitudes(self, context: Context) -> NDArray[np.complex64]:
+        """Complex amplitude on each channel (Nr,); raises InputError for values out of range."""
+        limit = context.sample_rate / 2
+        if not abs(self.frequency_hz) < limit:
+            expected = f"less than {limit:g} Hz either way"
+            raise InputError("interferer", "frequency", self.frequency_hz, expected)
+        if not -200.0 <= self.power_db <= 100.0:
+            raise InputError("interferer", "power", self.power_db, "-200 to 100 dB over payload")
+        size = np.sqrt(context.signal_power) * 10 ** (self.power_db / 20)
+        return np.asarray(size * self.heard_as(context), np.complex64)
 
     def heard_as(self, context: Context) -> NDArray[np.complex128]:
         """The signature, complex128 (Nr,), unit mean power."""
