@@ -125,3 +125,30 @@ def test_what_the_differential_form_does_not_have_is_refused(tmp_path, option):
     assert done.exit_code == 2
     assert "differential" in done.stderr and done.stderr.count("\n") == 1
     assert not list(tmp_path.glob("*.h5"))
+
+
+def test_a_detector_that_cannot_decide_the_scheme_is_refused(tmp_path):
+    link = DEMO / "boom_pairs.link.toml"
+    base = tmp_path / "run"
+    program("simulate", link, "--out", base, "--frames", 2, *RATE)
+    arguments = ["measure", base.with_suffix(".sigmf-meta"), link, "--detector", "two-step"]
+    done = CliRunner().invoke(app, [str(a) for a in arguments])
+    assert done.exit_code == 2
+    assert "one active antenna" in done.stderr and done.stderr.count("\n") == 1
+    assert not list(tmp_path.glob("*.h5"))
+
+
+def test_other_exact_detectors_count_the_same_errors(tmp_path):
+    """Decisions are the same but for ties in single precision, of which there is none here."""
+    link = DEMO / "winch_quadrature.link.toml"
+    base = tmp_path / "run"
+    program(
+        "simulate", link, "--out", base, "--frames", 6, "--snr", 8, "--receive-channels", 2, *RATE
+    )
+    errors = []
+    for name in ("maximum-likelihood", "tree-search"):
+        out = tmp_path / f"{name}.h5"
+        program("measure", base.with_suffix(".sigmf-meta"), link, "--out", out, "--detector", name)
+        with open_results(out) as results:
+            errors.append(results.summary["ber"]["errors"])
+    assert errors[0] == errors[1] > 100

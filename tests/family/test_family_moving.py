@@ -16,6 +16,7 @@ from spatiq.metrics.measuring import measure
 from spatiq.metrics.summary import Summary
 from spatiq.receiver.detection import maximum_likelihood
 from spatiq.receiver.differential_whitening import differences
+from spatiq.receiver.options import ReceiverOptions
 from spatiq.recording import open_recording
 from spatiq.recording.writing import write_recording
 from spatiq.results.reader import open_results
@@ -159,3 +160,12 @@ def test_the_command_says_so(moved):
     assert "tracking lost" in done.stdout
     with open_results(out) as results:
         assert results.summary["frames"]["found"] == FRAMES
+
+
+def test_figures_do_not_depend_on_how_the_recording_is_read(moved):
+    link, path = moved[:2]
+    whole = list(measure(open_recording(path), link))
+    pieces = list(measure(open_recording(path), link, ReceiverOptions(block_size=5000)))
+    for name in whole[0].columns:
+        one, other = (np.concatenate([b.columns[name] for b in m]) for m in (whole, pieces))
+        np.testing.assert_array_equal(one, other)
