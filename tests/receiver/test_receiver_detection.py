@@ -194,6 +194,7 @@ def batch_of(book, receive=2, count=20):
     _, y, channel = case(book, receive, 0.1, count, 6)
     return SimpleNamespace(
         moving=[],
+        matched={},
         count=1,
         symbols=y[None],
         channel=channel[None],
