@@ -187,6 +187,18 @@ def test_measure_command(tmp_path):
     assert summary["implementation_loss_db"] is None
 
 
+def test_short_frames(tmp_path):
+    """53 symbol periods in all: fewer lags can be told, and enough of them."""
+    sync = SYNC.replace("order = 6", "order = 4")
+    pilots = IN_TURN.replace("length = 16", "length = 8")
+    link = make_link(sections=sync + pilots + payload_section(22))
+    assert link.layout.length == 53
+    recording, capture = room(tmp_path, link, 0.2, snr_db=26, receive_channels=4, frames=12)
+    frames = collect(recording, link, DISPERSIVE)
+    assert np.mean(frames.words != capture.truth.words()) < 0.02
+    assert 0.5 < np.median(frames.noise) / capture.truth.N0 < 1.6
+
+
 @pytest.mark.parametrize(
     "sections",
     [

@@ -57,8 +57,10 @@ class KnownSymbols:
         """
         plan = self._plan
         y = received[plan.rows]
+        # Lags first, at the flat channel's carrier: with as many as can be, a short section would
+        # fit any carrier.
+        window = FirFit(plan.shifted, y, plan.window).best(plan.windows)
         carrier = 0.0
-        window = plan.window
         for _ in range(2):
             carrier = self._carrier(y, window)
             fit = FirFit(plan.shifted, self._turned(y, carrier), plan.window)

@@ -124,6 +124,13 @@ class DispersiveReception:
         batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
         return frame
 
+    @property
+    def _widest(self) -> Window:
+        """Lags that a whole frame can tell; a short one no more than its known symbols."""
+        periods, antennas = self.plan.known.shape
+        ample = periods >= 4 * WIDEST.size * antennas
+        return WIDEST if ample else self.plan.window
+
     def _sampled(self, batch: FrameBatch, i: int) -> Complex:
         periods = np.arange(self.plan.amplitude.size, dtype=np.int64)
         return sampled(batch.planes[i], batch.t0[i], batch.step[i], periods, self.bank)
@@ -148,11 +155,12 @@ class DispersiveReception:
         Clock first: it moves the instants. Then phase, then the channel's least squares.
         """
         plan, periods = self.plan, self.plan.amplitude.size
+        widest = self._widest
         vectors = plan.vectors(frame.words)
         turned = self._sampled(batch, i) * np.exp(-1j * frame.phase)[:, None]
-        rows = np.arange(WIDEST.last, max(periods + WIDEST.first, WIDEST.last + 1))
+        rows = np.arange(widest.last, max(periods + widest.first, widest.last + 1))
         rows = rows[rows < periods]
-        shifted = shifted_vectors(vectors, rows, WIDEST)
+        shifted = shifted_vectors(vectors, rows, widest)
         if self.acquisition.locked_carrier is None:
             self._refit_clock(batch, i, frame, turned, shifted, rows)
             turned = self._sampled(batch, i) * np.exp(-1j * frame.phase)[:, None]
@@ -168,8 +176,8 @@ class DispersiveReception:
             frame.phase,
         )
         frame.received = turned * np.exp(-1j * (frame.phase - before))[:, None]
-        fit = FirFit(shifted, frame.received[rows], WIDEST)
-        window = fit.best(_identified(WIDEST, self.memory, rows.size))
+        fit = FirFit(shifted, frame.received[rows], widest)
+        window = fit.best(_identified(widest, self.memory, rows.size))
         frame.channel = fit.solve(window)
         frame.parts = []
         parts = _parts(plan)
@@ -197,7 +205,7 @@ class DispersiveReception:
         slope = sampled(batch.planes[i], *where, self.bank, slopes=True)
         slope *= np.exp(-1j * frame.phase[rows])[:, None]
         window = frame.channel.window
-        begin = window.first - WIDEST.first
+        begin = window.first - self._widest.first
         part = shifted[:, begin : begin + window.size]
         rise = np.einsum("kla,lra->kr", part, FirFit(part, slope, window).solve(window).taps)
         error = turned[rows] - np.einsum("kla,lra->kr", part, frame.channel.taps)
