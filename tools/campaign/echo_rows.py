@@ -17,10 +17,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from campaign.links import campaign_link
-from spatiq.link.loading import Link
+from spatiq.link.loading import Link, load_link
 from spatiq.metrics.measuring import measure
-from spatiq.receiver.dispersive_chain import run_detector
-from spatiq.receiver.fir_channel import Window, convolved
+from spatiq.receiver.dispersive_chain import frame_decider
+from spatiq.receiver.dispersive_plan import dispersive_plan
+from spatiq.receiver.fir_channel import FirChannel, Window
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.recording import open_recording
 from spatiq.recording.writing import write_recording
@@ -28,6 +29,7 @@ from spatiq.transmit.genie import genie_symbols
 from spatiq.transmit.simulation import SimulatedCapture, simulate
 from spatiq.transmit.tapped_delay_line import TappedDelayLine
 
+DEMO = Path(__file__).resolve().parents[2] / "captures_demo"
 BER = 1e-3
 LOSS_BAR = 0.5  # dB
 _LAGS = Window(-4, 16)
@@ -39,7 +41,10 @@ Ints = NDArray[np.int64]
 
 @dataclass(frozen=True)
 class Point:
-    """A row: antennas, delay spread in symbol periods, how to decide, SNRs about the BER."""
+    """A row: antennas, delay spread in symbol periods, how to decide, SNRs about the BER.
+
+    demo: demo link instead of the campaign's own.
+    """
 
     transmit: int
     receive: int
@@ -48,6 +53,14 @@ class Point:
     snr_db: tuple[float, ...]
     frames: int
     quick_frames: int = 0
+    demo: str = ""
+
+    @property
+    def link(self) -> Link:
+        """Its link."""
+        if self.demo:
+            return load_link(DEMO / f"{self.demo}.link.toml")
+        return campaign_link(self.transmit, "QPSK")
 
 
 POINTS = (
@@ -57,6 +70,8 @@ POINTS = (
     Point(2, 2, 1.0, "sequence", (11.0, 12.5, 14.0), 200),
     Point(4, 4, 0.2, "mmse", (8.0, 9.5, 11.0), 120),
     Point(4, 4, 1.0, "mmse", (9.0, 10.5, 12.0), 120),
+    Point(4, 4, 1.0, "auto", (8.0, 9.5, 11.0), 80, demo="silo_prefix"),
+    Point(4, 4, 1.0, "auto", (10.0, 11.5, 13.0), 80, demo="silo_carriers"),
 )
 
 
@@ -105,7 +120,7 @@ def errors(point: Point, link: Link, frames: int, seed: int) -> Errors:
             snr_db=snr_db,
             samples_per_symbol=4,
             frames=frames,
-            spacing=(60.0, 200.0),
+            spacing="link" if point.demo else (60.0, 200.0),
             cfo_hz=(-reach, reach),
             seed=seed,
         )
@@ -126,14 +141,14 @@ def genie_words(
     truth = capture.truth
     layout = truth.link.layout
     received = genie_symbols(truth, samples)
-    amplitude = np.zeros(layout.length)
-    amplitude[layout.payload_index] = layout.payload_amplitude
-    detect = run_detector(truth.link, options)
+    decider = frame_decider(truth.link, options, dispersive_plan(truth.link, None), 0.0)
+    nothing = np.full(layout.payload_index.size, -1, np.int64)
     words = []
     for f in range(truth.frames):
         window, taps = _true_taps(truth.taps(f, np.arange(_LAGS.first, _LAGS.last + 1.0)))
-        y = received[f] - convolved(layout.known, taps, window)
-        words.append(detect(y, taps, window, truth.N0, amplitude, None)[layout.payload_index])
+        channel = FirChannel(window, taps, truth.N0, 1, np.zeros(truth.link.antennas))
+        whole = [(0, layout.length, channel)]
+        words.append(decider.decide(received[f], whole, truth.N0, nothing))
     return np.array(words)
 
 
@@ -174,8 +189,7 @@ def rows(quick: bool) -> Iterator[tuple[Point, Errors, float, float]]:
         if not frames:
             continue
         print(f"point {number + 1} of {len(POINTS)} ...", file=sys.stderr, flush=True)
-        link = campaign_link(point.transmit, "QPSK")
-        found = errors(point, link, frames, seed=100 + number)
+        found = errors(point, point.link, frames, seed=100 + number)
         snr_db = np.array(point.snr_db)
         rng = np.random.default_rng(0)
         draws = [found.loss(snr_db, rng.integers(0, frames, frames)) for _ in range(_RESAMPLINGS)]
