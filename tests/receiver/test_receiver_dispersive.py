@@ -10,10 +10,12 @@ from typer.testing import CliRunner
 
 from spatiq.cli.main import app
 from spatiq.errors import InputError
+from spatiq.metrics.frame_table import Mark
 from spatiq.metrics.measuring import measure
 from spatiq.receiver.fir_channel import Window, convolved
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sequence_detection import SequenceDetector
+from spatiq.receiver.whitening import whitening_matrix
 from spatiq.transmit.genie import genie_symbols
 from spatiq.transmit.tapped_delay_line import TappedDelayLine
 
@@ -38,7 +40,7 @@ def wrong_bits(link, frames, capture):
     return np.count_nonzero(bits(frames.words) != bits(sent), axis=1)
 
 
-def genie(link, capture, survivors=64):
+def genie(link, capture, survivors=64, whitener=None):
     """Wrong bits with the true carrier, instants, taps and noise, by the same detector."""
     truth = capture.truth
     window = Window(-4, 14)
@@ -51,6 +53,8 @@ def genie(link, capture, survivors=64):
     for f in range(truth.frames):
         taps = truth.taps(f, lags)
         y = received[f] - convolved(link.layout.known, taps, window)
+        if whitener is not None:
+            y, taps = y @ whitener.T, whitener @ taps
         words.append(detect(y, taps, window, truth.N0, amplitude)[link.layout.payload_index])
     bits = link.codebook.words_to_bits
     return np.count_nonzero(bits(np.array(words)) != bits(truth.words()), axis=1)
@@ -185,6 +189,32 @@ def test_measure_command(tmp_path):
     assert summary["ber"]["errors"] == 0
     assert summary["predicted_ber"] is None
     assert summary["implementation_loss_db"] is None
+
+
+@pytest.mark.parametrize(
+    ("noise", "snr"),
+    [({"noise_db": [0, 0, 0, 10]}, 8.0), ({"noise_correlation": 0.6}, 5.0), ({}, 7.0)],
+    ids=["one noisy channel", "correlated", "white"],
+)
+def test_uneven_noise_is_made_white(tmp_path, noise, snr):
+    """Errors against a genie that knows the covariance, taps and carrier; marked where uneven."""
+    link = make_link(antennas=4, sections=SYNC + IN_TURN + PAYLOAD)
+    recording, capture = room(
+        tmp_path, link, 0.5, snr_db=snr, receive_channels=4, frames=8, **noise
+    )
+    covariance = capture.truth.noise_covariance
+    whitener = None
+    if covariance is not None:
+        whitener, _ = whitening_matrix(covariance)
+    known = genie(link, capture, whitener=whitener).sum()
+    assert known >= 20
+    (measured,) = measure(recording, link, DISPERSIVE)
+    bits = link.codebook.words_to_bits
+    wrong = np.count_nonzero(bits(measured.words_decided) != bits(capture.truth.words()))
+    assert wrong < 1.7 * known
+    marked = (measured.columns["marks"] & Mark.COLOURED_NOISE) > 0
+    assert np.all(marked == bool(noise))
+    np.testing.assert_allclose(measured.columns["noise_power"] / capture.truth.N0, 1, atol=0.2)
 
 
 def test_short_frames(tmp_path):

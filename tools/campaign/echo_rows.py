@@ -70,8 +70,8 @@ POINTS = (
     Point(2, 2, 1.0, "sequence", (11.0, 12.5, 14.0), 200),
     Point(4, 4, 0.2, "mmse", (8.0, 9.5, 11.0), 120),
     Point(4, 4, 1.0, "mmse", (9.0, 10.5, 12.0), 120),
-    Point(4, 4, 1.0, "auto", (8.0, 9.5, 11.0), 80, demo="silo_prefix"),
-    Point(4, 4, 1.0, "auto", (10.0, 11.5, 13.0), 80, demo="silo_carriers"),
+    Point(4, 4, 1.0, "auto", (10.5, 12.0, 13.5), 80, demo="silo_prefix"),
+    Point(4, 4, 1.0, "auto", (8.5, 10.0, 11.5), 80, demo="silo_carriers"),
 )
 
 

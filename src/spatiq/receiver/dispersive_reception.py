@@ -10,14 +10,15 @@ many taps that costs as much as the estimate's error itself. (Leaving a part out
 avoided elsewhere, e.g. M. Stone, "Cross-validatory choice and assessment of statistical
 predictions", J. R. Statist. Soc. B 36(2), 1974, from memory.)
 
-Noise is taken to be white and equal over the receive channels, the channel to stand still within a
-frame but for its common phase, and the frame to be alone: nothing else within the channel's memory
+Noise that is uneven or correlated over the receive channels is made white for the decisions, as in
+`whitening`, from the first refit on. The channel is taken to stand still within a frame but for its
+common phase, and the frame to be alone: nothing else within the channel's memory
 before and behind it. Wrong words make N0 a little small (as they are the words that fit best).
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -38,6 +39,7 @@ from spatiq.receiver.frame_batch import FrameBatch
 from spatiq.receiver.frame_deciders import FrameDecider, Part
 from spatiq.receiver.matched_filter import FilterBank, derotate
 from spatiq.receiver.refit_kernels import refit_phase
+from spatiq.receiver.whitening import uneven_beyond, unevenness, whitening_matrix
 
 # Parts of a frame that are decided with the channel of the rest, and words in one at least.
 PARTS, LEAST_PART = 8, 32
@@ -53,6 +55,8 @@ class _Frame:
     words: NDArray[np.int64]
     phase: NDArray[np.float32]
     parts: list[Part] = field(default_factory=list)
+    covariance: Complex = field(default_factory=lambda: np.zeros((0, 0), np.complex128))
+    whitener: Complex | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -112,12 +116,11 @@ class DispersiveReception:
         frame = _Frame(received, found.channel, words, phase.astype(np.float32))
         for _ in range(self.rounds):
             self._refit(batch, i, frame)
-            noise = frame.channel.noise
-            frame.words = self.decider.decide(frame.received, frame.parts, noise, frame.words)
+            self._decide(frame)
         energy = np.sum(np.abs(plan.vectors(frame.words)) ** 2, axis=0)
         lags = frame.channel.window.size
         batch.noise[i] = frame.channel.noise
-        batch.residual[i] = frame.channel.noise * np.eye(batch.channel.shape[1])
+        batch.residual[i], batch.coloured[i] = frame.covariance, frame.whitener is not None
         # The sum over the taps of an antenna is as uncertain as one tap on so much less energy.
         batch.antenna_energy[i] = energy / lags
         slope = float(np.polyfit(np.arange(phase.size), frame.phase, 1)[0])
@@ -179,6 +182,7 @@ class DispersiveReception:
         fit = FirFit(shifted, frame.received[rows], widest)
         window = fit.best(_identified(widest, self.memory, rows.size))
         frame.channel = fit.solve(window)
+        self._weigh(frame, shifted, rows)
         frame.parts = []
         parts = _parts(plan)
         for begin, end in parts:
@@ -187,6 +191,34 @@ class DispersiveReception:
             # One part alone would leave the known symbols only.
             channel = rest.solve(window) if len(parts) > 1 else frame.channel
             frame.parts.append((begin, end, channel))
+
+    def _weigh(self, frame: _Frame, shifted: Complex, rows: NDArray[np.int64]) -> None:
+        """Covariance of what the channel leaves over the receive channels; W where it is uneven.
+
+        Least squares need no whitening: every receive channel depends on the same symbols.
+        """
+        channel = frame.channel
+        begin = channel.window.first - self._widest.first
+        part = shifted[:, begin : begin + channel.window.size]
+        left = frame.received[rows] - np.einsum("kla,lra->kr", part, channel.taps)
+        covariance = left.T @ left.conj()
+        size = covariance.shape[0]
+        trace = float(np.trace(covariance).real)
+        scale = size * channel.noise / trace if trace > 0 else 0.0
+        frame.covariance = covariance * scale
+        frame.whitener = None
+        freedom = channel.freedom // size
+        if size > 1 and unevenness(frame.covariance, freedom) > uneven_beyond(size):
+            frame.whitener, _ = whitening_matrix(frame.covariance)
+
+    def _decide(self, frame: _Frame) -> None:
+        """Words anew, in white noise."""
+        received, parts, noise = frame.received, frame.parts, frame.channel.noise
+        if frame.whitener is not None:
+            whitener = frame.whitener
+            received = received @ whitener.T
+            parts = [(b, e, replace(c, taps=whitener @ c.taps)) for b, e, c in parts]
+        frame.words = self.decider.decide(received, parts, noise, frame.words)
 
     def _refit_clock(
         self,
