@@ -5,6 +5,7 @@ from __future__ import annotations
 
 import importlib
 import json
+import logging
 import multiprocessing
 import os
 import pickle
@@ -184,6 +185,8 @@ class ClusterWorkers:
         """
         distributed = _distributed()
         address = _address(self._scheduler)
+        for chatty in ("distributed.client", "distributed", "tornado"):
+            logging.getLogger(chatty).setLevel(logging.CRITICAL)  # faults are told in our words
         try:
             self._client = distributed.Client(address, timeout=20, set_as_default=False)
             self._client.wait_for_workers(1, timeout=60)
@@ -213,9 +216,13 @@ class ClusterWorkers:
     def submit(self, task: Task) -> Future[Outcome]:
         """See Workers."""
         assert self._executor is not None
-        # Workers may join or leave while it runs.
-        self.count = max(1, sum(self._client.nthreads().values()))
-        inner = self._executor.submit(run_on_cluster, task)
+        try:
+            # Workers may join or leave while it runs.
+            self.count = max(1, sum(self._client.nthreads().values()))
+            inner = self._executor.submit(run_on_cluster, task)
+        except OSError as error:
+            expected = "a scheduler that stays; what is done is kept, the same command goes on"
+            raise InputError("--scheduler", self._scheduler, error, expected) from error
         outer: Future[Outcome] = Future()
         outer.set_running_or_notify_cancel()
         inner.add_done_callback(lambda done: _hand_on_from_cluster(done, outer))
