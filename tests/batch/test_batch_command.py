@@ -141,14 +141,12 @@ def wait_for(condition, seconds=90.0):
 
 def workers_of(pid):
     """Worker processes, where the system lists them."""
-    children = Path(f"/proc/{pid}/task/{pid}/children")
-    if not children.exists():
-        return []
     found = []
-    for child in children.read_text().split():
-        command = Path(f"/proc/{child}/cmdline")
-        if command.exists() and b"spawn_main" in command.read_bytes():
-            found.append(int(child))
+    for listed in Path(f"/proc/{pid}/task").glob("*/children"):
+        for child in listed.read_text().split() if listed.exists() else []:
+            command = Path(f"/proc/{child}/cmdline")
+            if command.exists() and b"spawn_main" in command.read_bytes():
+                found.append(int(child))
     return found
 
 

@@ -15,18 +15,14 @@ IN_PART = 3
 
 def children(pid: int) -> list[int]:
     """Worker processes of a batch: its children that run the program's Python."""
-    try:
-        listed = Path(f"/proc/{pid}/task/{pid}/children").read_text().split()
-    except OSError:
-        return []
     found = []
-    for child in map(int, listed):
+    for listed in Path(f"/proc/{pid}/task").glob("*/children"):  # each thread has its own
         try:
-            command = Path(f"/proc/{child}/cmdline").read_bytes()
+            for child in map(int, listed.read_text().split()):
+                if b"spawn_main" in Path(f"/proc/{child}/cmdline").read_bytes():
+                    found.append(child)
         except OSError:
-            continue
-        if b"spawn_main" in command:
-            found.append(child)
+            continue  # it has just ended
     return found
 
 
