@@ -91,8 +91,10 @@ class ReceiverOptions:
         for name, accepted in choices.items():
             if getattr(self, name) not in accepted:
                 raise InputError("receiver options", name, getattr(self, name), ", ".join(accepted))
-        if self.memory is not None and not 0 <= self.memory <= LARGEST_MEMORY:
-            expected = f"0 to {LARGEST_MEMORY} symbols"
+        # The number may come from a file: anything may stand there.
+        whole = self.memory is None or type(self.memory) is int
+        if not whole or not 0 <= (self.memory or 0) <= LARGEST_MEMORY:
+            expected = f"a whole number of symbols, 0 to {LARGEST_MEMORY}"
             raise InputError("receiver options", "memory", self.memory, expected)
 
     def as_dict(self) -> dict[str, Any]:
