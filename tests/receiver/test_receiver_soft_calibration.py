@@ -59,6 +59,7 @@ def frames_with_estimated_channels(book, noise, seed, fading):
     y += complex_noise(rng, y.shape, noise) / amplitude[:, None]
     batch = SimpleNamespace(
         moving=[],
+        matched={},
         count=FRAMES,
         symbols=y.astype(np.complex64),
         channel=estimate,

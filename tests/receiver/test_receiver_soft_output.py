@@ -163,6 +163,7 @@ def test_the_stage_takes_its_frames_noise_variance_and_amplitude(kind):
     channel[:, :, 1] = 0
     batch = SimpleNamespace(
         moving=[],
+        matched={},
         count=2,
         symbols=complex_noise(rng, (2, 12, 2), 1.0).astype(np.complex64),
         channel=channel,
