@@ -309,8 +309,9 @@ def test_a_disturbed_payload_is_marked(tmp_path):
         return samples
 
     case = measured(tmp_path, LINK, frames=6, snr_db=20.0, samples=disturb)
-    assert case.columns["marks"].tolist() == [0, 0, Mark.TRACKING_LOST, 0, 0, 0]
-    assert case.summary["marks"] == {"TRACKING_LOST": 1}
+    both = Mark.TRACKING_LOST | Mark.NOISE_STEP
+    assert case.columns["marks"].tolist() == [0, 0, both, 0, 0, 0]
+    assert case.summary["marks"] == {"TRACKING_LOST": 1, "NOISE_STEP": 1}
 
 
 @pytest.mark.nojit

@@ -26,6 +26,17 @@ from spatiq.receiver.frame_batch import (
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.recording.recording import Recording
 
+_BREAKS = {
+    "samples_lost": "samples_lost",
+    "lost_at": "lost_at",
+    "lost_at_std": "lost_std",
+    "lost_phase": "phase_jump",
+    "gain_step_db": "gain_db",
+    "gain_step_std_db": "gain_std",
+    "gain_step_at": "gain_at",
+    "noise_step_db": "noise_db",
+    "noise_step_at": "noise_at",
+}
 Columns = dict[str, NDArray[Any]]
 # Probability that chance raises the payload's noise so far over that of the known symbols.
 _LOST_TRACK = 1e-6
@@ -117,6 +128,11 @@ def _synchronisation(columns: Columns, batch: FrameBatch, link: Link, recording:
     columns["clock_std_ppm"][:] = np.sqrt(batch.step_var) / nominal * 1e6
     columns["timing_std_samples"][:] = np.sqrt(batch.timing_var)
     columns["clipped_samples"][:] = batch.clipped
+    for i, moving in enumerate(batch.moving):
+        if moving is not None:  # what moved explains residuals that change
+            batch.breaks["noise_db"][i] = batch.breaks["noise_at"][i] = np.nan
+    for column, name in _BREAKS.items():
+        columns[column][:] = batch.breaks[name]
 
 
 def _power(columns: Columns, batch: FrameBatch, sums: NDArray[np.float64], link: Link) -> None:
@@ -251,6 +267,9 @@ def _marks(columns: Columns, batch: FrameBatch, numbering: Numbering, link: Link
         marks[batch.echoes] |= np.uint32(Mark.ECHOES)
     marks[(batch.aligned & RECEIVE_ALIGNED) > 0] |= np.uint32(Mark.RECEIVE_DELAYS)
     marks[(batch.aligned & ANTENNAS_ALIGNED) > 0] |= np.uint32(Mark.ANTENNA_DELAYS)
+    marks[np.isfinite(batch.breaks["lost_at"])] |= np.uint32(Mark.SAMPLES_LOST)
+    marks[np.isfinite(batch.breaks["gain_at"])] |= np.uint32(Mark.GAIN_STEP)
+    marks[np.isfinite(batch.breaks["noise_at"])] |= np.uint32(Mark.NOISE_STEP)
     marks[columns["crc_ok"] == 0] |= np.uint32(Mark.CRC_FAILED)
     channels = batch.channel.shape[1]
     header = max(batch.header_freedom, 1)

@@ -34,6 +34,9 @@ class Mark(IntFlag):
     INTERFERER = 32  # a narrow-band interferer: taken out
     ERRORS_CORRELATED = 2048  # errors are correlated in time: coloured noise, or an echo
     SPECTRUM_INVERTED = 16384  # samples were conjugated before they were received
+    SAMPLES_LOST = 32768  # samples are missing inside the frame; what they held is not compared
+    GAIN_STEP = 65536  # the gain stepped inside the frame: taken out
+    NOISE_STEP = 131072  # noise or interference set in or ended inside the frame
 
 
 @dataclass(frozen=True)
@@ -80,6 +83,16 @@ COLUMNS: tuple[Column, ...] = (
     Column("interferer_db", "f8", "dB", "its power, mean over receive channels, over the signal's"),
     Column("error_correlation", "f8", "", "largest correlation of errors 1 to 3 periods apart"),
     Column("clipped_samples", "i8", "samples", "samples at full scale inside the frame"),
+    Column("samples_lost", "i8", "samples", "missing inside the frame, untold; -1: number unknown"),
+    Column("lost_at", "f8", "symbol periods", "where the first of them are missing"),
+    Column("lost_at_std", "f8", "symbol periods", "its standard deviation"),
+    Column("lost_phase", "f8", "rad", "jump of the recorded carrier's phase there"),
+    Column("bits_erased", "i8", "bits", "payload lost with samples or not placed: not compared"),
+    Column("gain_step_db", "f8", "dB", "step of the gain inside the frame; the largest one"),
+    Column("gain_step_std_db", "f8", "dB", "its standard deviation"),
+    Column("gain_step_at", "f8", "symbol periods", "where it is"),
+    Column("noise_step_db", "f8", "dB", "change of the residuals' power inside the frame"),
+    Column("noise_step_at", "f8", "symbol periods", "where it is, to 32 periods"),
     Column("crc_ok", "i1", "", "1 passed, 0 failed, -1 no CRC in the link"),
     Column("bits_compared", "i8", "bits", "payload bits with a known value"),
     Column("bit_errors", "i8", "bits", "of these, wrong"),

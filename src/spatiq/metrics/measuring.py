@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.link.description import Link
+from spatiq.metrics.erasures import Erasures, erasures, slips
 from spatiq.metrics.figures import as_received, channel_error_variance, fill_figures
 from spatiq.metrics.frame_table import MeasuredFrames, empty_columns
 from spatiq.metrics.measuring_kernels import compare_words, count_bits, error_vectors
@@ -143,12 +144,15 @@ class Measuring:
         numbering = self._follower.number(plain, crc, position)
         reference = self._reference(numbering)
         sent = self._sent_words(numbering, reference)
-        self._count_bits(columns, batch, plain, numbering, reference)
+        gone = slips(batch, sent, erasures(batch, self.link), self.link)
+        if gone is not None:
+            sent = np.where(gone.words, -1, sent)
+        self._count_bits(columns, batch, plain, numbering, reference, gone)
         columns["frame_number"][:] = numbering.numbers
         if crc is not None:
             columns["crc_ok"][:] = crc
         seen = as_received(batch)
-        confusion, sums = self._compare(columns, seen, sent)
+        confusion, sums = self._compare(columns, seen, sent, gone)
         fill_figures(columns, seen, batch, sums, numbering, self.link, self.recording, self.options)
         lost = list(batch.lost)
         if self.list_skipped:
@@ -211,9 +215,13 @@ class Measuring:
         plain: NDArray[np.uint8],
         numbering: Numbering,
         reference: NDArray[np.uint8],
+        gone: Erasures | None,
     ) -> None:
         payload = self.link.payload
         counted = np.where(numbering.resolved[:, None], payload.known_mask, self._static)
+        if gone is not None:
+            counted &= ~gone.bits
+            columns["bits_erased"][:] = gone.bits.sum(axis=1)
         counts = np.zeros((batch.count, 2, 2), np.int64)
         count_bits(plain, reference, counted, self._spatial, counts)
         for kind, name in enumerate(("signal", "spatial")):
@@ -231,6 +239,7 @@ class Measuring:
         columns: dict[str, NDArray[np.generic]],
         batch: FrameBatch,
         sent: NDArray[np.int64],
+        gone: Erasures | None,
     ) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
         """Confusion matrices (F, A, A) and error-vector sums (F, 6, Nt)."""
         codebook = self.link.codebook
@@ -254,6 +263,8 @@ class Measuring:
             aided = counts[0] > 0 and 2 * counts[0] >= sent.shape[1]
             columns["evm_data_aided"][i] = aided
             reference = carried[i] if aided else self._decided_vectors(batch, i)
+            if gone is not None:
+                reference = np.where(gone.periods[i], -1, reference)
             symbols = batch.symbols[i]
             if batch.dispersive is not None:
                 symbols = batch.dispersive.symbols(i, reference, batch.channel[i])

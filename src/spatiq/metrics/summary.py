@@ -142,6 +142,7 @@ class Summary:
         self._aided += int(columns["evm_data_aided"].sum())
         self._confusion += measured.confusion.sum(axis=0)
         self._receive.add(measured)
+        self._add_losses(columns)
         self._add_antennas(measured)
         if measured.subcarriers is not None:
             self._subcarriers.add(measured.subcarriers)
@@ -151,6 +152,13 @@ class Summary:
         self._add_predictions(measured)
         self._keep(measured)
         self.frames += measured.count
+
+    def _add_losses(self, columns: dict[str, NDArray[Any]]) -> None:
+        lost = columns["samples_lost"]
+        self._sums["frames_torn"] += int(np.isfinite(columns["lost_at"]).sum())
+        self._sums["frames_unsized"] += int((lost < 0).sum())
+        self._sums["samples_lost"] += int(lost[lost > 0].sum())
+        self._sums["bits_erased"] += int(columns["bits_erased"].sum())
 
     def _add_antennas(self, measured: MeasuredFrames) -> None:
         if measured.antenna_error_energy is not None:
@@ -226,9 +234,22 @@ class Summary:
             **{name: spread.as_dict() for name, spread in self._spreads.items()},
             "channel_models": {name: n for name, n in self.channel_models.items() if n},
             "crc": {"passed": passed, "failed": failed} if passed + failed else None,
+            "lost_inside_frames": self._losses(),
             "marks": {name: n for name, n in self.marks.items() if n},
             "antenna_sets": [list(a) for a in self.link.codebook.antenna_sets],
             "confusion": self._confusion.tolist(),
+        }
+
+    def _losses(self) -> dict[str, int] | None:
+        """Samples missing inside frames, untold; None when none are."""
+        s = self._sums
+        if not s["frames_torn"] and not s["bits_erased"]:
+            return None
+        return {
+            "frames": s["frames_torn"],
+            "samples": s["samples_lost"],
+            "frames_of_unknown_number": s["frames_unsized"],
+            "bits_not_compared": s["bits_erased"],
         }
 
     def _ratio(self, errors: int, trials: int) -> dict[str, Any] | None:

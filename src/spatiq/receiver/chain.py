@@ -1,6 +1,7 @@
 """The chain: recording and link in, batches of received frames out.
 
-    framing (with frame search) -> acquisition -> tracking -> refit -> alignment -> whitening
+    framing (with frame search) -> acquisition -> tracking -> refit
+    -> continuity (front end, interferer, alignment, channel following) -> whitening
     -> detection (-> soft output, when asked for)
 
 On a dispersive channel other stages follow framing, see `spatiq.receiver.dispersive_chain`.
@@ -21,6 +22,7 @@ from spatiq.link.description import Link
 from spatiq.receiver.acquisition import Acquisition
 from spatiq.receiver.alignment import Alignment
 from spatiq.receiver.channel_following import channel_following
+from spatiq.receiver.continuity import Continuity
 from spatiq.receiver.detection import Detection, check_detector_applies, find_detector
 from spatiq.receiver.differential_whitening import DifferentialWhitening
 from spatiq.receiver.dispersive_chain import dispersive_stages
@@ -165,8 +167,7 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     detector = find_detector(options.detector)
     stages: list[Stage] = [
         *reception,
-        *corrections,
-        *_against_the_channel(link, refit, runs),
+        *_against_the_channel(link, acquisition, refit, corrections),
         Detection(link.codebook, detector, options.compare_two_step, runs),
     ]
     if link.codebook.block == 1:
@@ -178,13 +179,20 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     return stages
 
 
-def _against_the_channel(link: Link, refit: Refit, runs: tuple[int, ...]) -> list[Stage]:
-    """Channels that move and noise that is not white. In differential form the words follow the
-    channel by themselves, and the noise is told without it."""
+def _against_the_channel(
+    link: Link, acquisition: Acquisition, refit: Refit, corrections: list[Stage]
+) -> list[Stage]:
+    """Corrections, breaks, channels that move and noise that is not white.
+
+    In differential form the words follow the channel by themselves, the noise is told without it,
+    and breaks are not looked for.
+    """
     if isinstance(link.codebook, DifferentialCodebook):
-        return [DifferentialWhitening(refit, link.codebook, runs)]
+        runs = link.layout.payload_runs()
+        return [*corrections, DifferentialWhitening(refit, link.codebook, runs)]
     following = channel_following(refit, link.layout.payload_index.size)
-    return [following, Whitening(following)]
+    continuity = Continuity(acquisition, refit, corrections, following, link.layout.sync.start)
+    return [continuity, Whitening(following)]
 
 
 def receive(

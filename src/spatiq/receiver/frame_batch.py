@@ -45,6 +45,23 @@ class MatchedFrame:
     refit: Callable[[FrameBatch, int], None]
 
 
+# What is known of breaks inside a frame; places in symbol periods, NaN and 0 where there is none.
+# samples_lost: in all, -1 when the number could not be told; lost_at, lost_std: where the first
+# were lost, and its standard deviation; phase_jump: of the recorded carrier there, radians.
+# gain_db, gain_at, gain_std: the largest step. noise_db, noise_at: residuals over what they were.
+BREAKS = np.dtype(
+    [
+        ("samples_lost", "i8"),
+        *((name, "f8") for name in ("lost_at", "lost_std", "phase_jump")),
+        *((name, "f8") for name in ("gain_db", "gain_at", "gain_std")),
+        *((name, "f8") for name in ("noise_db", "noise_at")),
+    ]
+)
+
+# Active periods behind each row of `scores`.
+SCORE_BLOCK = 32
+SCORES = 6
+
 NOT_FOUND = "not found"
 NOT_FINITE = "samples not finite"
 
@@ -70,6 +87,8 @@ class FrameBatch:
         corrected: uint8 (F,); what of the front end was set right, see `front_end`.
         lost: frames known to be lost before the last of these.
         final: True for the recording's last batch, which may be empty.
+
+        search_t0: float64 (F,); t0 as the search gave it.
 
     Filled by acquisition and refined by the refit:
         carrier_estimate: float64 (F,); carrier offset including what the phase track shows.
@@ -103,6 +122,11 @@ class FrameBatch:
 
         front_end_sums: what the front end's figures are estimated from, while it holds.
         front_end: image and constant offset of each receive channel, and the noise's correlation.
+
+    Filled by the refit and by the look for breaks:
+        scores: float64 (F, B, 6); see `spatiq.receiver.continuity_kernels`.
+        erased: bool (F, Ka); active periods whose samples were lost or cannot be placed.
+        breaks: BREAKS (F,).
 
     Filled by symbol sampling and detection:
         symbols: complex64 (F, Kp, Nr); payload vectors, carrier phase removed.
@@ -155,6 +179,10 @@ class FrameBatch:
     motion_reference: NDArray[np.float64]
     symbols: NDArray[np.complex64]
     words: NDArray[np.int64]
+    search_t0: NDArray[np.float64]
+    scores: NDArray[np.float64]
+    erased: NDArray[np.bool_]
+    breaks: NDArray[np.void]
     header_freedom: int = 0
     words_two_step: NDArray[np.int64] | None = None
     matched: dict[int, MatchedFrame] = field(default_factory=dict)
@@ -192,6 +220,15 @@ def decision_runs(
         return
     for run, channel in channel_runs(batch, i):
         yield run, batch.symbols[i, run], channel
+
+
+def no_breaks(count: int) -> NDArray[np.void]:
+    """BREAKS (count,) of frames without any."""
+    breaks = np.zeros(count, BREAKS)
+    for name in BREAKS.names or ():
+        if name != "samples_lost":
+            breaks[name] = np.nan
+    return breaks
 
 
 def empty_batch(
@@ -242,4 +279,8 @@ def empty_batch(
         motion_reference=np.zeros((count, MOTION_PARTS)),
         symbols=np.zeros((count, payload, channels), np.complex64),
         words=np.zeros((count, words), np.int64),
+        search_t0=np.zeros(count),
+        scores=np.zeros((count, -(-active // SCORE_BLOCK), SCORES)),
+        erased=np.zeros((count, active), np.bool_),
+        breaks=no_breaks(count),
     )

@@ -298,6 +298,7 @@ class Framing:
         batch.segment[i] = segment.index
         batch.sync_metric[i] = found.metric
         batch.t0[i] = start - first
+        batch.search_t0[i] = start - first
         batch.step[i] = sps
         batch.carrier[i] = self._pattern.carrier(found.carrier_bin) / sps
         origin = batch.t0[i] + self._tables.header_centroid * sps

@@ -210,6 +210,16 @@ def correlation_over_time(
     return each.sum(axis=1) / count, periods * np.sum(left, axis=2).max(axis=1)
 
 
+def forget_frame(figures: FrontEndFigures, i: int) -> None:
+    """Figures of a frame that could not be measured: missing, and nothing taken out."""
+    for values in (figures.image, figures.image_var, figures.constant, figures.constant_var):
+        values[i] = np.nan
+    figures.correlation[i] = np.nan
+    figures.correlation_score[i] = 0.0
+    figures.image_taken[i] = 0.0
+    figures.constant_taken[i] = 0.0
+
+
 def filter_gain(bank: FilterBank, frequency: NDArray[np.float64]) -> NDArray[np.float64]:
     """Gain of the matched filter at frequencies (F,) in cycles per sample."""
     instants = np.arange(bank.taps.shape[1]) - (bank.half - 1)

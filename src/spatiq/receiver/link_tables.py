@@ -95,10 +95,10 @@ def link_tables(link: Link) -> LinkTables:
     is_header &= np.any(layout.known != 0, axis=1)
     header = np.flatnonzero(is_header).astype(np.int64)
     known = layout.known[header]
-    root, rank = _gram_root(known)
+    root, rank = gram_root(known)
     _check_identifiable(link, known, root)
     energy = np.sum(np.abs(known) ** 2, axis=1)
-    active = _active_periods(layout)
+    active = active_periods(layout)
     word_of_period = np.full(layout.length, -1, np.int64)
     taken = layout.payload_index
     words = taken[layout.kind[taken] == Period.PAYLOAD]  # without differential reference blocks
@@ -128,12 +128,14 @@ def link_tables(link: Link) -> LinkTables:
     )
 
 
-def _active_periods(layout: FrameLayout) -> NDArray[np.int64]:
+def active_periods(layout: FrameLayout) -> NDArray[np.int64]:
+    """Periods in which something is sent, ascending."""
     sends = np.any(layout.known != 0, axis=1) | (layout.kind == Period.PAYLOAD)
     return np.flatnonzero(sends).astype(np.int64)
 
 
-def _gram_root(known: NDArray[np.complex128]) -> tuple[NDArray[np.complex128], int]:
+def gram_root(known: NDArray[np.complex128]) -> tuple[NDArray[np.complex128], int]:
+    """W (rank, Nt), W^H W the pseudo-inverse of the Gram matrix of vectors (n, Nt); the rank."""
     gram = known.conj().T @ known
     values, vectors = np.linalg.eigh(gram)
     kept = values > 1e-9 * max(values.max(initial=0.0), 1e-300)

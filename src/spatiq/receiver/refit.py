@@ -8,19 +8,21 @@ too small at low SNR.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from spatiq.kernels import C64, F32, F64
 from spatiq.receiver.alignment_kernels import delay_scores, lag_energies
-from spatiq.receiver.frame_batch import FrameBatch
+from spatiq.receiver.continuity_kernels import block_scores
+from spatiq.receiver.frame_batch import SCORE_BLOCK, FrameBatch
 from spatiq.receiver.front_end_figures import empty_sums
 from spatiq.receiver.front_end_kernels import residual_sums
 from spatiq.receiver.link_tables import LinkTables
 from spatiq.receiver.matched_filter import FilterBank
 from spatiq.receiver.motion_kernels import motion_sums
+from spatiq.receiver.partial_frames import kept_part, return_part
 from spatiq.receiver.refit_kernels import refit_round, residual_covariance, take_symbols
 
 Room = tuple[F32, F32, F32, F32, C64, F64, F64]
@@ -47,9 +49,17 @@ class Refit:
         return batch
 
     def refit_frame(self, batch: FrameBatch, i: int, room: Room | None = None) -> None:
-        """Refit frame i of a batch alone; `room` spares making it anew."""
+        """Refit frame i of a batch alone; `room` spares making it anew.
+
+        Erased periods are left out.
+        """
         if i in batch.matched:
             batch.matched[i].refit(batch, i)
+            return
+        if batch.erased[i].any():
+            part, kept = kept_part(batch, i, self.tables)
+            replace(self, tables=kept).refit_frame(part, 0)
+            return_part(part, batch, i, self.tables)
             return
         tables, bank = self.tables, self.bank
         room = room or refit_room(tables, *batch.channel.shape[1:])
@@ -64,6 +74,7 @@ class Refit:
         step_var = (self.clock_std * bank.samples_per_symbol) ** 2
         priors = np.array([*_WIDE, self.phase_walk, step_var])
         timing = np.array([batch.t0[i], batch.step[i], 0.0, 0.0])
+        before = float(timing[0]), float(timing[1])
         for turn in range(self.rounds):
             batch.noise[i], batch.frequency_var[i] = refit_round(
                 batch.planes[i],
@@ -80,13 +91,18 @@ class Refit:
                 batch.antenna_energy[i],
             )
         batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = timing
-        self._residuals(batch, i, room)
+        self._residuals(batch, i, before, room)
         take_symbols(room[0], tables.payload, tables.symbol_amplitude, batch.symbols[i])
         slope = mean_slope(tables.active, batch.phase[i])  # radians per symbol period
         batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
 
-    def _residuals(self, batch: FrameBatch, i: int, room: Room) -> None:
-        """What the residuals of frame i say of delays, noise and motion."""
+    def _residuals(
+        self, batch: FrameBatch, i: int, before: tuple[float, float], room: Room
+    ) -> None:
+        """What the residuals of frame i say of delays, noise, motion and breaks.
+
+        `before`: t0 and step ahead of the refit.
+        """
         tables = self.tables
         delay_scores(
             room[0],
@@ -105,7 +121,7 @@ class Refit:
             tables.header_vectors.parts,
             batch.lag_energy[i],
         )
-        residual_covariance(
+        in_doubt = residual_covariance(
             room[0],
             room[4],
             tables.active_word,
@@ -123,6 +139,18 @@ class Refit:
             batch.motion_scores[i],
             batch.motion_energy[i],
             batch.motion_reference[i],
+        )
+        block_scores(
+            room[0],
+            room[1],
+            room[2],
+            room[6],
+            tables.active,
+            tables.active_word,
+            in_doubt,
+            (batch.t0[i] - before[0], batch.step[i] - before[1]),
+            SCORE_BLOCK,
+            batch.scores[i],
         )
         self._sum_residuals(batch, i, room)
 

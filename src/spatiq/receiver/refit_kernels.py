@@ -258,11 +258,14 @@ def residual_covariance(
     channel: C128,
     noise: float,
     covariance: C128,
-) -> None:
+) -> float:
     """Expected covariance of y - H x over the channels into (Nr, Nr), scaled to a trace of Nr N0.
 
     E[(y - H x)(y - H x)^H] is what E[x] leaves, and H cov(x) H^H of the doubtful words: without the
     second, doubt would look like noise that follows the channel's directions.
+
+    Returns:
+        Energy in doubt: the trace of the second.
     """
     channels, antennas = channel.shape
     spread = np.zeros((antennas, antennas), np.complex128)
@@ -283,8 +286,9 @@ def residual_covariance(
                 if mean[i, a] != 0.0:  # mostly one antenna at a time is likely at all
                     for b in range(antennas):
                         spread[a, b] -= mean[i, a] * np.conj(mean[i, b])
-    trace = 0.0
+    trace, certain = 0.0, 0.0
     for r in range(channels):
+        certain += covariance[r, r].real
         for q in range(channels):
             for a in range(antennas):
                 for b in range(antennas):
@@ -294,6 +298,7 @@ def residual_covariance(
     for r in range(channels):
         for q in range(channels):
             covariance[r, q] *= scale
+    return trace - certain
 
 
 @kernel

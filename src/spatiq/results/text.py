@@ -194,6 +194,13 @@ def _frames(summary: dict[str, Any]) -> Iterator[Line]:
     if silent:
         told = ", ".join(f"{c['channel']} carried {c['state']}" for c in silent)
         yield "receive channels", told.replace("carried no ", "carried noise, no "), "", ""
+    torn = summary.get("lost_inside_frames")
+    if torn:
+        missing = f"{count(torn['samples'])} samples in {count(torn['frames'])} frames"
+        unknown = torn["frames_of_unknown_number"]
+        more = f"number unknown in {count(unknown)} of them" if unknown else ""
+        bits = f"{count(torn['bits_not_compared'])} bits not compared"
+        yield "lost inside frames", missing, bits, more
     crc = summary.get("crc")
     passed, failed = pick(crc, "passed"), pick(crc, "failed")
     if passed or failed:
