@@ -10,7 +10,7 @@ left as they are, bit for bit.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Container, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -70,17 +70,25 @@ class Continuity:
         """Mend frames that show evidence; fill breaks and erased."""
         if not batch.count:
             return batch
-        held = {i: m.one for i, m in self._mended(batch).items() if m.moved}
+        suspects = self._suspects(batch)
+        held = {i: m.one for i, m in self._mended(batch, suspects).items() if m.moved}
+        told = batch.scores.copy()
         for stage in self.between:
             batch = stage(batch)
         # Those stages know nothing of breaks: what they made of a torn frame is not kept.
         _return_all(held, batch)
-        seen = self._evidence(batch)
-        rest = self._mended(batch, set(held) | set(batch.matched))
+        if not np.array_equal(told, batch.scores):  # something was refitted
+            suspects = self._suspects(batch)
+        rest = self._mended(batch, suspects.difference(held, batch.matched))
         _return_all({i: m.one for i, m in rest.items() if m.placed}, batch)
-        for i in self._suspects(batch).difference(rest, held):
-            _tell_noise(batch, i, seen, i, self.refit.tables.active)
+        others = suspects.difference(rest, held)
+        if others:
+            seen = self._evidence(batch)
+            for i in others:
+                _tell_noise(batch, i, seen, i, self.refit.tables.active)
         batch = self.following(batch)
+        if not rest:
+            return batch
         followed = batch.noise <= self._limit(batch) * batch.header_noise
         torn = {i: m.one for i, m in rest.items() if not m.placed}
         moved = {i for i in torn if batch.moving and batch.moving[i] is not None and followed[i]}
@@ -93,13 +101,9 @@ class Continuity:
         found = self._evidence(batch).found.any(axis=1)
         return set(map(int, np.flatnonzero(found | noisy | self._ending(batch))))
 
-    def _mended(self, batch: FrameBatch, settled: Container[int] = ()) -> dict[int, _Mending]:
-        """Those frames, but for the settled ones, of which breaks make something whole."""
-        tried = {
-            i: _Mending(self, one_frame(batch, i))
-            for i in sorted(self._suspects(batch))
-            if i not in settled
-        }
+    def _mended(self, batch: FrameBatch, frames: set[int]) -> dict[int, _Mending]:
+        """Those of the frames of which breaks make something whole."""
+        tried = {i: _Mending(self, one_frame(batch, i)) for i in sorted(frames)}
         return {i: mending for i, mending in tried.items() if mending.run()}
 
     def _evidence(self, batch: FrameBatch) -> Evidence:

@@ -91,12 +91,16 @@ def ends_early(
     # More than this is not noise: chance below 1e-4 up to 16 channels.
     quiet = np.flatnonzero(power < noise * (channels + 12.0 + 2.0 * np.sqrt(channels)))
     early = np.zeros(symbols.shape[0], np.bool_)
-    for i in quiet:
-        last = symbols[i, -_LAST:].astype(np.complex128)
-        points = vectors @ channel[i].T
-        near = 2.0 * np.real(last @ points.conj().T) - np.sum(np.abs(points) ** 2, axis=1)
-        mixture = logsumexp(near / max(noise[i], 1e-300), axis=1) - np.log(len(vectors))
-        early[i] = np.max(np.cumsum(-mixture[::-1])) > -np.log(CHANCE)
+    if not quiet.size:
+        return early
+    last = symbols[quiet, -_LAST:].astype(np.complex128)
+    points = vectors @ channel[quiet].transpose(0, 2, 1)  # (n, C, Nr)
+    near = 2.0 * np.real(last @ points.conj().transpose(0, 2, 1))
+    near -= np.sum(np.abs(points) ** 2, axis=2)[:, None]
+    scaled = near / np.maximum(noise[quiet], 1e-300)[:, None, None]
+    mixture = logsumexp(scaled, axis=2) - np.log(len(vectors))
+    worth = np.cumsum(-mixture[:, ::-1], axis=1)
+    early[quiet] = worth.max(axis=1) > -np.log(CHANCE)
     return early
 
 
