@@ -131,7 +131,8 @@ def night_row(k, **more):
         "snr_db": 20.0,
         "cfo_hz": 100.0,
         "clock_ppm": 1.0,
-        "outage": 0.0,
+        "outage_frames": 0,
+        "outage_of": 100,
         "frames_expected": 100,
         "frames_found": 100,
         "frames_lost": 0,
@@ -157,6 +158,9 @@ def test_what_stands_out_is_told_with_its_reason():
     said = found["m005", "cfo_hz"]["reason"]
     assert said.startswith("carrier offset 300 Hz, where 40 recordings have 99.5 Hz")
     assert "robust deviations above" in said
+    # One frame out of a hundred is no more than chance; thirty are.
+    one = [night_row(k, outage_frames=int(k == 4) + 30 * (k == 6)) for k in range(40)]
+    assert [(r["measurement"], r["figure"]) for r in find_standouts(one)] == [("m006", "outage")]
     power = [{"measurement": f"m{k:03d}", "antenna": 1, "power_db": -10.0} for k in range(40)]
     power[7]["power_db"] = -16.0
     found = [r for r in find_standouts([night_row(k) for k in range(40)], power)]

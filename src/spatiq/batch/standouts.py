@@ -61,14 +61,23 @@ def compared(row: dict[str, Any]) -> dict[str, tuple[float, float, float]]:
     if row["evm_percent"]:
         value = 20.0 * math.log10(row["evm_percent"] / 100.0)
         out["evm_db"] = value, value, 0.0
-    for name in ("snr_db", "cfo_hz", "clock_ppm", "outage"):
+    for name in ("snr_db", "cfo_hz", "clock_ppm"):
         if row[name] is not None:
             out[name] = row[name], row[name], 0.0
-    if row["frames_expected"]:
-        share = row["frames_lost"] / row["frames_expected"]
-        deviation = math.sqrt(max(share * (1 - share), 0.0) / row["frames_expected"])
-        out["lost_share"] = share, share, deviation
+    for name, part, of in (
+        ("lost_share", "frames_lost", "frames_expected"),
+        ("outage", "outage_frames", "outage_of"),
+    ):
+        if row[of]:
+            share = row[part] / row[of]
+            out[name] = share, share, _deviation(row[part], row[of])
     return out
+
+
+def _deviation(part: int, of: int) -> float:
+    """Standard deviation of a share, half a count added on either side: never 0."""
+    share = (part + 0.5) / (of + 1.0)
+    return math.sqrt(share * (1.0 - share) / of)
 
 
 def find_standouts(
