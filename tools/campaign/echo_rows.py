@@ -1,6 +1,7 @@
 """Loss of dispersive reception against a genie, in dB of SNR at a bit error ratio of 1e-3.
 
-The genie has the true instants, carrier, noise and taps, and the receiver's own detector; what lies
+The genie has the true carrier, noise and taps, the receiver's own detector, and samples at the same
+instants (with one sample a symbol period some are better than others, whatever is known); what lies
 between the two is what estimation costs. Both see the same channels and the same noise, only scaled
 from SNR to SNR, so that the loss scatters far less than either curve.
 """
@@ -125,8 +126,8 @@ def errors(point: Point, link: Link, frames: int, seed: int) -> Errors:
             seed=seed,
         )
         samples = capture.samples()
-        genie.append(_wrong(capture, genie_words(capture, samples, options)))
-        words, found = _received(capture, samples, options)
+        words, found, delays = _received(capture, samples, options)
+        genie.append(_wrong(capture, genie_words(capture, samples, options, delays)))
         missed += int(np.count_nonzero(~found))
         # A frame that was not found has all its bits wrong at random.
         bits = link.payload.n_bits
@@ -135,20 +136,24 @@ def errors(point: Point, link: Link, frames: int, seed: int) -> Errors:
 
 
 def genie_words(
-    capture: SimulatedCapture, samples: NDArray[np.complex64], options: ReceiverOptions
+    capture: SimulatedCapture,
+    samples: NDArray[np.complex64],
+    options: ReceiverOptions,
+    delays: NDArray[np.float64],
 ) -> Ints:
-    """Words (F, Kp) with everything but the words known."""
+    """Words (F, Kp) with everything but the words known; instants late by `delays` (F,) symbols."""
     truth = capture.truth
     layout = truth.link.layout
-    received = genie_symbols(truth, samples)
     decider = frame_decider(truth.link, options, dispersive_plan(truth.link, None), 0.0)
     nothing = np.full(layout.payload_index.size, -1, np.int64)
     words = []
     for f in range(truth.frames):
-        window, taps = _true_taps(truth.taps(f, np.arange(_LAGS.first, _LAGS.last + 1.0)))
+        lags = np.arange(_LAGS.first, _LAGS.last + 1.0) + delays[f]
+        window, taps = _true_taps(truth.taps(f, lags))
+        (received,) = genie_symbols(truth, samples, f, f + 1, float(delays[f]))
         channel = FirChannel(window, taps, truth.N0, 1, np.zeros(truth.link.antennas))
         whole = [(0, layout.length, channel)]
-        words.append(decider.decide(received[f], whole, truth.N0, nothing))
+        words.append(decider.decide(received, whole, truth.N0, nothing))
     return np.array(words)
 
 
@@ -166,11 +171,12 @@ def _wrong(capture: SimulatedCapture, words: Ints) -> Ints:
 
 def _received(
     capture: SimulatedCapture, samples: NDArray[np.complex64], options: ReceiverOptions
-) -> tuple[Ints, NDArray[np.bool_]]:
-    """Words (F, Kp) as measured, and which frames were found."""
+) -> tuple[Ints, NDArray[np.bool_], NDArray[np.float64]]:
+    """Words (F, Kp) as measured, which frames were found, and how late their instants are."""
     truth = capture.truth
     words = np.zeros((truth.frames, capture.link.layout.payload_index.size), np.int64)
     found = np.zeros(truth.frames, np.bool_)
+    delays = np.zeros(truth.frames)
     with tempfile.TemporaryDirectory() as folder:
         base = Path(folder) / "echoes"
         write_recording(base, samples, sample_rate=capture.sample_rate)
@@ -179,7 +185,8 @@ def _received(
             for i, start in enumerate(batch.columns["start_sample"]):
                 f = int(np.argmin(np.abs(truth.starts - start)))
                 words[f], found[f] = batch.words_decided[i], True
-    return words, found
+                delays[f] = (start - truth.starts[f]) / truth.samples_per_symbol
+    return words, found, delays
 
 
 def rows(quick: bool) -> Iterator[tuple[Point, Errors, float, float]]:
