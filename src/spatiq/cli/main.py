@@ -14,6 +14,7 @@ from spatiq.cli.catalogue import catalogue_app
 from spatiq.cli.guard import guarded
 from spatiq.cli.link import link_app
 from spatiq.cli.measure import measure_command
+from spatiq.cli.report import report_command
 from spatiq.cli.show import show_command
 from spatiq.cli.simulate import simulate_command
 from spatiq.cli.waveform import waveform_command
@@ -49,6 +50,7 @@ def _program(
 
 app.command("measure")(guarded(measure_command))
 app.command("show")(guarded(show_command))
+app.command("report")(guarded(report_command))
 app.command("batch")(guarded(batch_command))
 app.add_typer(catalogue_app, name="catalogue")
 app.add_typer(link_app, name="link")

@@ -1,0 +1,1 @@
+"""Pages and figures: what an engineer looks at before reading tables."""
