@@ -341,6 +341,25 @@ def test_what_another_run_has_claimed_is_left_to_it(bench):
     assert not stale.exists()
 
 
+def test_two_runs_share_the_work(bench):
+    """While this run is at its first recording, another one measures the rest."""
+    command = [sys.executable, "-c", "from spatiq.cli.main import run; run()", "batch"]
+    command += [bench / "night", "--link", bench / "lab.link.toml", "--out", bench / "results"]
+
+    class Slow(HereAndNow):
+        def submit(self, task):
+            if not self.done:
+                other = subprocess.run(
+                    [*command, "--settle", "0"], capture_output=True, check=False
+                )
+                assert other.returncode == 3 and b"1 in work by another run" in other.stderr
+            return super().submit(task)
+
+    tally, done = one_round(bench, Slow())
+    assert (tally.measured, tally.known, done) == (1, 2, [("measure_whole", "c")])
+    assert len(rows(bench, "SELECT * FROM night")) == 3
+
+
 def test_shared_out_or_not_the_catalogue_says_the_same(bench):
     one_round(bench)
     _, done = one_round(bench, split_above=40_000, out="split")

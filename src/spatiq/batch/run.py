@@ -102,6 +102,7 @@ class Round:
         self._split_above = split_above
         self._progress = progress
         self._warm = warm
+        self._survey = Survey(terms, catalogue)
         self.tally = Tally()
 
     def run(self, items: Sequence[Item]) -> Tally:
@@ -126,7 +127,7 @@ class Round:
                     self._claims.drop(work.case.name)
                 self._progress(self.tally)
         finally:
-            for work in (*pending, *active):
+            for work in active:
                 self._claims.drop(work.case.name)
         return self.tally
 
@@ -134,12 +135,9 @@ class Round:
         """Enter what is decided at a look; what is left is to be measured."""
         todo = []
         tally = self.tally
-        for case in Survey(self._terms, self._catalogue).cases(items):
+        for case in self._survey.cases(items):
             if case.state is State.TO_DO:
-                if self._claims.claim(case.name):
-                    todo.append(case)
-                else:
-                    tally.elsewhere += 1
+                todo.append(case)
                 continue
             if case.state is State.FAILED and not case.known:
                 tally.failed += 1
@@ -184,11 +182,25 @@ class Round:
                 if not pending:
                     return
                 work = pending.pop(0)
+                if not self._is_ours(work.case):
+                    continue
                 work.ready = work.steps.begin()
                 active.append(work)
             task = work.ready.pop(0)
             running[self._workers.submit(task)] = (work, task)
             work.running += 1
+
+    def _is_ours(self, case: Case) -> bool:
+        """Claim a recording; not where another run has it, or has measured it in the meantime."""
+        claimed = self._claims.claim(case.name)
+        if claimed and self._survey.again(case).state is State.TO_DO:
+            return True
+        self.tally.known += claimed
+        self.tally.elsewhere += not claimed
+        self.tally.to_do -= 1
+        self.tally.bytes_total -= case.look.size
+        self._claims.drop(case.name)
+        return False
 
     def _take(self, work: _Work, task: Task, future: Future[Outcome]) -> None:
         """A task has ended, well or not."""

@@ -119,6 +119,15 @@ class Survey:
         for item in items:
             yield self.case(item, known.get((str(item.path), item.member)))
 
+    def again(self, case: Case) -> Case:
+        """The case once more, by what the catalogue says now."""
+        item = case.item
+        query = f"{_KNOWN} WHERE path = ? AND member = ?"
+        known = self._catalogue.rows(query, [str(item.path), item.member])
+        if not known or known[0]["state"] != State.MEASURED.value:
+            return case
+        return self.case(item, known[0])
+
     def case(self, item: Item, known: dict[str, Any] | None) -> Case:
         """What is to be done with a recording, of which the catalogue knows `known`."""
         recording: Recording | None = None
