@@ -11,6 +11,7 @@ import typer
 from spatiq import __version__
 from spatiq.cli.batch import batch_command
 from spatiq.cli.catalogue import catalogue_app
+from spatiq.cli.figures import figures_command
 from spatiq.cli.guard import guarded
 from spatiq.cli.link import link_app
 from spatiq.cli.measure import measure_command
@@ -51,6 +52,7 @@ def _program(
 app.command("measure")(guarded(measure_command))
 app.command("show")(guarded(show_command))
 app.command("report")(guarded(report_command))
+app.command("figures")(guarded(figures_command))
 app.command("batch")(guarded(batch_command))
 app.add_typer(catalogue_app, name="catalogue")
 app.add_typer(link_app, name="link")

@@ -135,7 +135,7 @@ def timing_track(seen: Gathered) -> Plot:
     late = _lateness(c["time_s"], c["segment"], period)[d] * rate
     time = c["time_s"][d]
     panels = [
-        Panel("time, s", "start, symbols late", [Series("", "points", time, late, frames=d)]),
+        Panel("time, s", "late, symbols", [Series("", "points", time, late, frames=d)]),
         Panel(
             "time, s",
             "clock, ppm",
@@ -216,8 +216,8 @@ def channel_over_time(seen: Gathered) -> Plot:
     ]
     like = _likeness(h)
     panels = [
-        Panel("time, s", "level, dB of full scale", series),
-        Panel("time, s", "likeness, 0 to 1", [Series("", "line", time, like, frames=frames)]),
+        Panel("time, s", "level, dB", series),
+        Panel("time, s", "likeness", [Series("", "line", time, like, frames=frames)]),
     ]
     rows = []
     for r, a in paths:
@@ -237,8 +237,8 @@ def channel_over_time(seen: Gathered) -> Plot:
     )
     least = float(like.min()) if like.size else np.nan
     says = (
-        "Likeness is the correlation of a frame's channel with that of the middle frame, common"
-        f" phase left out: 1 means that nothing moved. Least here: {number(least)}."
+        "Levels are relative to full scale. Likeness is the correlation of a frame's channel with"
+        f" that of the middle frame, common phase left out: 1 means that nothing moved. Least here: {number(least)}."
     )
     note = (
         f"Drawn are the first {len(drawn)} of {len(paths)} paths; the table has all."

@@ -22,7 +22,7 @@
     const tone = hue(series.hue);
     const out = {
       type: "scatter", x: series.x || [], y: series.y || [], name: series.name,
-      showlegend: Boolean(series.name) && !panel.y_names.length,
+      showlegend: Boolean(series.name) && !panel.y_names.length && (series.y || []).some((v) => v !== null),
       xaxis: `x${id}`, yaxis: `y${id}`, customdata: series.frames,
       mode: "markers", cliponaxis: true,
       marker: { color: tone, size: 6, symbol: SHAPES[series.hue % 8] },
