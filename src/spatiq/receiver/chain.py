@@ -38,6 +38,7 @@ from spatiq.receiver.front_end_survey import LITTLE_CARRIER, Survey, line_share,
 from spatiq.receiver.interferer import Interferer
 from spatiq.receiver.link_tables import LinkTables, link_tables
 from spatiq.receiver.matched_filter import FilterBank, filter_bank
+from spatiq.receiver.narrow_band_reception import NarrowBandReception
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.refit import Refit
 from spatiq.receiver.soft_output import SoftOutput, check_soft_output
@@ -121,7 +122,12 @@ def chain_parts(recording: Recording, link: Link, options: ReceiverOptions) -> C
         bank=filter_bank(link.pulse, samples_per_symbol),
         tables=link_tables(link),
         pattern=sync_pattern(link, options, recording.channels),
-        survey=survey_recording(recording, link, options.cfo_range / samples_per_symbol),
+        survey=survey_recording(
+            recording,
+            link,
+            options.cfo_range / samples_per_symbol,
+            flat=not is_dispersive(link, options),
+        ),
         segments=recording.segments,
     )
 
@@ -148,13 +154,11 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     constant, lines = parts.survey.constant, parts.survey.lines
     if options.spectrum == "inverted":
         constant, lines = constant.conj(), tuple(-f for f in lines)
-    reception: list[Stage] = [
-        acquisition,
-        Tracking(parts.bank, parts.tables, clock_std, walk),
-        refit,
-    ]
+    tracking = Tracking(parts.bank, parts.tables, clock_std, walk)
+    reception: list[Stage] = [acquisition, tracking, refit]
     front_end = FrontEnd(refit, constant, expected)
-    searched = line_share(link) < LITTLE_CARRIER
+    band = parts.survey.band
+    searched = line_share(link) < LITTLE_CARRIER and band is None
     corrections: list[Stage] = [
         front_end,
         Interferer(refit, front_end, lines, searched, parts.segments, expected),
@@ -165,8 +169,10 @@ def standard_stages(link: Link, options: ReceiverOptions, parts: ChainParts) -> 
     check_detector_applies(options.detector, link.codebook)
     runs = link.layout.payload_runs()
     detector = find_detector(options.detector)
+    if band is not None:
+        band = band.inverted() if options.spectrum == "inverted" else band
     stages: list[Stage] = [
-        *reception,
+        *(reception if band is None else [NarrowBandReception(band, acquisition, tracking, refit)]),
         *_against_the_channel(link, acquisition, refit, corrections),
         Detection(link.codebook, detector, options.compare_two_step, runs),
     ]

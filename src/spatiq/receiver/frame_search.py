@@ -27,6 +27,7 @@ from spatiq.link.description import Link
 from spatiq.receiver.frame_search_kernels import metric_at, raise_peak, window_energy
 from spatiq.receiver.frame_search_law import exceeds, noise_powers
 from spatiq.receiver.matched_filter import FilterBank, derotate, sample_instants
+from spatiq.receiver.narrow_band_survey import NarrowBand
 from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
 from spatiq.recording.placement import Segment
@@ -185,12 +186,19 @@ def first_needed(
 class FrameSearch:
     """Finds sync sections in one segment; lags are asked for in rising order.
 
-    `lead`: symbol periods before a sync section that its frame still needs.
+    `lead`: symbol periods before a sync section that its frame still needs, and the filter that
+    excises the narrow-band noise `band`.
     """
 
     def __init__(
-        self, stream: SampleStream, bank: FilterBank, pattern: SyncPattern, lead: int = 0
+        self,
+        stream: SampleStream,
+        bank: FilterBank,
+        pattern: SyncPattern,
+        lead: int = 0,
+        band: NarrowBand | None = None,
     ) -> None:
+        self._band = band
         self._lead = lead
         self._stream = stream
         self._bank = bank
@@ -228,7 +236,7 @@ class FrameSearch:
         origin = int(np.floor(first * self._spacing)) - half
         reach = int(np.ceil(count * self._spacing)) + 2 * half + 3
         begin = self._stream.start + origin
-        planes = np.ascontiguousarray(self._stream.planes(begin, begin + reach))
+        planes = self._planes(begin, begin + reach)
         if filter_bin:
             planes = planes.copy()
             cycles = filter_bin / self._pattern.transform_size / self._bank.samples_per_symbol
@@ -237,6 +245,15 @@ class FrameSearch:
         taps, phases = self._bank.taps, self._bank.phases
         sample_instants(planes, origin, first, self._spacing, taps, phases, out)
         return out
+
+    def _planes(self, begin: int, end: int) -> NDArray[np.float32]:
+        """Samples begin..end-1 (Nr, 2, n), narrow-band noise excised."""
+        if self._band is None:
+            return np.ascontiguousarray(self._stream.planes(begin, end))
+        reach = self._band.reach
+        wider = self._stream.planes(begin - reach, end + reach)
+        samples = self._band.excised((wider[:, 0] + 1j * wider[:, 1]).astype(np.complex64))
+        return np.stack([samples.real, samples.imag], axis=1)
 
     def _block(self, index: int) -> tuple[NDArray[np.float32], NDArray[np.int32]]:
         """Best metric over carrier bins, and its bin, for the lags of one block of the grid."""

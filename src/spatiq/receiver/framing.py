@@ -121,7 +121,9 @@ class Framing:
         self._geometry = frame_geometry(link, bank, options)
         self._clip = clip_levels(recording)
         survey = survey or Survey(np.zeros(recording.channels, np.complex128))
-        self._cleaning = Cleaning(survey, self._clip, options.spectrum == "inverted")
+        inverted = options.spectrum == "inverted"
+        self._cleaning = Cleaning(survey, self._clip, inverted)
+        self._band = survey.band.inverted() if survey.band and inverted else survey.band
         self._spoiled = SpoiledSamples(2 * bank.half)
         frame_bytes = recording.channels * 2 * self._geometry.window * 4
         self._batch_size = max(1, min(_BATCH_FRAMES, _BATCH_BYTES // frame_bytes))
@@ -203,13 +205,16 @@ class Framing:
         """Frames of one segment: what was found, and the start of a frame in file samples."""
         sync = self._link.layout.sync.start
         lead = sync + 2 * self._geometry.guard
+        band = self._band
+        if band is not None:
+            lead += int(np.ceil(band.reach / self._geometry.samples_per_symbol))
         place, begin = self._stretch.begin(segment)
         if place.last is not None:
             place = Place(segment.index, self._resume(place.last), place.last)
         if begin is None:
             begin = first_needed(segment, place.lag, self._bank, self._pattern, lead)
         stream = self._stream(segment, begin)
-        search = FrameSearch(stream, self._bank, self._pattern, lead)
+        search = FrameSearch(stream, self._bank, self._pattern, lead, band)
         spacing = self._geometry.samples_per_symbol / LAGS_PER_SYMBOL
         while True:
             found, crossed = self._stretch.next(search, place, self._expected)

@@ -21,6 +21,7 @@ import scipy.ndimage
 from numpy.typing import NDArray
 
 from spatiq.link.description import Link
+from spatiq.receiver.narrow_band_survey import NarrowBand, find_narrow_band
 from spatiq.recording.recording import Recording
 
 CHUNK = 8192  # samples of a block, and of the pieces from which lines are taken out
@@ -42,10 +43,12 @@ class Survey:
     Attributes:
         constant: complex128 (Nr,); zero where it is not significant.
         lines: frequencies of interfering lines, cycles per sample, strongest first.
+        band: narrow-band noise, which the search works without; it is not taken out of samples.
     """
 
     constant: NDArray[np.complex128]
     lines: tuple[float, ...] = ()
+    band: NarrowBand | None = None
 
     @property
     def clean(self) -> bool:
@@ -53,20 +56,30 @@ class Survey:
         return not self.lines and not self.constant.any()
 
 
-def survey_recording(recording: Recording, link: Link, carrier_reach: float) -> Survey:
+def survey_recording(
+    recording: Recording, link: Link, carrier_reach: float, *, flat: bool = True
+) -> Survey:
     """Look at a recording's blocks.
 
     Args:
         recording: opened recording.
         link: tells how strong a line the signal itself may have.
         carrier_reach: where that line may lie: +- cycles per sample.
+        flat: whether narrow-band noise is looked for: frames on a dispersive channel are received
+            without regard to it.
     """
     blocks = _survey_blocks(recording)
     own = line_share(link)
     constant = np.array([_constant(channel, own) for channel in blocks])
     steady = blocks - constant[:, None, None].astype(np.complex64) if constant.any() else blocks
     lines = _lines(steady, carrier_reach if own > LITTLE_CARRIER else 0.0)
-    return Survey(constant, lines)
+    band = None
+    if own <= LITTLE_CARRIER and link.codebook.block == 1 and flat:
+        samples_per_symbol = recording.sample_rate / link.symbol_rate_hz
+        band = find_narrow_band(steady, link, samples_per_symbol, carrier_reach)
+    if band is not None:
+        lines = tuple(f for f in lines if abs(f - band.frequency) > 4 * band.width)
+    return Survey(constant, lines, band)
 
 
 def _survey_blocks(recording: Recording) -> NDArray[np.complex64]:

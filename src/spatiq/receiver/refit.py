@@ -91,12 +91,12 @@ class Refit:
                 batch.antenna_energy[i],
             )
         batch.t0[i], batch.step[i], batch.timing_var[i], batch.step_var[i] = timing
-        self._residuals(batch, i, before, room)
+        self.residuals(batch, i, before, room)
         take_symbols(room[0], tables.payload, tables.symbol_amplitude, batch.symbols[i])
         slope = mean_slope(tables.active, batch.phase[i])  # radians per symbol period
         batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
 
-    def _residuals(
+    def residuals(
         self, batch: FrameBatch, i: int, before: tuple[float, float], room: Room
     ) -> None:
         """What the residuals of frame i say of delays, noise, motion and breaks.
