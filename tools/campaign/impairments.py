@@ -173,6 +173,22 @@ IMPAIRMENTS: dict[str, Impairment] = {
         whiten=True,
         snr_db=20.0,
     ),
+    "narrow-band noise +10 dB, 0.02/T wide, 2 channels": Impairment(
+        scenario={"arriving": (NarrowBandNoise(0.13 * RATE, 0.02 * RATE, 10.0),)},
+        whiten=True,
+        snr_db=20.0,
+    ),
+    # Without the noise the genie has some 2.5 dB that no receiver can have (Kolmogorov's bound).
+    "narrow-band noise 0 dB, 0.002/T wide, 1 channel, 20 dB in each frame": Impairment(
+        scenario={
+            "arriving": (NarrowBandNoise(0.13 * RATE, 0.002 * RATE, 0.0),),
+            "snr_reference": "frame",
+        },
+        clean={"arriving": ()},
+        clean_is="the same capture without it",
+        receivers=1,
+        snr_db=20.0,
+    ),
     "narrow-band noise -15 dB, 0.02/T wide, 1 channel, 16 dB in each frame": Impairment(
         scenario={
             "arriving": (NarrowBandNoise(0.13 * RATE, 0.02 * RATE, -15.0),),

@@ -81,8 +81,8 @@ class FrameBatch:
         step: float64 (F,); samples per symbol as received.
         carrier: float64 (F,); carrier offset removed from `planes` so far, cycles per sample.
         turns: float64 (F,); what was removed is exp(2 pi j (carrier n - turns)), n in the window.
-        line_frequency: float64 (F, MOST_LINES); interfering lines, cycles per sample as received;
-            NaN where there are none.
+        line_frequency: float64 (F, MOST_LINES); interfering lines, or the centre of narrow-band
+            noise, cycles per sample as received; NaN where there are none.
         line_power: float64 (F, MOST_LINES, Nr); their power.
         corrected: uint8 (F,); what of the front end was set right, see `front_end`.
         lost: frames known to be lost before the last of these.

@@ -29,7 +29,8 @@ from spatiq.receiver.tracking import Tracking
 from spatiq.receiver.whitening import whitening_matrix
 
 Complex = NDArray[np.complex128]
-_ROUNDS = 4
+_ROUNDS = 12
+_SETTLED = 1e-5  # of the power sent: decisions that change by less are left
 _CHANNEL_TURNS = 3  # the channel's fit and the noise's, in turn, between refits
 _GRID = 4096  # frequencies at which the noise's spectrum is read off
 
@@ -129,10 +130,15 @@ class NarrowBandReception:
     ) -> None:
         """Interpolate and refit in turn; leave the frame in the coordinates of the antennas."""
         self.refit.refit_frame(batch, i, room)
+        before = np.zeros(1, np.complex128)
         for _ in range(_ROUNDS):
             y, phase = self._level(batch, i, received)
             mean = self._sent(room)
-            channel = np.linalg.solve(whitener, batch.channel[i])
+            changed = np.sum(np.abs(mean - before) ** 2)
+            before = mean
+            channel: Complex = np.asarray(
+                np.linalg.solve(whitener, batch.channel[i]), np.complex128
+            )
             left, channel, noise, regression = _separate(y, mean, channel)
             # The samples hold the phase that was taken from y.
             taken = y - mean @ channel.T - left
@@ -142,6 +148,8 @@ class NarrowBandReception:
             batch.channel[i] = whitener @ channel
             batch.noise[i] = float(np.mean(np.abs(left @ whitener.T) ** 2))
             self.refit.refit_frame(batch, i, room)
+            if changed <= _SETTLED * np.sum(np.abs(mean) ** 2):
+                break
         self._turn_back(batch, i, whitener, room)
         self._tell(batch, i, noise, regression)
 
@@ -207,7 +215,8 @@ def _separate(
 def _little(covariance: Complex) -> Complex:
     """A billionth on the diagonal: channels without any noise stay invertible."""
     size = covariance.shape[0]
-    return 1e-9 * float(np.trace(covariance).real) / size * np.eye(size, dtype=np.complex128)
+    level = 1e-9 * float(np.trace(covariance).real) / size
+    return np.asarray(level * np.eye(size), np.complex128)
 
 
 def modulated(
@@ -226,4 +235,4 @@ def modulated(
     for m in range(length):
         # Instants lie more than a sample apart: no place comes twice.
         wave[:, begin[inside] + m] += (values[inside] * rows[inside, m, None]).T
-    return wave[:, length : length + count]
+    return np.asarray(wave[:, length : length + count], np.complex128)

@@ -98,4 +98,5 @@ def interpolated(noise: Complex) -> tuple[Complex, Regression]:
     one, one_blocks = _apply(forward, noise)
     other, other_blocks = _apply(backward, noise[::-1])
     score, blocks = one + other[::-1], one_blocks + other_blocks[::-1]
-    return np.linalg.solve(blocks, score[..., None])[..., 0], forward
+    left = np.linalg.solve(blocks, score[..., None])[..., 0]
+    return np.asarray(left, np.complex128), forward
