@@ -147,10 +147,11 @@ class NarrowBandReception:
             whitener = self._turn(batch, i, covariance + _little(covariance))
             batch.channel[i] = whitener @ channel
             batch.noise[i] = float(np.mean(np.abs(left @ whitener.T) ** 2))
+            timing = float(batch.t0[i]), float(batch.step[i])
             self.refit.refit_frame(batch, i, room)
             if changed <= _SETTLED * np.sum(np.abs(mean) ** 2):
                 break
-        self._turn_back(batch, i, whitener, room)
+        self._turn_back(batch, i, whitener, timing, room)
         self._tell(batch, i, noise, regression)
 
     def _level(
@@ -169,8 +170,10 @@ class NarrowBandReception:
         mean[active - active[0]] = room[4]
         return mean
 
-    def _turn_back(self, batch: FrameBatch, i: int, whitener: Complex, room: Room) -> None:
-        """Samples, channel, noise and residuals as at the antennas."""
+    def _turn_back(
+        self, batch: FrameBatch, i: int, whitener: Complex, before: tuple[float, float], room: Room
+    ) -> None:
+        """As at the antennas; `before`: t0 and step ahead of the last refit."""
         back = np.linalg.inv(whitener)
         planes = back @ (batch.planes[i, :, 0] + 1j * batch.planes[i, :, 1])
         batch.planes[i, :, 0], batch.planes[i, :, 1] = planes.real, planes.imag
@@ -180,7 +183,7 @@ class NarrowBandReception:
         for part in room[:2]:
             values = (part[:, 0] + 1j * part[:, 1]) @ back.T
             part[:, 0], part[:, 1] = values.real, values.imag
-        self.refit.residuals(batch, i, room)
+        self.refit.residuals(batch, i, before, room)
         batch.residual[i] = spread
         tables = self.refit.tables
         take_symbols(room[0], tables.payload, tables.symbol_amplitude, batch.symbols[i])

@@ -96,9 +96,7 @@ class Refit:
         slope = mean_slope(tables.active, batch.phase[i])  # radians per symbol period
         batch.carrier_estimate[i] = batch.carrier[i] + slope / (2 * np.pi * batch.step[i])
 
-    def residuals(
-        self, batch: FrameBatch, i: int, before: tuple[float, float], room: Room
-    ) -> None:
+    def residuals(self, batch: FrameBatch, i: int, before: tuple[float, float], room: Room) -> None:
         """What the residuals of frame i say of delays, noise, motion and breaks.
 
         `before`: t0 and step ahead of the refit.
