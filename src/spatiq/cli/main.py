@@ -18,6 +18,7 @@ from spatiq.cli.measure import measure_command
 from spatiq.cli.report import report_command
 from spatiq.cli.show import show_command
 from spatiq.cli.simulate import simulate_command
+from spatiq.cli.verify import verify_command
 from spatiq.cli.waveform import waveform_command
 
 app = typer.Typer(
@@ -53,6 +54,7 @@ app.command("measure")(guarded(measure_command))
 app.command("show")(guarded(show_command))
 app.command("report")(guarded(report_command))
 app.command("figures")(guarded(figures_command))
+app.command("verify")(guarded(verify_command))
 app.command("batch")(guarded(batch_command))
 app.add_typer(catalogue_app, name="catalogue")
 app.add_typer(link_app, name="link")

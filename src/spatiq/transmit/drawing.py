@@ -115,6 +115,7 @@ def draw_truth(link: Link, scenario: Scenario, terms: Terms, first: float | None
         rotations=scenario.rotations(),
         moving=field,
         echoes=echoes,
+        faults=tuple(scenario.faults),
     )
 
 

@@ -25,6 +25,7 @@ from spatiq.transmit.rotation import CarrierDrift, Rotation
 from spatiq.transmit.second_transmitter import OtherTransmitter
 from spatiq.transmit.spacing import Spacing
 from spatiq.transmit.tapped_delay_line import TappedDelayLine
+from spatiq.transmit.transmitter_faults import TransmitterFault
 
 # Bits per component that the simulator puts into each SigMF sample format; None: floating point,
 # nothing to round. Samples are made in single precision, so 24 bits is the most there can be.
@@ -103,6 +104,7 @@ class Scenario:
         noise_shape: colour of the noise; N0 stays the variance of a sample.
         gains: gain steps, straight after noise.
         losses: samples that are not recorded.
+        faults: of the transmitter.
     """
 
     receive_channels: int = 2
@@ -138,6 +140,7 @@ class Scenario:
     noise_shape: NoiseShape | None = None
     gains: GainPlan | None = None
     losses: Losses | None = None
+    faults: Sequence[TransmitterFault] = ()
 
     def check(self, link: Link) -> None:
         """Refuse counts and durations out of range; the rest is refused where it is used."""

@@ -17,6 +17,7 @@ from spatiq.transmit.gain_steps import GainSteps
 from spatiq.transmit.losses import recorded_index
 from spatiq.transmit.moving_channel import Field
 from spatiq.transmit.rotation import CarrierDrift, Rotation, phase_chunks
+from spatiq.transmit.transmitter_faults import TransmitterFault
 
 
 def _no_gaps() -> NDArray[np.int64]:
@@ -63,6 +64,7 @@ class Truth:
             the path's delay; None of a flat one.
         gain_steps: gain after noise; None: 1 throughout.
         gaps: int64 (G, 2); first lost sample and count of each run of samples that was lost.
+        faults: of the transmitter: what it sends is not what the description says.
     """
 
     link: Link
@@ -86,6 +88,7 @@ class Truth:
     echoes: Echoes | None = None
     gain_steps: GainSteps | None = None
     gaps: NDArray[np.int64] = field(default_factory=_no_gaps)
+    faults: tuple[TransmitterFault, ...] = ()
 
     @property
     def frames(self) -> int:
@@ -113,7 +116,10 @@ class Truth:
 
     def vectors(self, first: int = 0, stop: int | None = None) -> NDArray[np.complex128]:
         """Transmit vectors of frames first..stop-1, complex128 (F, K, Nt)."""
-        return vectors_of_words(self.link, self.words(first, stop))
+        vectors = vectors_of_words(self.link, self.words(first, stop))
+        for fault in self.faults:
+            vectors = fault(vectors, self.link.layout)
+        return vectors
 
     @property
     def drift_hz_per_s(self) -> float:
