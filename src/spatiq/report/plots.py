@@ -73,6 +73,7 @@ class Panel:
     log_x: bool = False
     log_y: bool = False
     square: bool = False
+    reach: float | None = None  # both axes from -reach to reach
     dates: bool = False
     matrix: Matrix | None = None
     x_names: Sequence[str] = ()  # of 0, 1, 2, ...
@@ -135,7 +136,7 @@ def _series(series: Series) -> dict[str, Any]:
 def _panel(panel: Panel) -> dict[str, Any]:
     told = {
         name: getattr(panel, name)
-        for name in ("title", "x_title", "y_title", "log_x", "log_y", "square", "dates")
+        for name in ("title", "x_title", "y_title", "log_x", "log_y", "square", "reach", "dates")
     }
     told["series"] = [_series(s) for s in panel.series]
     told["x_names"], told["y_names"] = list(panel.x_names), list(panel.y_names)

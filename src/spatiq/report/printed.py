@@ -10,6 +10,7 @@ from typing import Any
 import matplotlib
 import numpy as np
 from matplotlib.axes import Axes
+from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.figure import Figure
 from numpy.typing import NDArray
 
@@ -23,6 +24,7 @@ COLUMN_MM = 88.0  # of two columns on A4; common practice, no source
 _HUES = ("#0b5a8a", "#b3480a", "#00795a", "#8c3f7d", "#6b5a00", "#2f7fb5", "#1d2329", "#b0305a")
 _SHAPES = ("o", "P", "s", "D", "^", "X", "*", "p")
 _DASHES = ("-", "--", ":", "-.", (0, (8, 3)), (0, (8, 3, 2, 3)))
+_DENSITY = LinearSegmentedColormap.from_list("density", ["#8fb9d9", "#062a45"])
 _STYLE: Any = {
     "font.size": 7,
     "axes.titlesize": 7,
@@ -130,7 +132,9 @@ def _draw(place: Axes, panel: Panel) -> None:
     if panel.log_y:
         place.set_yscale("log")
     if panel.square:
-        place.set_aspect("equal", adjustable="datalim")
+        place.set_aspect("equal", adjustable="box" if panel.reach else "datalim")
+    if panel.reach:
+        place.set(xlim=(-panel.reach, panel.reach), ylim=(-panel.reach, panel.reach))
     if panel.x_names:
         place.set_xticks(range(len(panel.x_names)), panel.x_names)
         place.set_xlim(-0.6, len(panel.x_names) - 0.4)
@@ -148,7 +152,7 @@ def _series(place: Axes, series: Series, panel: Panel) -> None:
         place.plot(x, y, linestyle=_DASHES[series.hue % 6], color=tone, label=name)
     elif series.kind == "density":
         weights = np.log10(np.asarray(series.weights, float))
-        place.scatter(x, y, c=weights, s=1.5, marker="s", cmap="cividis_r", linewidths=0)
+        place.scatter(x, y, c=weights, s=1.5, marker="s", cmap=_DENSITY, linewidths=0)
     elif series.kind == "cloud":
         place.scatter(x, y, s=1.0, color=tone, linewidths=0, alpha=0.6)
     elif series.kind == "bounds":

@@ -89,6 +89,7 @@ def received_symbols(seen: Gathered) -> Plot:
     words = np.concatenate([p[1] for p in parts])
     book, first = link.codebook, first_values(link)
     names = list(seen.results.set_names)
+    reach = _reach(z[np.isfinite(z)])
     panels, rows = [], []
     for index, name in enumerate(names):
         here = (book.set_index[words] == index) & np.isfinite(z)
@@ -99,8 +100,8 @@ def received_symbols(seen: Gathered) -> Plot:
         worst = 100 * np.sqrt(error.max() / power) if error.size else np.nan
         rows.append((name, int(here.sum()), fixed(float(evm)), fixed(float(worst))))
         if index < _MOST_PANELS:
-            series = [_cloud(z[here]), Series("", "points", ideal.real, ideal.imag, hue=1)]
-            panels.append(Panel("I", "Q", series, title=f"antenna {name}", square=True))
+            series = [_cloud(z[here], reach), Series("", "points", ideal.real, ideal.imag, hue=1)]
+            panels.append(Panel("I", "Q", series, f"antenna {name}", square=True, reach=reach))
     note = f"Symbols of {count(int(frames.size))} of {count(seen.count)} frames."
     if len(names) > _MOST_PANELS:
         note += f" Drawn are {_MOST_PANELS} of {len(names)} antenna sets; the table has all."
@@ -112,10 +113,16 @@ def received_symbols(seen: Gathered) -> Plot:
     return Plot("symbols", title, says, panels, table, abreast=4, note=note)
 
 
-def _cloud(z: NDArray[np.complex128]) -> Series:
+def _reach(z: NDArray[np.complex128]) -> float:
+    """Half the side of the square that holds nearly all symbols."""
+    if not z.size:
+        return 1.0
+    return float(np.quantile(np.maximum(np.abs(z.real), np.abs(z.imag)), 0.9995)) * 1.15
+
+
+def _cloud(z: NDArray[np.complex128], reach: float) -> Series:
     if z.size <= _MOST_POINTS:
         return Series("", "cloud", z.real, z.imag)
-    reach = float(np.quantile(np.maximum(np.abs(z.real), np.abs(z.imag)), 0.9995)) * 1.15
     counts, edges, _ = np.histogram2d(
         z.real, z.imag, bins=_CELLS, range=[[-reach, reach], [-reach, reach]]
     )

@@ -238,7 +238,8 @@ def channel_over_time(seen: Gathered) -> Plot:
     least = float(like.min()) if like.size else np.nan
     says = (
         "Levels are relative to full scale. Likeness is the correlation of a frame's channel with"
-        f" that of the middle frame, common phase left out: 1 means that nothing moved. Least here: {number(least)}."
+        " that of the middle frame, common phase left out: 1 means that"
+        f" nothing moved. Least here: {number(least)}."
     )
     note = (
         f"Drawn are the first {len(drawn)} of {len(paths)} paths; the table has all."

@@ -164,6 +164,7 @@
       } else if (panel.square) {
         Object.assign(up, { scaleanchor: `x${id}`, constrain: "domain", nticks: 5 });
         Object.assign(across, { constrain: "domain", nticks: 5 });
+        if (panel.reach) across.range = up.range = [-panel.reach, panel.reach];
       }
       panel.links.forEach(([x0, y0, x1, y1]) => layout.shapes.push({
         type: "line", x0, y0, x1, y1, xref: `x${id}`, yref: `y${id}`, line: { color: hue(1), width: 2, dash: "dot" },
