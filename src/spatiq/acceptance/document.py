@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
 
@@ -50,6 +50,7 @@ def document(verification: Verification, limits: Limits, subject: Subject) -> di
         "confidence": limits.confidence,
         "frames": verification.frames,
         "lost": verification.lost,
+        "causes": [asdict(cause) for cause in verification.causes],
         "judgements": [_judgement(j) for j in verification.judgements],
         "figures": [_figure(f) for f in verification.figures],
         "cannot_tell": verification.cannot_tell,
@@ -95,15 +96,15 @@ def write_json(path: Path, made: dict[str, Any], *, overwrite: bool = False) -> 
 def write_hdf5(path: Path, made: dict[str, Any], *, overwrite: bool = False) -> None:
     """The document as an HDF5 file.
 
-    Tables `figures` and `judgements` are groups with a dataset for each column (NaN: missing; text
-    in UTF-8); all else is an attribute of the root, lists and counts as JSON.
+    Tables `figures`, `judgements` and `causes` are groups with a dataset for each column (NaN:
+    missing; text in UTF-8); all else is an attribute of the root, lists and counts as JSON.
     """
     with (
         whole_file(path, overwrite=overwrite) as partial,
         h5py.File(partial, "w") as file,
     ):
         for key, value in made.items():
-            if key in ("figures", "judgements"):
+            if key in ("figures", "judgements", "causes"):
                 _table(file.create_group(key), value)
             else:
                 simple = isinstance(value, str | int | float)
@@ -111,7 +112,7 @@ def write_hdf5(path: Path, made: dict[str, Any], *, overwrite: bool = False) -> 
 
 
 def _table(group: h5py.Group, rows: list[dict[str, Any]]) -> None:
-    numbers = ("value", "low", "high", "lower", "upper", "frames", "frames_needed")
+    numbers = ("value", "low", "high", "lower", "upper", "frames", "frames_needed", "chance")
     for name in rows[0] if rows else ():
         column = [row[name] for row in rows]
         if name in numbers:

@@ -31,7 +31,7 @@ from spatiq.recording.recording import Recording
 from spatiq.transmit.frames import vectors_of_words
 
 # A payload that differs from the expected one in so many words is no reference for its symbols.
-_FOREIGN = 0.5
+_FOREIGN = 0.3
 TIMING_STEP = 0.02  # symbol periods between the instants that timing is fitted from
 _KEPT = (Acquisition, Tracking, Refit, DifferentialWhitening, Detection)
 

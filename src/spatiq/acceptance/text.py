@@ -25,6 +25,12 @@ def _lines(made: dict[str, Any]) -> Iterator[str]:
     )
     for reason, count in made["lost"].items():
         yield f"  lost: {count} {reason}"
+    if made["causes"]:
+        yield ""
+        yield "Probable causes"
+    for cause in made["causes"]:
+        yield from _wrapped(f"{cause['name']}: {cause['saw']} (by chance: {cause['chance']:.1g})")
+        yield from textwrap.wrap(f"try: {cause['advice']}", _WIDTH, initial_indent="    ")
     yield ""
     yield "Limits"
     yield f"  {'figure':<40} {'value':>11}  {'bounds':<22} decision"
