@@ -61,13 +61,16 @@ class Watched:
 
     def scroll_through(self):
         """Bring each figure into sight: they are drawn when they come near."""
-        height = self.page.evaluate("document.documentElement.scrollHeight")
-        for y in range(0, height, 500):
-            self.page.evaluate(f"scrollTo(0, {y})")
-            self.page.wait_for_timeout(30)
-        self.page.wait_for_function(
-            "[...document.querySelectorAll('[data-plot]')].every((c) => c.data)"
-        )
+        count = self.page.locator("[data-plot]").count()
+        for i in range(count):
+            canvas = f"document.querySelectorAll('[data-plot]')[{i}]"
+            self.page.evaluate(f"{canvas}.scrollIntoView()")
+            for _ in range(200):  # the page forbids the eval that the driver's own waiting needs
+                if self.page.evaluate(f"Boolean({canvas}.data)"):
+                    break
+                self.page.wait_for_timeout(50)
+            else:
+                raise AssertionError(f"figure {i} was not drawn within 10 s")
 
 
 @pytest.fixture(scope="session")

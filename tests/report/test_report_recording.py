@@ -96,6 +96,7 @@ def test_a_frame_is_picked_by_keyboard_and_by_click(browser, recording_page, res
     page = watched.page
     watched.open(recording_page)
     watched.scroll_through()
+    page.evaluate("document.getElementById('one').scrollIntoView()")
     page.focus("#frame")
     page.fill("#frame", "7")
     page.keyboard.press("Enter")

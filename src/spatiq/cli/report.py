@@ -7,7 +7,7 @@ from typing import Annotated
 
 import typer
 
-ENDING = ".spatiq.h5"
+_MOST_TOLD = 5
 
 
 def report_command(
@@ -17,7 +17,7 @@ def report_command(
     out: Annotated[
         Path | None,
         typer.Option(
-            help="The page (for a night: a folder).", show_default="beside the source, .html"
+            help="The page.", show_default="NAME.html beside it; night.html in a night's folder"
         ),
     ] = None,
     inline: Annotated[
@@ -34,5 +34,8 @@ def report_command(
     need("report", "jinja2", "plotly")
     from spatiq.report.writing import write_report
 
-    for path in write_report(source, out, inline=inline, overwrite=overwrite):
+    written = write_report(source, out, inline=inline, overwrite=overwrite)
+    for path in written[:_MOST_TOLD]:
         typer.echo(f"written: {path}")
+    if len(written) > _MOST_TOLD:
+        typer.echo(f"and {len(written) - _MOST_TOLD} more, beside it")

@@ -68,12 +68,13 @@ def _own(name: str) -> Markup:
     return Markup((files("spatiq.report") / "templates" / name).read_text(encoding="utf-8"))
 
 
-def page(sheet: Sheet, *, inline: bool) -> str:
+def page(sheet: Sheet, *, inline: bool, up: str = "") -> str:
     """The page's text.
 
     Args:
         sheet: what it shows.
         inline: put the drawing library's script (5 MB) into the page instead of beside it.
+        up: where the script lies, seen from the page: "" or "../".
     """
     data = {"plots": [drawing(p) for p in sheet.plots if p.panels], "frames": sheet.frames}
     return (
@@ -85,13 +86,15 @@ def page(sheet: Sheet, *, inline: bool) -> str:
             style=_own("sheet.css"),
             script=_own("sheet.js"),
             library=Markup(library_text().replace("</script", "<\\/script")) if inline else "",
-            library_name=library_name(),
+            library_name=up + library_name(),
             caution=_CAUTION,
         )
     )
 
 
-def write_page(sheet: Sheet, path: Path, *, inline: bool, overwrite: bool = False) -> list[Path]:
+def write_page(
+    sheet: Sheet, path: Path, *, inline: bool, overwrite: bool = False, up: str = ""
+) -> list[Path]:
     """Write a page, and the library beside it where it is not inlined and not there yet.
 
     Returns:
@@ -102,11 +105,11 @@ def write_page(sheet: Sheet, path: Path, *, inline: bool, overwrite: bool = Fals
     """
     check_target(path, overwrite=overwrite)
     written = []
-    beside = path.parent / library_name()
+    beside = path.parent / up / library_name()
     if not inline and not beside.exists():
         with whole_file(beside) as partial:
             partial.write_text(library_text(), encoding="utf-8")
         written.append(beside)
     with whole_file(path, overwrite=overwrite) as partial:
-        partial.write_text(page(sheet, inline=inline), encoding="utf-8")
+        partial.write_text(page(sheet, inline=inline, up=up), encoding="utf-8")
     return [path, *written]

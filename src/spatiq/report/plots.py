@@ -34,6 +34,7 @@ class Series:
         low, high: ends of each value's interval, or empty.
         frames: index of the frame behind each value, or empty.
         labels: a text beside each point, or empty.
+        hints: a text of each value, shown when it is pointed at, or empty.
         weights: counts of "density", or empty.
         hue: which of the plot's colours; equal names share one.
     """
@@ -46,6 +47,7 @@ class Series:
     high: ArrayLike = ()
     frames: ArrayLike = ()
     labels: Sequence[str] = ()
+    hints: Sequence[str] = ()
     weights: ArrayLike = ()
     hue: int = 0
 
@@ -129,7 +131,7 @@ def _series(series: Series) -> dict[str, Any]:
         for name in ("x", "y", "low", "high", "frames", "weights")
         if np.size(getattr(series, name))
     }
-    labels = {"labels": list(series.labels)} if series.labels else {}
+    labels = {n: list(t) for n in ("labels", "hints") if (t := getattr(series, n))}
     return {"name": series.name, "kind": series.kind, "hue": series.hue, **lists, **labels}
 
 
@@ -139,6 +141,9 @@ def _panel(panel: Panel) -> dict[str, Any]:
         for name in ("title", "x_title", "y_title", "log_x", "log_y", "square", "reach", "dates")
     }
     told["series"] = [_series(s) for s in panel.series]
+    for series, drawn in zip(panel.series, told["series"], strict=True):
+        if panel.dates:  # milliseconds since 1970 have more digits than a figure
+            drawn["x"] = np.asarray(series.x).tolist()
     told["x_names"], told["y_names"] = list(panel.x_names), list(panel.y_names)
     told["links"] = [rounded(link) for link in panel.links]
     if panel.matrix is not None:

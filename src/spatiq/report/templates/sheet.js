@@ -18,6 +18,10 @@
     return colour(`--h${index % 8}`);
   }
 
+  function plain(text) {
+    return text.replaceAll("&", "&amp;").replaceAll("<", "&lt;").replaceAll(">", "&gt;");
+  }
+
   function trace(series, panel, id) {
     const tone = hue(series.hue);
     const out = {
@@ -44,6 +48,11 @@
     }
     if (series.labels) {
       Object.assign(out, { mode: "markers+text", text: series.labels, textposition: "top center", textfont: { size: 10 } });
+    }
+    if (series.hints) {
+      // Named by %{text}: hover text would take markup for what it is, so it is defused.
+      out.text = series.hints.map(plain);
+      out.hovertemplate = "%{text}<br>%{x}, %{y}<extra></extra>";
     }
     if (series.low && series.high) {
       out.error_y = {
