@@ -23,6 +23,7 @@ from spatiq.receiver.detection import maximum_likelihood
 from spatiq.recording.writing import write_recording
 from spatiq.transmit.genie import genie_symbols
 from spatiq.transmit.simulation import SimulatedCapture, simulate
+from spatiq.transmit.transmitter_faults import Permuted
 
 FOLDER = Path(__file__).resolve().parent.parent / "captures_demo"
 STARTED = "2026-03-14T22:40:00Z"
@@ -153,6 +154,30 @@ def twins() -> None:
     expect("hook_twins", "antennas 2 and 3 are easily confused, 17 dB", figures)
 
 
+def crossed() -> None:
+    """A prototype's fault: cables of antennas 1 and 2 are crossed, for the payload's switch only."""
+    link = load_link(FOLDER / "hook_crossed.link.toml")
+    rng = np.random.default_rng(43)
+    signature = np.exp(2j * np.pi * rng.random((2, 4)))
+    signature[1] = signature[0] * np.exp(1j * np.pi * np.array([0.1, 0.6, 1.15, 1.6]))
+    capture = simulate(
+        link,
+        receive_channels=2,
+        channels=signature,
+        snr_db=23.0,
+        sample_rate=1.953125e6,
+        frames=24,
+        reference_ppm=0.8,
+        seed=20260317,
+        datatype="ci16_le",
+        faults=[Permuted((0, 2, 1, 3))],
+    )
+    write("hook_crossed", capture, capture.samples(), carrier_hz=2.31e9, datetime=STARTED)
+    figures = from_truth(capture)
+    del figures["evm.percent"]  # against the symbols expected: not those that were sent
+    expect("hook_crossed", "antennas 1 and 2 crossed in the payload: see spatiq verify", figures)
+
+
 def keys() -> None:
     """No reference bits, a CRC in each frame, samples lost half way (known from the metadata)."""
     link = load_link(FOLDER / "gantry_keys.link.toml")
@@ -197,6 +222,7 @@ def keys() -> None:
 if __name__ == "__main__":
     yard()
     twins()
+    crossed()
     keys()
     for path in sorted(FOLDER.glob("*.sigmf-data")):
         print(f"{path.name:<28} {path.stat().st_size / 1e6:.2f} MB")

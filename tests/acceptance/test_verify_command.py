@@ -128,3 +128,18 @@ def test_other_refusals(capture: Path, tmp_path: Path) -> None:
 def test_manual_and_starter_are_true() -> None:
     assert MANUAL.read_text(encoding="utf-8") == manual()
     assert load_limits(STARTER).name == "starter limits"
+
+
+def test_demo_of_crossed_cables() -> None:
+    """Made with antennas 1 and 2 exchanged in the payload (tools/make_demo.py)."""
+    demo = Path(__file__).parents[2] / "captures_demo"
+    code, out, _ = _run(
+        demo / "hook_crossed.sigmf-meta",
+        demo / "hook_crossed.link.toml",
+        demo / "hook.limits.toml",
+        "--setup",
+        "combined",
+    )
+    assert code == 1
+    assert out.startswith("Transmitter NOT ACCEPTED")
+    assert "permuted between pilots and payload: 1 sent by 2, 2 sent by 1" in out
