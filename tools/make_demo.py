@@ -155,7 +155,7 @@ def twins() -> None:
 
 
 def crossed() -> None:
-    """A prototype's fault: cables of antennas 1 and 2 are crossed, for the payload's switch only."""
+    """A prototype's fault: antennas 1 and 2 are crossed, in the payload only."""
     link = load_link(FOLDER / "hook_crossed.link.toml")
     rng = np.random.default_rng(43)
     signature = np.exp(2j * np.pi * rng.random((2, 4)))
