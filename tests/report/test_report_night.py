@@ -83,6 +83,10 @@ def test_no_serious_fault_of_accessibility(browser, night):
     watched.scroll_through()
     found = Axe().run(watched.page).response["violations"]
     assert [v["id"] for v in found if v["impact"] in ("serious", "critical")] == []
+    # A deliberate fault is seen: the check can fail.
+    watched.page.evaluate("document.querySelector('h1').style.color = 'var(--band)'")
+    found = Axe().run(watched.page).response["violations"]
+    assert "color-contrast" in [v["id"] for v in found]
 
 
 def test_a_thousand_recordings_still_weigh_little(browser, night, tmp_path):
