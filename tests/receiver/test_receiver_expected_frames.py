@@ -36,8 +36,19 @@ def test_frames_between_two_are_spread_evenly():
 @pytest.mark.nojit
 def test_neighbours_have_nothing_between_them():
     (one,) = segments((100_000, 0))
-    for distance in (1000.0, 1400.0, 600.0, 400.0):
+    for distance in (1000.0, 1050.0, 600.0, 400.0, 20.0):
         assert lost_between([one], seen(one, 0.0), seen(one, distance), 1000.0, SPAN) == []
+
+
+@pytest.mark.nojit
+@given(missing=st.integers(0, 20), lost=st.floats(0, 930))
+def test_samples_lost_untold_hide_no_frame(missing, lost):
+    """Losing samples brings frames nearer: what is missing is counted up to 15/16 of a period."""
+    (one,) = segments((100_000, 0))
+    end = (missing + 1) * 1000.0 - lost
+    listed = lost_between([one], seen(one, 0.0), seen(one, end), 1000.0, SPAN)
+    assert len(listed) == missing
+    assert all(0 < f.start_sample < end for f in listed)
 
 
 @pytest.mark.nojit

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -9,6 +10,8 @@ from spatiq.receiver.frame_batch import NOT_FOUND, LostFrame
 from spatiq.recording.placement import Segment
 
 _MOST_LISTED = 1_000_000  # a wrong period must not fill the memory
+_LATE = 1 / 16  # of a period: what frames may come late by without one between them being missed
+_DRIFT = 1e-4  # of the time passed, for the clocks
 
 
 @dataclass(frozen=True)
@@ -29,6 +32,10 @@ def lost_between(
 ) -> list[LostFrame]:
     """Frames expected after `before` and ahead of `after`, in order of time, with reasons.
 
+    Samples lost untold bring frames nearer to each other, never further apart: a distance between
+    two multiples of the period stands for the larger one. A frame may come late all the same: by
+    `_LATE` of a period, and by `_DRIFT` of the time passed.
+
     Args:
         segments: of the recording.
         before, after: frames seen, one after the other.
@@ -36,9 +43,12 @@ def lost_between(
         span: first and last symbol sent, in samples from the frame's start.
     """
     distance = after.global_position - before.global_position
-    steps = round(distance / period)
+    count = distance / period
+    steps = math.ceil(count - min(_LATE + _DRIFT * count, 0.5))
     numbers = range(1, min(steps, _MOST_LISTED))
     each = distance / max(steps, 1)
+    if each < period * (1.0 - _LATE):
+        each = period  # where samples were lost, nobody knows: frames stand where they should
     return [_lost(segments, before.global_position + n * each, span) for n in numbers]
 
 

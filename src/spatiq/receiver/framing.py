@@ -39,6 +39,7 @@ from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
 from spatiq.receiver.spoiled_samples import SpoiledSamples
 from spatiq.receiver.stretches import Find, Place, Stretch, WholeRecording
+from spatiq.receiver.sync_likeness import repeats_sync
 from spatiq.recording.placement import Segment
 from spatiq.recording.recording import Recording
 
@@ -119,6 +120,11 @@ class Framing:
         self._tables = tables
         self._pattern = pattern
         self._geometry = frame_geometry(link, bank, options)
+        self._searched_inside = (
+            link.period_symbols is not None
+            and not pattern.ambiguous
+            and not repeats_sync(link, pattern)
+        )
         self._clip = clip_levels(recording)
         survey = survey or Survey(np.zeros(recording.channels, np.complex128))
         inverted = options.spectrum == "inverted"
@@ -210,7 +216,7 @@ class Framing:
             lead += int(np.ceil(band.reach / self._geometry.samples_per_symbol))
         place, begin = self._stretch.begin(segment)
         if place.last is not None:
-            place = Place(segment.index, self._resume(place.last), place.last)
+            place = self._after(segment, place.last)
         if begin is None:
             begin = first_needed(segment, place.lag, self._bank, self._pattern, lead)
         stream = self._stream(segment, begin)
@@ -231,7 +237,7 @@ class Framing:
             else:
                 yield (found, samples), start
             self._stretch.see(Find(segment.index, found, place.lag, crossed, not reason))
-            place = Place(segment.index, self._resume(found), found)
+            place = self._after(segment, found)
             search.release(place.lag)
 
     def _stream(self, segment: Segment, begin: int) -> SampleStream:
@@ -245,11 +251,19 @@ class Framing:
             blocks, segment.start, segment.stop, channels, self._spoiled, self._on_read, begin
         )
 
-    def _resume(self, found: Detection) -> int:
-        """Lag at which the search goes on after a frame."""
-        drift = int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
-        drift += skew(self._geometry.samples_per_symbol)
-        return found.lag + LAGS_PER_SYMBOL * max(self._geometry.length - drift, 1)
+    def _after(self, segment: Segment, found: Detection) -> Place:
+        """Where the search goes on after a frame: it depends on this frame alone.
+
+        Where a period says when the next one comes, and it does not come, something is amiss: it
+        may come earlier by all the samples that were lost, so that the search goes on right behind
+        the sync section. Otherwise a frame is taken to be as long as it should.
+        """
+        skipped = self._pattern.length
+        if not self._searched_inside:
+            drift = int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
+            drift += skew(self._geometry.samples_per_symbol)
+            skipped = max(self._geometry.length - drift, 1)
+        return Place(segment.index, found.lag + LAGS_PER_SYMBOL * skipped, found)
 
     def _expected(self, search: FrameSearch, last: Detection | None) -> Detection | None:
         """A frame where one is expected after the last one; None when there is none.
