@@ -19,6 +19,7 @@ LINK = make_link(sections=TEXT, frame=f"period_symbols = {LENGTH + 40.5}")
 PERIOD = (LENGTH + 40.5) * SPS
 CHOICES = {"receive_channels": 2, "snr_db": 18.0, "samples_per_symbol": SPS, "spacing": "link"}
 HEADER = 63 + 2 * 16
+CHANNEL = np.array([[1.0, 0.5j], [-0.4 + 0.3j, 1.1]])
 
 
 def without(samples, gaps):
@@ -78,49 +79,71 @@ def test_a_loss_above_half_a_period_hides_no_frame(tmp_path, share):
 
 
 def mix(rng, starts, samples):
-    """Random faults, each in frames of its own: (samples, silent losses, frames touched)."""
+    """Random faults at random frames: samples, losses (first, count, told), frames touched."""
     samples = samples.copy()
-    victims = rng.permutation(np.arange(1, starts.size - 2))[:4]
-    kinds = rng.choice(["lost", "dead", "gain", "noise"], 4)
     gaps, touched = [], set()
-    for frame, kind in zip(victims, kinds, strict=True):
+    for frame in np.sort(rng.permutation(np.arange(2, starts.size - 3))[:4]):
+        kind = rng.choice(["untold", "told", "dead", "gain", "noise"])
         first = int(starts[frame] + rng.uniform(-0.1, 0.9) * LENGTH * SPS)
         count = int(rng.uniform(10, 0.8 * PERIOD))
+        if kind in ("untold", "told"):
+            if gaps and first <= gaps[-1][0] + gaps[-1][1]:
+                continue
+            count = min(count, int(0.45 * PERIOD))
+            gaps.append((first, count, kind == "told"))
         stretch = slice(first, first + count)
-        if kind == "lost":
-            gaps.append((first, min(count, int(0.45 * PERIOD))))
-        elif kind == "dead":
+        if kind == "dead":
             samples[:, stretch] = 0
         elif kind == "gain":
             samples[:, stretch] *= 10 ** (rng.uniform(-10, 10) / 20)
-        else:
+        elif kind == "noise":
             level = np.sqrt(np.mean(np.abs(samples) ** 2)) * 3
             shape = samples[:, stretch].shape
-            samples[:, stretch] += level * (
-                rng.standard_normal(shape) + 1j * rng.standard_normal(shape)
-            )
-        reach = (first + np.array([0, count]) - starts[:, None] + 16 * SPS) / (LENGTH + 32) / SPS
-        touched |= set(np.flatnonzero((reach[:, 1] > 0) & (reach[:, 0] < 1)).tolist())
-    gaps.sort()
-    return samples, [g for i, g in enumerate(gaps) if not i or g[0] >= sum(gaps[i - 1])], touched
+            noise = rng.standard_normal(shape) + 1j * rng.standard_normal(shape)
+            samples[:, stretch] += level * noise
+        begin, end = starts - 16 * SPS, starts + (LENGTH + 16) * SPS
+        touched |= set(np.flatnonzero((begin < first + count) & (end > first)).tolist())
+    return samples, gaps, touched
 
 
-@pytest.mark.parametrize("seed", range(10))
+def captures_of(gaps):
+    """Capture segments of a recorder that knows of the losses told only."""
+    captures, gone, known = [{"core:sample_start": 0, "core:global_index": 0}], 0, 0
+    for first, count, told in gaps:
+        gone += count
+        if told:
+            known += count
+            at = first + count - gone
+            captures.append({"core:sample_start": at, "core:global_index": at + known})
+    return captures
+
+
+@pytest.mark.parametrize("seed", range(12))
 def test_mixed_faults_leave_no_frame_unlisted(tmp_path, seed):
-    """Losses, dead stretches, gain steps, bursts: found and listed add up to what was sent, nothing
-    is found twice, and frames that no fault touches have the words of the clean recording."""
-    recording, capture = record(tmp_path, LINK, frames=14, seed=6 + seed, **CHOICES)
+    """Losses untold and told, dead stretches, gain steps, bursts; every other time, both ends cut.
+
+    Found and listed add up to what was sent, nothing is found twice, and frames that no fault
+    touches have the words of the clean recording. The channel stands still: whether a frame whose
+    sync section lies outside was sent is told by its neighbour's power.
+    """
+    choices = {**CHOICES, "channels": CHANNEL, "frames": 14, "seed": 6 + seed}
+    recording, capture = record(tmp_path, LINK, **choices)
     clean = collect(recording, LINK)
     starts = capture.truth.starts
     assert clean.start.size == 14
     samples, gaps, touched = mix(np.random.default_rng(seed), starts, capture.samples())
-    recording, _ = record(
-        tmp_path, LINK, lambda _: without(samples, gaps), frames=14, seed=6 + seed, **CHOICES
-    )
+    if seed % 2:
+        begin, end = int(starts[0] + 120 * SPS), int(starts[-1] + 120 * SPS)
+        samples = samples[:, begin:end]
+        gaps = [(first - begin, count, told) for first, count, told in gaps]
+        starts = starts - begin
+        touched |= {0, 13}
+    runs = np.array([gap[:2] for gap in gaps], np.int64).reshape(-1, 2)
+    kept = without(samples, runs)
+    recording, _ = record(tmp_path, LINK, lambda _: kept, captures_of(gaps), **choices)
     frames = collect(recording, LINK)
-    gaps = np.array(gaps, np.int64).reshape(-1, 2)
-    which = found_frames(frames, recorded_starts(starts, gaps))
-    assert len(which) + len(frames.lost) == 14
+    which = found_frames(frames, recorded_starts(starts, runs))
+    assert len(which) + len(frames.lost) == 14, [(f.reason, f.start_sample) for f in frames.lost]
     assert all(f.reason for f in frames.lost)
     assert set(which) >= set(range(14)) - touched
     for row, frame in enumerate(which):

@@ -1,6 +1,7 @@
 """Samples that a recorder lost without saying so, inside frames: found, sized, and not counted.
 
-Sizes: 1 to 1000 samples in frames of 927 symbol periods. False alarms: see the evidence's tests.
+Sizes: 1 to 1000 samples in frames of 927 symbol periods. False alarms:
+test_receiver_continuity_evidence.py.
 """
 
 from __future__ import annotations
