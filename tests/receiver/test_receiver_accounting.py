@@ -9,7 +9,7 @@ from receiver_cases import IN_TURN, SYNC, make_link, payload_section
 
 from spatiq.receiver.frame_search import sync_pattern
 from spatiq.receiver.options import ReceiverOptions
-from spatiq.receiver.sync_likeness import repeats_sync
+from spatiq.receiver.sync_likeness import likeness_ends
 from spatiq.transmit.losses import recorded_index
 
 SPS = 4.0
@@ -155,5 +155,6 @@ def test_mixed_faults_leave_no_frame_unlisted(tmp_path, seed):
 def test_known_symbols_like_the_sync_section_are_noticed():
     options = ReceiverOptions(cfo_range=0.02)
     again = make_link(sections=TEXT + SYNC + payload_section(50))
-    for link, alike in ((LINK, False), (again, True)):
-        assert repeats_sync(link, sync_pattern(link, options, 2)) is alike
+    for link, ends in ((LINK, 63), (again, LENGTH)):
+        found = likeness_ends(link, sync_pattern(link, options, 2))
+        assert ends <= found <= ends + 63

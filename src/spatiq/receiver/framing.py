@@ -39,7 +39,7 @@ from spatiq.receiver.options import ReceiverOptions
 from spatiq.receiver.sample_stream import SampleStream
 from spatiq.receiver.spoiled_samples import SpoiledSamples
 from spatiq.receiver.stretches import Find, Place, Stretch, WholeRecording
-from spatiq.receiver.sync_likeness import repeats_sync
+from spatiq.receiver.sync_likeness import likeness_ends
 from spatiq.recording.placement import Segment
 from spatiq.recording.recording import Recording
 
@@ -120,11 +120,7 @@ class Framing:
         self._tables = tables
         self._pattern = pattern
         self._geometry = frame_geometry(link, bank, options)
-        self._searched_inside = (
-            link.period_symbols is not None
-            and not pattern.ambiguous
-            and not repeats_sync(link, pattern)
-        )
+        self._skipped = self._searched_from()
         self._clip = clip_levels(recording)
         survey = survey or Survey(np.zeros(recording.channels, np.complex128))
         inverted = options.spectrum == "inverted"
@@ -252,18 +248,22 @@ class Framing:
         )
 
     def _after(self, segment: Segment, found: Detection) -> Place:
-        """Where the search goes on after a frame: it depends on this frame alone.
+        """Where the search goes on after a frame: it depends on this frame alone."""
+        return Place(segment.index, found.lag + LAGS_PER_SYMBOL * self._skipped, found)
+
+    def _searched_from(self) -> int:
+        """Symbol periods behind a sync section's start at which the search goes on.
 
         Where a period says when the next one comes, and it does not come, something is amiss: it
-        may come earlier by all the samples that were lost, so that the search goes on right behind
-        the sync section. Otherwise a frame is taken to be as long as it should.
+        may come earlier by all the samples that were lost, so that the search goes on behind the
+        last known symbols like the sync section. Otherwise a frame is as long as it should be.
         """
-        skipped = self._pattern.length
-        if not self._searched_inside:
-            drift = int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
-            drift += skew(self._geometry.samples_per_symbol)
-            skipped = max(self._geometry.length - drift, 1)
-        return Place(segment.index, found.lag + LAGS_PER_SYMBOL * skipped, found)
+        drift = int(np.ceil(self._geometry.length * self._options.max_clock_ppm * 1e-6))
+        drift += skew(self._geometry.samples_per_symbol)
+        whole = max(self._geometry.length - drift, 1)
+        if self._link.period_symbols is None or self._pattern.ambiguous:
+            return whole
+        return min(likeness_ends(self._link, self._pattern), whole)
 
     def _expected(self, search: FrameSearch, last: Detection | None) -> Detection | None:
         """A frame where one is expected after the last one; None when there is none.

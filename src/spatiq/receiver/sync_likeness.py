@@ -1,4 +1,4 @@
-"""Whether a frame holds another stretch of known symbols that may pass for its sync section."""
+"""Where in a frame known symbols end that may pass for its sync section."""
 
 from __future__ import annotations
 
@@ -8,8 +8,8 @@ from spatiq.link.description import Link
 from spatiq.receiver.frame_search import SyncPattern
 
 
-def repeats_sync(link: Link, pattern: SyncPattern) -> bool:
-    """Whether a search that begins behind the sync section may stop at known symbols instead.
+def likeness_ends(link: Link, pattern: SyncPattern) -> int:
+    """Periods from the sync section's start from which on a search meets nothing of its likeness.
 
     A stretch as long as the section, at least half of it known, is taken for alike when, for some
     channel and carrier offset searched, more than half the search's threshold of its energy lies in
@@ -19,6 +19,9 @@ def repeats_sync(link: Link, pattern: SyncPattern) -> bool:
     Args:
         link: link description.
         pattern: what is searched for.
+
+    Returns:
+        N where nothing behind the section is alike.
     """
     n, known = pattern.length, link.layout.known
     padded = np.concatenate([known, np.zeros((n, known.shape[1]))])
@@ -27,7 +30,8 @@ def repeats_sync(link: Link, pattern: SyncPattern) -> bool:
     share = (sent[begins + n] - sent[begins]) / n
     begins, share = begins[share >= 0.5], share[share >= 0.5]
     if not begins.size:
-        return False
+        return n
+    alike = np.zeros(begins.size, np.bool_)
     stretches = padded[begins[:, None] + np.arange(n)]  # (n_begins, N, Nt)
     left, values, _ = np.linalg.svd(stretches, full_matrices=False)
     left = left * (values > 1e-6 * values[:, :1])[:, None, :]
@@ -38,6 +42,5 @@ def repeats_sync(link: Link, pattern: SyncPattern) -> bool:
             inside = np.sum(np.abs(products[:, 0]) ** 2, axis=1)
         else:
             inside = np.linalg.svd(products, compute_uv=False)[:, 0] ** 2
-        if np.any(inside * share > pattern.threshold / 2):
-            return True
-    return False
+        alike |= inside * share > pattern.threshold / 2
+    return int(begins[alike][-1]) - link.layout.sync.start + 1 if alike.any() else n
