@@ -44,8 +44,8 @@ _BEYOND = 128  # periods behind a part that no longer fits that the search looks
 _HOLDS = 64  # periods by which the fitted part must grow between two breaks
 _SHARP = 2.0  # periods within which silence sets in: no channel fades like that
 _CLEAR = 3  # periods ahead of a break that are not held to be whole
-# Radians. Two rounds of refit leave up to some 0.04 between pilots that 64 antennas send in turn and
-# the payload.
+# Radians. Two rounds of refit leave up to some 0.04 between pilots that 64 antennas send in turn
+# and the payload.
 _TURN = 0.08
 _TOLD = 1.0  # dB by which noise must change to be told
 
