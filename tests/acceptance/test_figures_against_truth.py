@@ -1,7 +1,7 @@
 """Figures against what the simulation made, and whether their intervals hold it.
 
 Each figure is measured in `SEEDS` independent recordings. An interval of true level 95 % is missed
-in more than 6 of 16 recordings with a probability of 6e-6 (binomial); tools/ has the long campaign.
+in more than 6 of 16 recordings with a probability of 6e-6 (binomial).
 Bias: the mean error over the recordings must not exceed a third of the mean half-width by more than
 chance allows: half-widths are about 2.2 standard errors, so a third is 0.73 of them; the mean of 16
 errors has a standard error of 0.25 of them, so that an unbiased figure fails with 0.3 %: seeds are

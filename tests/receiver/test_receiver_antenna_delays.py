@@ -189,8 +189,8 @@ CASES = {
 @pytest.mark.parametrize("case", CASES)
 def test_errors_are_nearly_those_of_a_genie(tmp_path, case):
     """At most 15 % more wrong bits than a genie with the same detector, plus four times the root of
-    their number; at small delays than one told its neighbours, too. At large ones that one cannot
-    be reached by any receiver: sequences lie nearer to each other than single words do."""
+    their number; at small delays than one told its neighbours, too. At large ones that one is no
+    fair bound: sequences lie nearer to each other than single words do."""
     delays, channels, snr, told_limit = CASES[case]
     link = link_of(antennas=len(delays))
     recording, capture = record(
