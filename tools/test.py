@@ -19,6 +19,9 @@ _NOTHING_SELECTED = 5  # pytest's exit code
 
 def main(arguments: list[str]) -> int:
     python = prepare()
+    # Matrices are small here: threads of the linear algebra library only get in each other's way.
+    os.environ.setdefault("OMP_NUM_THREADS", "1")
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     say("Tests, whole suite:")
     pytest = [python, "-m", "pytest", *arguments]
     whole = subprocess.run(pytest, cwd=REPOSITORY, check=False).returncode

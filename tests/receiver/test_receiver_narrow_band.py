@@ -115,13 +115,13 @@ def test_errors_under_narrow_band_noise_beside_a_genie_that_knows_its_covariance
     }  # fmt: skip
     noise = NarrowBandNoise(1.3e5, width, level)
     recording, capture = record(tmp_path, link, arriving=(noise,), **choices)
-    frames = collect(recording, link)
+    frames = collect(recording, link, ReceiverOptions(narrow_band=True))
     f = partner(frames, capture)
     assert f.size == 20
     words = capture.truth.words()[f]
     best = bit_errors(link, genie_words(link, capture, simulate(link, **choices), width)[f], words)
     assert bit_errors(link, frames.words, words) < factor * best + 4 * np.sqrt(best)
-    (measured,) = measure(recording, link)
+    (measured,) = measure(recording, link, ReceiverOptions(narrow_band=True))
     assert np.all(measured.columns["marks"] & Mark.INTERFERER)
     assert np.all(np.abs(measured.columns["interferer_hz"] - 1.3e5) < width / 2 + 2e3)
     power = measured.receive.sample_power * 10 ** (measured.columns["interferer_db"] / 10)
@@ -136,7 +136,7 @@ def test_narrow_band_noise_is_told_from_lines_and_from_the_signal(tmp_path):
             tmp_path, link, arriving=arriving, receive_channels=1, frames=40, seed=4,
             snr_db=20.0, **BASE,
         )  # fmt: skip
-        assert chain_parts(recording, link, ReceiverOptions()).survey.band is None
+        assert chain_parts(recording, link, ReceiverOptions(narrow_band=True)).survey.band is None
 
 
 def test_the_result_does_not_depend_on_block_size_where_a_band_is_excised(tmp_path):
@@ -145,9 +145,9 @@ def test_the_result_does_not_depend_on_block_size_where_a_band_is_excised(tmp_pa
         tmp_path, link, arriving=(NarrowBandNoise(9e4, 2e3, 0.0),), receive_channels=2,
         snr_db=20.0, frames=12, seed=5, **BASE,
     )  # fmt: skip
-    assert chain_parts(recording, link, ReceiverOptions()).survey.band is not None
-    whole = collect(recording, link)
+    assert chain_parts(recording, link, ReceiverOptions(narrow_band=True)).survey.band is not None
+    whole = collect(recording, link, ReceiverOptions(narrow_band=True))
     for size in (4096, 1 << 16):
-        other = collect(recording, link, ReceiverOptions(block_size=size))
+        other = collect(recording, link, ReceiverOptions(narrow_band=True, block_size=size))
         for name in FIGURES:
             np.testing.assert_array_equal(whole.columns[name], other.columns[name])

@@ -6,14 +6,9 @@ from pathlib import Path
 
 import pytest
 from playwright.sync_api import sync_playwright
-from report_cases import run_spatiq
+from report_cases import DEMO, HOSTILE, HOSTILE_FILE, run_spatiq
 
-DEMO = Path(__file__).resolve().parents[2] / "captures_demo" / "hook_yard.link.toml"
 CHROMIUM = shutil.which("chromium") or shutil.which("chromium-browser")
-
-# Becomes markup, a request or a running script wherever it is not escaped.
-HOSTILE = "</script><script>window.hit=1</script><img src=x onerror=window.hit=2>&amp;"
-HOSTILE_FILE = "run <img src=x onerror=window.hit=3>"
 
 
 def pytest_collection_modifyitems(items):

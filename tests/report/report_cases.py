@@ -1,12 +1,19 @@
 """What the tests of pages share."""
 
 import shutil
+from pathlib import Path
 
 import h5py
 import numpy as np
 from typer.testing import CliRunner
 
 from spatiq.cli.main import app
+
+DEMO = Path(__file__).resolve().parents[2] / "captures_demo" / "hook_yard.link.toml"
+
+# Becomes markup, a request or a running script wherever it is not escaped.
+HOSTILE = "</script><script>window.hit=1</script><img src=x onerror=window.hit=2>&amp;"
+HOSTILE_FILE = "run <img src=x onerror=window.hit=3>"
 
 
 def run_spatiq(*arguments, code=0):

@@ -5,8 +5,7 @@ import json
 import numpy as np
 import pytest
 from axe_playwright_python.sync_playwright import Axe
-from conftest import DEMO, HOSTILE, HOSTILE_FILE
-from report_cases import run_spatiq
+from report_cases import DEMO, HOSTILE, HOSTILE_FILE, run_spatiq
 
 from spatiq.batch.catalogue import open_catalogue
 from spatiq.report.page import library_name

@@ -5,8 +5,7 @@ import re
 import numpy as np
 import pytest
 from axe_playwright_python.sync_playwright import Axe
-from conftest import HOSTILE, HOSTILE_FILE
-from report_cases import repeated, run_spatiq
+from report_cases import HOSTILE, HOSTILE_FILE, repeated, run_spatiq
 
 from spatiq.report.thinning import MOST_DRAWN
 from spatiq.results.reader import open_results

@@ -172,11 +172,13 @@ IMPAIRMENTS: dict[str, Impairment] = {
         scenario={"arriving": (NarrowBandNoise(0.13 * RATE, 0.02 * RATE, 0.0),)},
         whiten=True,
         snr_db=20.0,
+        options={"narrow_band": True},
     ),
     "narrow-band noise +10 dB, 0.02/T wide, 2 channels": Impairment(
         scenario={"arriving": (NarrowBandNoise(0.13 * RATE, 0.02 * RATE, 10.0),)},
         whiten=True,
         snr_db=20.0,
+        options={"narrow_band": True},
     ),
     # Without the noise the genie has some 2.5 dB that no receiver can have (Kolmogorov's bound).
     "narrow-band noise 0 dB, 0.002/T wide, 1 channel, 20 dB in each frame": Impairment(
@@ -188,6 +190,7 @@ IMPAIRMENTS: dict[str, Impairment] = {
         clean_is="the same capture without it",
         receivers=1,
         snr_db=20.0,
+        options={"narrow_band": True},
     ),
     "narrow-band noise -15 dB, 0.02/T wide, 1 channel, 16 dB in each frame": Impairment(
         scenario={
@@ -197,6 +200,7 @@ IMPAIRMENTS: dict[str, Impairment] = {
         receivers=1,
         snr_db=16.0,
         lossy=True,
+        options={"narrow_band": True},
     ),
     "coloured noise, pole 0.9": Impairment(
         scenario={"noise_shape": NoiseShape(feedback=(-0.9,))}, snr_db=20.0

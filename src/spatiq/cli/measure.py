@@ -60,6 +60,10 @@ _Spectrum = Annotated[
         help="Whether samples are conjugated; auto: when the frames say so.",
     ),
 ]
+_NarrowBand = Annotated[
+    bool,
+    typer.Option("--narrow-band", help="Look for narrow-band noise in the band and take it out."),
+]
 _TwoStep = Annotated[
     bool, typer.Option("--two-step/--no-two-step", help="Compare with the two-step detector.")
 ]
@@ -129,6 +133,7 @@ def measure_command(
     max_clock_ppm: _Clock = _DEFAULTS.max_clock_ppm,
     phase_noise_hz: _PhaseNoise = _DEFAULTS.phase_noise_hz,
     spectrum: _Spectrum = _DEFAULTS.spectrum,
+    narrow_band: _NarrowBand = _DEFAULTS.narrow_band,
     two_step: _TwoStep = _DEFAULTS.compare_two_step,
     channel: _Channel = _DEFAULTS.channel,
     memory: _Memory = _DEFAULTS.memory,
@@ -155,6 +160,7 @@ def measure_command(
         soft_output=llr,
         max_clock_ppm=max_clock_ppm,
         phase_noise_hz=phase_noise_hz,
+        narrow_band=narrow_band,
         channel=channel,
         memory=memory,
         equaliser=equaliser,

@@ -126,7 +126,7 @@ def chain_parts(recording: Recording, link: Link, options: ReceiverOptions) -> C
             recording,
             link,
             options.cfo_range / samples_per_symbol,
-            flat=not is_dispersive(link, options),
+            narrow_band=options.narrow_band and not is_dispersive(link, options),
         ),
         segments=recording.segments,
     )

@@ -57,7 +57,7 @@ class Survey:
 
 
 def survey_recording(
-    recording: Recording, link: Link, carrier_reach: float, *, flat: bool = True
+    recording: Recording, link: Link, carrier_reach: float, *, narrow_band: bool = False
 ) -> Survey:
     """Look at a recording's blocks.
 
@@ -65,8 +65,8 @@ def survey_recording(
         recording: opened recording.
         link: tells how strong a line the signal itself may have.
         carrier_reach: where that line may lie: +- cycles per sample.
-        flat: whether narrow-band noise is looked for: frames on a dispersive channel are received
-            without regard to it.
+        narrow_band: whether narrow-band noise is looked for: frames on a dispersive channel are
+            received without regard to it.
     """
     blocks = _survey_blocks(recording)
     own = line_share(link)
@@ -74,7 +74,7 @@ def survey_recording(
     steady = blocks - constant[:, None, None].astype(np.complex64) if constant.any() else blocks
     lines = _lines(steady, carrier_reach if own > LITTLE_CARRIER else 0.0)
     band = None
-    if own <= LITTLE_CARRIER and link.codebook.block == 1 and flat:
+    if own <= LITTLE_CARRIER and link.codebook.block == 1 and narrow_band:
         samples_per_symbol = recording.sample_rate / link.symbol_rate_hz
         band = find_narrow_band(steady, link, samples_per_symbol, carrier_reach)
     if band is not None:

@@ -44,6 +44,8 @@ class ReceiverOptions:
             swapped: samples are conjugated), or "auto": measuring looks at both when the first
             frames or their absence speak against the normal one; reception by itself takes it for
             normal.
+        narrow_band: look for narrow-band noise and take it out. Only on request: the signal's own
+            spectrum may pass for such noise in short recordings.
         block_size: samples read at a time; never changes a figure.
     """
 
@@ -62,6 +64,7 @@ class ReceiverOptions:
     equaliser: str = "auto"
     survivors: int = 64
     spectrum: str = "auto"
+    narrow_band: bool = False
 
     def __post_init__(self) -> None:
         """Refuse values outside their range.
