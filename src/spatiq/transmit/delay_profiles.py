@@ -1,7 +1,7 @@
 """Delay profiles of rooms and streets, as tables: delay over rms delay spread, and power.
 
 Source: 3GPP TR 38.901 clause 7.7.2, tapped delay lines TDL-A, TDL-C and TDL-D (from memory; A and C
-agree with several transcriptions, D with two, and the rms delays are checked in the tests). TDL-B
+agree with several published copies, D with two, and the rms delays are checked in the tests). TDL-B
 and TDL-E are left out: no text of theirs could be vouched for.
 """
 
